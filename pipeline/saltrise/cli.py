@@ -1,0 +1,154 @@
+"""The command line: a thin shell over functions of the same names."""
+
+from __future__ import annotations
+
+import signal
+import sys
+from pathlib import Path
+from types import FrameType
+from typing import TYPE_CHECKING
+
+import click
+
+from saltrise import console
+from saltrise.errors import InputError, SaltriseError
+
+if TYPE_CHECKING:
+    from saltrise.settings import Settings
+
+INTERRUPTED, TERMINATED = 130, 143
+
+_RESUME = "the unfinished run is kept beside the output folder; run the same command again"
+
+
+class _Terminated(BaseException):
+    """SIGTERM arrived."""
+
+
+def _terminate(_signal: int, _frame: FrameType | None) -> None:
+    raise _Terminated
+
+
+def main() -> None:
+    """Entry point: run a command and turn its outcome into an exit code."""
+    signal.signal(signal.SIGTERM, _terminate)
+    try:
+        code = commands.main(standalone_mode=False)
+    except InputError as error:
+        console.print_faults(error.faults)
+        code = error.exit_code
+    except SaltriseError as error:
+        console.print_faults((str(error),))
+        code = error.exit_code
+    except click.ClickException as error:
+        error.show()
+        code = error.exit_code
+    except (KeyboardInterrupt, click.Abort):
+        console.print_faults((f"interrupted; {_RESUME}",))
+        code = INTERRUPTED
+    except _Terminated:
+        console.print_faults((f"terminated; {_RESUME}",))
+        code = TERMINATED
+    except MemoryError:
+        console.print_faults(("out of memory; use a smaller run.tile or fewer run.workers",))
+        code = 1
+    sys.exit(code or 0)
+
+
+def _version(context: click.Context, _parameter: click.Parameter, wanted: bool) -> None:
+    if wanted and not context.resilient_parsing:
+        from importlib.metadata import version
+
+        console.print_text(f"saltrise {version('saltrise')}")
+        context.exit()
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"]})
+@click.option(
+    "--version",
+    is_flag=True,
+    expose_value=False,
+    is_eager=True,
+    callback=_version,
+    help="Print the version and exit.",
+)
+def commands() -> None:
+    """Map how much salt shallow groundwater brings to the land surface.
+
+    A region is one TOML file; a run turns it into GeoTIFF hazard layers and zone tables.
+    """
+
+
+_config = click.argument("config", type=click.Path(path_type=Path))
+_quiet = click.option("-q", "--quiet", is_flag=True, help="Print errors only.")
+_verbose = click.option("-v", "--verbose", is_flag=True, help="Print more of what is done.")
+_workers = click.option("--workers", type=click.IntRange(min=1), help="Overrides run.workers.")
+
+
+@commands.command()
+@_config
+@click.option("--force", is_flag=True, help="Replace a finished run in the output folder.")
+@_workers
+@_quiet
+@_verbose
+def run(config: Path, force: bool, workers: int | None, quiet: bool, verbose: bool) -> None:
+    """Compute the layers and zone tables of a region."""
+    from saltrise.run import Silent
+    from saltrise.run import run as run_region
+
+    settings = _settings(config, workers)
+    progress = None if quiet else console.Progress()
+    try:
+        result = run_region(settings, force=force, listener=progress or Silent())
+    finally:
+        if progress:
+            progress.close()
+    if not quiet:
+        console.print_summary(result)
+    if verbose:
+        console.print_details(result)
+
+
+@commands.command()
+@_config
+@_workers
+@_quiet
+def check(config: Path, workers: int | None, quiet: bool) -> None:
+    """Survey every input of a region and say what a run would cost; write nothing."""
+    from saltrise.engine.estimate import estimate_cost
+    from saltrise.run import Silent, check_output, survey
+
+    settings = _settings(config, workers)
+    progress = None if quiet else console.Progress()
+    try:
+        region = survey(settings, progress or Silent())
+    finally:
+        if progress:
+            progress.close()
+    if not quiet:
+        console.print_survey(region, estimate_cost(region), check_output(settings))
+
+
+@commands.command()
+@click.argument("sets", nargs=-1)
+def soils(sets: tuple[str, ...]) -> None:
+    """List soil parameter sets (all shipped ones, or SETS by name or CSV path)."""
+    from saltrise.engine.listing import list_soils
+
+    console.print_soils(*list_soils(sets))
+
+
+@commands.command()
+def template() -> None:
+    """Print a commented config to start from."""
+    from importlib import resources
+
+    file = resources.files("saltrise") / "data" / "template.toml"
+    console.print_text(file.read_text("utf-8"))
+
+
+def _settings(config: Path, workers: int | None) -> Settings:
+    from saltrise.engine.config import read_settings
+
+    settings = read_settings(config)
+    return settings if workers is None else settings.with_workers(workers)

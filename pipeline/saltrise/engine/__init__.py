@@ -1,0 +1,1 @@
+"""From inputs to records to layers: survey, tiles, schedule, merge, assembly."""

@@ -1,0 +1,120 @@
+"""What a run says of itself: tags of its layers and the content of run.json."""
+
+from __future__ import annotations
+
+import os
+import time
+from collections.abc import Mapping
+from dataclasses import asdict
+from datetime import UTC, datetime
+from importlib.metadata import version
+from typing import Any
+
+import rasterio
+
+from saltrise.engine.inputs import ROLES
+from saltrise.engine.merge import Totals
+from saltrise.engine.region import Region
+from saltrise.io.fingerprint import Fingerprint
+from saltrise.layers import LAYERS
+from saltrise.physics.soils import soil_for
+from saltrise.zone_table import region_figures
+
+CAUTIONS = (
+    "Screening level: shows where hazard is likely, not what a field holds; verify with field "
+    "sampling before acting.",
+    "Upper estimate for bare soil with these parameters: steady flow to a bare surface. Vapour "
+    "flow, moving water tables, roots and layering can exceed it.",
+    "Gross yearly salt rise from groundwater, not the net salt balance and not a river load: "
+    "rain, irrigation, leaching and drainage are not subtracted.",
+    "Hazard is the potential for salt to rise; it is not risk, which needs what stands there.",
+    "The choice of soil parameter set can change the answer by a factor of ten or more.",
+    "Local codes, standards and licensed practice take precedence.",
+)
+
+_SHOWN_PACKAGES = ("saltrise", "numpy", "scipy", "rasterio", "pyproj", "shapely", "dask")
+
+
+def run_date() -> datetime:
+    """The run's date: `SOURCE_DATE_EPOCH` if set, else the clock [UTC, whole seconds]."""
+    epoch = os.environ.get("SOURCE_DATE_EPOCH")
+    return datetime.fromtimestamp(int(epoch) if epoch else int(time.time()), UTC)
+
+
+def layer_tags(region: Region, date: datetime) -> dict[str, str]:
+    """Dataset tags that every layer carries."""
+    settings = region.settings
+    return {
+        "AREA_OR_POINT": "Area",
+        "TIFFTAG_SOFTWARE": f"saltrise {version('saltrise')}",
+        "TIFFTAG_DATETIME": date.strftime("%Y:%m:%d %H:%M:%S"),
+        "TITLE": settings.title,
+        "SOIL_PARAMETERS": region.soils.name,
+        "TARGET_LOAD": f"{settings.hazard.target_load!r} t ha-1 year-1",
+        "DAYS_PER_YEAR": "365",
+        "PRECISION": settings.output.precision,
+        "USE_LIMITS": " ".join(CAUTIONS),
+    }
+
+
+def run_record(
+    region: Region,
+    totals: Totals,
+    fingerprints: Mapping[str, Fingerprint],
+    date: datetime,
+    worst: list[dict[str, Any]],
+) -> dict[str, Any]:
+    """Content of run.json; equal for equal inputs, versions and date."""
+    grid = region.inputs.grid
+    return {
+        "program": "saltrise",
+        "date": date.strftime("%Y-%m-%dT%H:%M:%SZ"),
+        "title": region.settings.title,
+        "config": region.settings.resolved(),
+        "inputs": [
+            {"file": path, "size_bytes": print_.size, "sha256": print_.sha256}
+            for path, print_ in fingerprints.items()
+        ],
+        "alignment": alignment(region),
+        "grid": {
+            "crs": grid.crs_wkt,
+            "transform": list(grid.transform),
+            "width": grid.width,
+            "height": grid.height,
+        },
+        "parameters": parameters(region),
+        "hazard_scheme": asdict(region.scheme),
+        "counts_cells": totals.counts,
+        "region": region_figures(totals.zones),
+        "worst_zones": worst,
+        "statistics": {name: asdict(found) for name, found in totals.statistics.items()},
+        "layers": {
+            name: {"unit": LAYERS[name].unit, "meaning": LAYERS[name].meaning}
+            for name in region.settings.output.layers
+        },
+        "warnings": list(region.warnings),
+        "use_limits": list(CAUTIONS),
+        "versions": versions(),
+    }
+
+
+def alignment(region: Region) -> dict[str, str]:
+    """How each raster input reached the region's grid, by config key."""
+    return {ROLES[r]: aligned.describe() for r, aligned in region.inputs.rasters.items()}
+
+
+def parameters(region: Region) -> dict[str, Any]:
+    """The soil parameter values used, with their sources."""
+    rows = [asdict(soil_for(region.soils, texture)) for texture in region.textures]
+    return {
+        "set": region.soils.name,
+        "title": region.soils.title,
+        "conductivity": region.soils.conductivity,
+        "classes": rows,
+    }
+
+
+def versions() -> dict[str, str]:
+    """Versions of what computed the numbers."""
+    found = {name: version(name) for name in _SHOWN_PACKAGES}
+    return found | {"gdal": str(rasterio.__gdal_version__)}

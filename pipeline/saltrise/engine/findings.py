@@ -1,0 +1,116 @@
+"""What a scan means for the user: faults that stop the run and warnings that go with it."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from saltrise.engine.inputs import ROLES, Inputs
+from saltrise.engine.survey import BlockScan, Range, Sighting
+from saltrise.physics.soils import NOT_SOIL
+from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
+
+if TYPE_CHECKING:
+    from saltrise.settings import Settings
+
+_SHOWN = 10
+
+# Values beyond these are possible but far more often a wrong unit or an undeclared nodata.
+_WATER_ABOVE_M = 10.0
+_DEEP_M = 500.0
+_BRINE_G_PER_L = 350.0
+_FAST_MM_PER_DAY = 30.0
+
+
+def faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
+    """Every fault of the inputs' values, as `file:line: key: what, rule, what to do`."""
+    lines = []
+    for role, seen in found.ranges.items():
+        key = ROLES[role]
+        if seen.valid == 0:
+            lines.append(settings.fault(key, _all_nodata(inputs, role)))
+        elif role in ("salinity", "potential_evaporation") and seen.negative:
+            lines.append(
+                settings.fault(
+                    key,
+                    f"{seen.negative.count} cells are negative (lowest {seen.low:g}, first at "
+                    f"{_place(inputs, role, seen.negative)}), must be 0 or more; if the value "
+                    "marks missing cells, declare it as nodata in this table",
+                )
+            )
+    if not lines and found.complete == 0:
+        lines.append(
+            f"{settings.source}: no cell of the region has a value in every input, so nothing can "
+            "be computed; check the extents and nodata of the inputs against each other"
+        )
+    return lines + _code_faults(settings, inputs, found.codes)
+
+
+def _all_nodata(inputs: Inputs, role: str) -> str:
+    if role not in inputs.rasters:
+        return "ground and elevation have no cell of the region in common; check their extents"
+    files = [tile.file.path for tile in inputs.rasters[role].mosaic.tiles]
+    names = ", ".join(files[:3]) + (f" and {len(files) - 3} more" if len(files) > 3 else "")
+    return f"{names}: band 1: every cell of the region is nodata; check nodata, extent and CRS"
+
+
+def _code_faults(settings: Settings, inputs: Inputs, codes: dict[float, Sighting]) -> list[str]:
+    known = settings.soil.classes or {}
+    unknown = {code: seen for code, seen in sorted(codes.items()) if code not in known}
+    lines = [
+        f"{f'{code:g}' if code == int(code) else repr(code)} ({seen.count} cells, first at "
+        f"{_place(inputs, 'texture', seen)})"
+        for code, seen in list(unknown.items())[:_SHOWN]
+    ]
+    if not lines:
+        return []
+    more = f" and {len(unknown) - _SHOWN} more codes" if len(unknown) > _SHOWN else ""
+    return [
+        settings.fault(
+            "soil.classes",
+            f"the texture raster holds {'codes that are' if len(unknown) > 1 else 'a code that is'}"
+            f" not mapped: {'; '.join(lines)}{more}; map each to a texture class, or to "
+            f'"{NOT_SOIL}" to mask it',
+        )
+    ]
+
+
+def _place(inputs: Inputs, role: str, seen: Sighting) -> str:
+    x, y = inputs.grid.xy(seen.row, seen.col)
+    where = f"column {seen.col}, row {seen.row} of the region's grid, x {x:.10g}, y {y:.10g}"
+    aligned = inputs.rasters[role]
+    if aligned.method != "cell for cell":
+        return where
+    file = aligned.pixel(seen.row, seen.col)
+    return f"{where}: {file[0]}, pixel column {file[1]}, row {file[2]}" if file else where
+
+
+def warnings(settings: Settings, found: BlockScan) -> list[str]:
+    """Every finding that does not stop the run but may make its answer wrong."""
+    lines = []
+    for role, seen in found.ranges.items():
+        if seen.valid:
+            lines += _doubts(settings, role, seen)
+    return [f"{ROLES[role]}: {text}" for role, text in lines]
+
+
+def _doubts(settings: Settings, role: str, seen: Range) -> list[tuple[str, str]]:
+    groundwater, climate = settings.groundwater, settings.climate
+    if role == "depth":
+        low, high = (float(depth_in_m(v, settings.water_table.unit)) for v in (seen.low, seen.high))
+        if low < -_WATER_ABOVE_M:
+            text = (
+                f"water stands up to {-low:g} m above ground; if {seen.low:g} marks missing cells, "
+                "declare it as nodata"
+            )
+            return [(role, text)]
+        if high > _DEEP_M:
+            return [(role, f"depths reach {high:g} m; check unit and nodata")]
+    if role == "salinity":
+        tds = float(tds_in_g_per_l(seen.high, groundwater.unit, groundwater.tds_per_ec))
+        if tds > _BRINE_G_PER_L:
+            return [(role, f"reaches {tds:g} g/L, more than a saturated brine; check the unit")]
+    if role == "potential_evaporation":
+        rate = float(evaporation_in_mm_per_day(seen.high, climate.unit))
+        if rate > _FAST_MM_PER_DAY:
+            return [(role, f"reaches {rate:g} mm/day; check the unit")]
+    return []

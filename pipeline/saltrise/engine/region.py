@@ -1,0 +1,226 @@
+"""A region as surveyed: grid, inputs, profiles, zones and doubts, before any tile runs."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import partial
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+from rasterio.errors import RasterioError
+
+from saltrise.coverage import ZoneShapes, prepare_zones
+from saltrise.engine import findings
+from saltrise.engine.inputs import ROLES, Inputs, open_inputs
+from saltrise.engine.plan import Plan
+from saltrise.engine.schedule import on_threads
+from saltrise.engine.survey import BlockScan, scan
+from saltrise.engine.workdir import Workdir
+from saltrise.errors import InputError, RunError
+from saltrise.grid import Window, cell_areas
+from saltrise.io.align import BlockReader
+from saltrise.io.gdal import require_working_libraries
+from saltrise.io.overlaps import disagreements
+from saltrise.io.scheme_files import load_scheme
+from saltrise.io.soil_tables import load_soil_set
+from saltrise.io.vectors import Zones, read_zones
+from saltrise.physics.curve import build_curves
+from saltrise.physics.profile import homogeneous
+from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
+from saltrise.recipe import Recipe
+from saltrise.schemes import Scheme
+from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
+
+if TYPE_CHECKING:
+    from saltrise.settings import Settings
+
+MASKED = -1
+UNKNOWN = -2
+
+_CODE_SPAN = 1 << 24
+"""Widest span of texture codes; beyond it a float32 cannot hold every code anyway."""
+
+
+@dataclass(frozen=True)
+class Region:
+    """A surveyed region.
+
+    `textures` are the texture classes that occur, in the order of their profiles.
+    """
+
+    settings: Settings
+    inputs: Inputs
+    found: BlockScan
+    soils: SoilSet
+    textures: tuple[str, ...]
+    scheme: Scheme
+    zones: Zones | None
+    warnings: tuple[str, ...]
+
+
+def survey_region(
+    settings: Settings, block: int, workers: int, done: Callable[[int, int], None]
+) -> Region:
+    """Open, scan and check everything a run needs.
+
+    Parameters
+    ----------
+    settings : Settings
+        The region.
+    block : int
+        Edge of the unit of arithmetic [cells].
+    workers : int
+        Threads that scan.
+    done : callable
+        Called with windows scanned and windows in all.
+
+    Raises
+    ------
+    InputError
+        Every fault of config references, rasters, codes and zones found together.
+    """
+    require_working_libraries()
+    soils, scheme = _references(settings)
+    inputs = open_inputs(settings, block)
+    zones: Zones | None = None
+    zone_faults: tuple[str, ...] = ()
+    if settings.zones is not None:
+        try:
+            zones = read_zones(settings, inputs.grid)
+        except InputError as error:
+            zone_faults = error.faults
+    try:
+        found = _scan(inputs, settings.run.tile, workers, done)
+        clashes = [text for m in inputs.mosaics().values() for text in disagreements(m)]
+    except (RunError, RasterioError) as error:
+        # Until tiles run, a broken raster is the user's to mend.
+        raise InputError(*zone_faults, str(error)) from error
+    textures = _textures(settings, inputs, found)
+    faults = [*zone_faults, *findings.faults(settings, inputs, found)]
+    if not faults:
+        faults += _soil_faults(settings, soils, textures)
+    if faults:
+        raise InputError(*faults)
+    warnings = [*settings.warnings, *inputs.warnings, *findings.warnings(settings, found)]
+    warnings += clashes + (list(zones.warnings) if zones else [])
+    return Region(settings, inputs, found, soils, textures, scheme, zones, tuple(warnings))
+
+
+def _references(settings: Settings) -> tuple[SoilSet, Scheme]:
+    faults: list[str] = []
+    soils = scheme = None
+    try:
+        soils = load_soil_set(settings.soil.parameters, settings.base)
+    except InputError as error:
+        faults += [settings.fault("soil.parameters", text) for text in error.faults]
+    try:
+        scheme = load_scheme(settings.hazard.scheme, settings.base)
+    except InputError as error:
+        faults += [settings.fault("hazard.scheme", text) for text in error.faults]
+    if soils is None or scheme is None:
+        raise InputError(*faults)
+    return soils, scheme
+
+
+def _scan(inputs: Inputs, tile: int, workers: int, done: Callable[[int, int], None]) -> BlockScan:
+    total = len(list(inputs.grid.tiles(tile)))
+    seen = 0
+
+    def heard(_: BlockScan) -> None:
+        nonlocal seen
+        seen += 1
+        done(seen, total)
+
+    return scan(inputs, tile, partial(on_threads, workers=workers, done=heard))
+
+
+def _textures(settings: Settings, inputs: Inputs, found: BlockScan) -> tuple[str, ...]:
+    codes = set(found.codes) | {inputs.constants.get("texture", np.nan)}
+    classes = settings.soil.classes
+    occurring = {name for code, name in classes.items() if code in codes and name != NOT_SOIL}
+    return tuple(sorted(occurring))
+
+
+def _soil_faults(settings: Settings, soils: SoilSet, textures: tuple[str, ...]) -> list[str]:
+    faults = []
+    if not textures:
+        faults.append(
+            settings.fault("soil.classes", f'every cell of the region is mapped to "{NOT_SOIL}"')
+        )
+    for texture in textures:
+        try:
+            soil_for(soils, texture)
+        except InputError as error:
+            faults += [settings.fault("soil.parameters", text) for text in error.faults]
+    return faults
+
+
+def make_plan(region: Region, workdir: Workdir) -> Plan:
+    """Settle everything the tiles need."""
+    settings, grid = region.settings, region.inputs.grid
+    middle = next(iter(grid.blocks(Window(*_middle_block(region), 1, 1))))
+    nominal = float(cell_areas(grid, middle).flat[0])
+    shapes: ZoneShapes = prepare_zones(region.zones.grid_geometries if region.zones else [], grid)
+    return Plan(
+        work=workdir.work,
+        grid=grid,
+        readers={role: BlockReader(aligned) for role, aligned in region.inputs.rasters.items()},
+        recipe=make_recipe(region),
+        zones=shapes,
+        unit_m2=nominal * 2.0**-16,
+        layers=tuple(settings.output.layers),
+        compression=settings.output.compression,
+        assembly=settings.output.assembly,
+        rounded=settings.output.precision == "rounded",
+        tile=settings.run.tile,
+    )
+
+
+def _middle_block(region: Region) -> tuple[int, int]:
+    grid = region.inputs.grid
+    return (
+        grid.height // 2 // grid.block * grid.block,
+        grid.width // 2 // grid.block * grid.block,
+    )
+
+
+def make_recipe(region: Region) -> Recipe:
+    """The parameters of the physics, from settings, survey and soil set."""
+    settings = region.settings
+    water, groundwater, climate = settings.water_table, settings.groundwater, settings.climate
+    first, profiles = _profile_of_code(region)
+    return Recipe(
+        curves=build_curves(
+            [homogeneous(soil_for(region.soils, name)) for name in region.textures]
+        ),
+        first_code=first,
+        profile_of_code=profiles,
+        depth_factor=float(depth_in_m(1.0, water.unit)),
+        tds_factor=float(tds_in_g_per_l(1.0, groundwater.unit, groundwater.tds_per_ec)),
+        evaporation_factor=float(evaporation_in_mm_per_day(1.0, climate.unit)),
+        coefficient=climate.coefficient,
+        target_load=settings.hazard.target_load,
+        scheme=region.scheme,
+        constants=region.inputs.constants,
+    )
+
+
+def _profile_of_code(region: Region) -> tuple[int, NDArray[np.int32]]:
+    classes = region.settings.soil.classes
+    first, last = min(classes), max(classes)
+    if last - first > _CODE_SPAN:
+        raise InputError(
+            region.settings.fault(
+                ROLES["texture"].replace("texture", "classes"),
+                f"codes run from {first} to {last}, must span at most {_CODE_SPAN}; renumber them",
+            )
+        )
+    profiles = np.full(last - first + 1, UNKNOWN, dtype=np.int32)
+    for code, name in classes.items():
+        if name == NOT_SOIL:
+            profiles[code - first] = MASKED
+        elif name in region.textures:
+            profiles[code - first] = region.textures.index(name)
+    return first, profiles

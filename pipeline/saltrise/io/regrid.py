@@ -1,0 +1,48 @@
+"""Coordinate reference systems by name, and extents carried from one to another."""
+
+from __future__ import annotations
+
+from rasterio.crs import CRS
+from rasterio.errors import CRSError, RasterioError
+from rasterio.warp import transform_bounds
+
+from saltrise.errors import InputError
+from saltrise.io.mosaic import same_crs
+
+
+def crs_text(name: str) -> str:
+    """WKT of a CRS given as `EPSG:...`, WKT or PROJ text.
+
+    Raises
+    ------
+    InputError
+        The text means no CRS.
+    """
+    try:
+        return str(CRS.from_user_input(name).to_wkt())
+    except CRSError as error:
+        raise InputError(
+            f"{name!r} is no coordinate reference system; give one such as 'EPSG:32740' ({error})"
+        ) from error
+
+
+def bounds_in(
+    source_wkt: str, target_wkt: str, bounds: tuple[float, ...]
+) -> tuple[float, float, float, float]:
+    """Left, bottom, right, top of an extent in another CRS, edges densified.
+
+    Raises
+    ------
+    InputError
+        The extent does not exist in the target CRS.
+    """
+    left, bottom, right, top = bounds
+    if same_crs(source_wkt, target_wkt):
+        return left, bottom, right, top
+    try:
+        seen = transform_bounds(
+            CRS.from_wkt(source_wkt), CRS.from_wkt(target_wkt), left, bottom, right, top
+        )
+    except RasterioError as error:
+        raise InputError(f"the extent {bounds} has no place in the grid's CRS: {error}") from error
+    return seen[0], seen[1], seen[2], seen[3]

@@ -1,0 +1,153 @@
+"""Soil parameter sets from CSV: those that ship with the package and a user's own, read alike."""
+
+from __future__ import annotations
+
+import csv
+import math
+from difflib import get_close_matches
+from importlib import resources
+from pathlib import Path
+
+from saltrise.errors import InputError
+from saltrise.io.text import read_input
+from saltrise.physics.soils import CAMPBELL, TEXTURES, SoilRow, SoilSet
+
+COLUMNS = ("texture", "air_entry_cm", "b", "ks_cm_per_day", "source")
+
+# Far wider than any soil: beyond these a number is in another unit or column.
+_LIMITS = {"air_entry_cm": (0.01, 10_000.0), "b": (0.5, 50.0), "ks_cm_per_day": (1e-6, 1e6)}
+
+
+def shipped_sets() -> tuple[str, ...]:
+    """Names of the parameter sets inside the package, sorted."""
+    folder = resources.files("saltrise") / "data" / "soils"
+    return tuple(
+        sorted(f.name.removesuffix(".csv") for f in folder.iterdir() if f.name.endswith(".csv"))
+    )
+
+
+def load_soil_set(name_or_path: str, base: Path) -> SoilSet:
+    """Load a parameter set by its shipped name or from a CSV file.
+
+    Parameters
+    ----------
+    name_or_path : str
+        A name of `shipped_sets()`, or a path (relative to `base`) ending in `.csv`.
+    base : Path
+        Folder of the config.
+
+    Raises
+    ------
+    InputError
+        No such set or file, or every fault of its rows at once as `file:row: column: ...`.
+    """
+    names = shipped_sets()
+    if name_or_path in names:
+        file = resources.files("saltrise") / "data" / "soils" / f"{name_or_path}.csv"
+        return parse_soil_set(file.read_bytes(), name_or_path, f"{name_or_path}.csv")
+    if not name_or_path.lower().endswith(".csv"):
+        close = get_close_matches(name_or_path, names, n=1)
+        hint = f"; did you mean {close[0]!r}?" if close else ""
+        raise InputError(
+            f"no parameter set {name_or_path!r}; shipped: {', '.join(names)}, or give the path of "
+            f"a .csv file of your own{hint}"
+        )
+    path = base / name_or_path
+    return parse_soil_set(read_input(path), path.stem, str(path))
+
+
+def parse_soil_set(data: bytes, name: str, source: str) -> SoilSet:
+    """A parameter set from the bytes of a CSV.
+
+    Lines that start with `#` are comments; `# title:` in one names the set.
+
+    Raises
+    ------
+    InputError
+        Every fault, each naming file, row (line of the file), column and value.
+    """
+    try:
+        lines = data.decode("utf-8-sig").splitlines()
+    except UnicodeDecodeError as error:
+        raise InputError(
+            f"{source}: is not UTF-8 text ({error.reason}); save it as such"
+        ) from error
+    title = next((line[8:].strip() for line in lines if line.startswith("# title:")), name)
+    numbered = [(n, line) for n, line in enumerate(lines, 1) if line.strip() and line[0] != "#"]
+    if not numbered:
+        raise InputError(f"{source}: is empty; needs the columns {', '.join(COLUMNS)}")
+    records = [(n, next(csv.reader([line], skipinitialspace=True))) for n, line in numbered]
+    header = [column.strip() for column in records[0][1]]
+    faults = _header_faults(header)
+    if faults:
+        raise InputError(*(f"{source}:{records[0][0]}: {fault}" for fault in faults))
+    rows: dict[str, SoilRow] = {}
+    for number, cells in records[1:]:
+        found = _row_faults(header, cells, rows)
+        faults += [f"{source}:{number}: {fault}" for fault in found]
+        if not found:
+            row = _row(dict(zip(header, cells, strict=True)))
+            rows[row.texture] = row
+    if len(records) == 1:
+        faults.append(f"{source}: has no rows, needs one for each texture class in use")
+    if faults:
+        raise InputError(*faults)
+    return SoilSet(name, title, CAMPBELL, rows)
+
+
+def _header_faults(header: list[str]) -> list[str]:
+    if len(header) == 1 and any(mark in header[0] for mark in ";\t"):
+        return ["columns must be separated by commas, not semicolons or tabs"]
+    faults = []
+    for column in header:
+        if column not in COLUMNS:
+            close = get_close_matches(column, COLUMNS, n=1)
+            hint = f"; did you mean {close[0]!r}?" if close else ""
+            faults.append(f"unknown column {column!r}; allowed: {', '.join(COLUMNS)}{hint}")
+        elif header.count(column) > 1:
+            faults.append(f"column {column!r} stands there more than once")
+    missing = [column for column in COLUMNS if column not in header]
+    if missing:
+        faults.append(f"missing column {', '.join(missing)}; needs {', '.join(COLUMNS)}")
+    return faults
+
+
+def _row_faults(header: list[str], cells: list[str], rows: dict[str, SoilRow]) -> list[str]:
+    if len(cells) != len(header):
+        return [f"has {len(cells)} cells, the header has {len(header)}"]
+    values = {column: cell.strip() for column, cell in zip(header, cells, strict=True)}
+    faults = []
+    texture = values["texture"]
+    if texture not in TEXTURES:
+        close = get_close_matches(texture, TEXTURES, n=1)
+        hint = f"; did you mean {close[0]!r}?" if close else ""
+        faults.append(f"texture: is {texture!r}, allowed: {', '.join(TEXTURES)}{hint}")
+    elif texture in rows:
+        faults.append(f"texture: {texture!r} has a row already")
+    for column, (low, high) in _LIMITS.items():
+        fault = _number_fault(values[column], low, high)
+        if fault:
+            faults.append(f"{column}: {fault}")
+    if not values["source"]:
+        faults.append("source: is empty, every row needs one")
+    return faults
+
+
+def _number_fault(text: str, low: float, high: float) -> str:
+    try:
+        value = float(text)
+    except ValueError:
+        return f"is {text!r}, must be a number with a decimal point"
+    if not math.isfinite(value) or not low <= value <= high:
+        return f"is {text}, must be from {low:g} to {high:g}; check unit and column"
+    return ""
+
+
+def _row(values: dict[str, str]) -> SoilRow:
+    return SoilRow(
+        texture=values["texture"].strip(),
+        air_entry_m=float(values["air_entry_cm"]) / 100.0,
+        b=float(values["b"]),
+        ks_mm_per_day=float(values["ks_cm_per_day"]) * 10.0,
+        source=values["source"].strip(),
+    )

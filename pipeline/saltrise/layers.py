@@ -1,0 +1,72 @@
+"""Catalogue of the layers a run can write: the one place their names and units live.
+
+Writer, statistics, tags and the README's table follow from it; to add a layer, add a row here
+and bind its values in `recipe`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+NODATA = -9999.0
+"""Nodata of every continuous layer."""
+
+CLASS_NODATA = 0
+"""Nodata of the class layer; never a class."""
+
+
+@dataclass(frozen=True)
+class Layer:
+    """One output raster.
+
+    `unit` is a UDUNITS string, `meaning` the band description, `cf_name` the CF standard name
+    where one exists, `overview` how a coarser cell is made from finer ones.
+    """
+
+    name: str
+    unit: str
+    meaning: str
+    dtype: Literal["float32", "uint8"]
+    nodata: float
+    overview: Literal["mean", "most frequent"]
+    cf_name: str | None = None
+
+    @property
+    def continuous(self) -> bool:
+        """Whether cells hold a quantity rather than a class."""
+        return self.dtype == "float32"
+
+
+def _quantity(name: str, unit: str, meaning: str, cf_name: str | None = None) -> Layer:
+    return Layer(name, unit, meaning, "float32", NODATA, "mean", cf_name)
+
+
+LAYERS: dict[str, Layer] = {
+    layer.name: layer
+    for layer in (
+        _quantity(
+            "max_evaporation",
+            "mm day-1",
+            "maximum steady evaporation the soil can lift",
+            "water_evaporation_flux_from_soil",
+        ),
+        _quantity(
+            "evaporation",
+            "mm year-1",
+            "groundwater evaporation, capped by evaporative demand",
+            "water_evaporation_amount",
+        ),
+        _quantity("salt_load", "t ha-1 year-1", "gross yearly salt rise from groundwater"),
+        _quantity("critical_depth", "m", "critical depth to water table for the target load"),
+        _quantity("depth_margin", "m", "depth to water table minus critical depth"),
+        Layer(
+            "hazard_class",
+            "class",
+            "salinization hazard class",
+            "uint8",
+            CLASS_NODATA,
+            "most frequent",
+        ),
+    )
+}

@@ -1,0 +1,82 @@
+"""Coarser versions of a layer's stored values: defined here, the same however a layer is cut.
+
+Sizes halve, rounding up. A continuous cell is the mean of the valid stored cells among four,
+rounded like them; a class cell is the most frequent valid class, ties to the more severe.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from saltrise.layers import CLASS_NODATA, NODATA
+from saltrise.mantissa import round_mantissa
+
+Stored = NDArray[np.float32] | NDArray[np.uint8]
+
+
+def level_sizes(width: int, height: int, block: int) -> list[tuple[int, int]]:
+    """Width and height of every overview of a layer, finest first.
+
+    Levels go on until both edges fit in one block.
+    """
+    sizes = []
+    while max(width, height) > block:
+        width, height = -(-width // 2), -(-height // 2)
+        sizes.append((width, height))
+    return sizes
+
+
+def halve(stored: Stored, *, rounded: bool) -> Stored:
+    """The next coarser level of a window whose first cell lies at even row and column.
+
+    Parameters
+    ----------
+    stored : float32 or uint8 array
+        Stored values; -9999 (float32) or 0 (uint8) is nodata.
+    rounded : bool
+        Whether the layer keeps 12 explicit mantissa bits.
+
+    Returns
+    -------
+    array of the same type, each edge halved, rounding up
+    """
+    height, width = stored.shape
+    if height % 2 or width % 2:
+        nodata = NODATA if stored.dtype == np.float32 else CLASS_NODATA
+        even = np.full((height + height % 2, width + width % 2), nodata, dtype=stored.dtype)
+        even[:height, :width] = stored
+        stored = even
+    four = (stored[::2, ::2], stored[::2, 1::2], stored[1::2, ::2], stored[1::2, 1::2])
+    if stored.dtype == np.float32:
+        return _mean(four, rounded)
+    return _most_frequent(four)
+
+
+def _mean(four: tuple[Stored, ...], rounded: bool) -> NDArray[np.float32]:
+    shape = four[0].shape
+    total, count = np.zeros(shape), np.zeros(shape, dtype=np.uint8)
+    for part in four:
+        valid = part != NODATA
+        np.add(total, part, out=total, where=valid)
+        count += valid
+    empty = count == 0
+    count[empty] = 1
+    total /= count
+    mean: NDArray[np.float32] = total.astype(np.float32)
+    if rounded:
+        round_mantissa(mean)
+    mean[empty] = NODATA
+    return mean
+
+
+def _most_frequent(four: tuple[Stored, ...]) -> NDArray[np.uint8]:
+    best = np.zeros(four[0].shape, dtype=np.uint8)
+    for part in four:
+        votes = np.zeros(part.shape, dtype=np.uint8)
+        for other in four:
+            votes += part == other
+        # Votes in the high bits, class in the low ones: the greatest key is the winner.
+        key = np.where(part == CLASS_NODATA, 0, votes * 8 + part).astype(np.uint8)
+        np.maximum(best, key, out=best)
+    return best & np.uint8(7)

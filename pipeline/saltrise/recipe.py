@@ -1,0 +1,182 @@
+"""The job on one block of arrays: inputs and parameters in, layer values out.
+
+Pure NumPy: no files, no grid, no tiles. Each layer's values are bound to their function here and
+nowhere else.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from saltrise.physics.curve import RiseCurves
+from saltrise.physics.demand import at_surface, groundwater_evaporation
+from saltrise.physics.salt import critical_depth, salt_load
+from saltrise.schemes import SURFACE_CLASS, Scheme
+from saltrise.units import DAYS_PER_YEAR
+from saltrise.zonal import ZoneValues
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Recipe:
+    """Everything but the rasters that decides a cell's answer.
+
+    Attributes
+    ----------
+    curves : RiseCurves
+        Rise curves of the region's profiles.
+    first_code : int
+        Texture code of the first entry of `profile_of_code`.
+    profile_of_code : int array
+        Profile of each code from `first_code` on; -1 masks the cell, -2 is no known code.
+    depth_factor, tds_factor, evaporation_factor : float
+        From the config's units to m, g/L and mm/day.
+    coefficient : float
+        Potential evaporation to evaporative demand [-].
+    target_load : float
+        Target load [t/ha/year].
+    scheme : Scheme
+        Breaks of the hazard classes.
+    constants : dict
+        Inputs given as numbers, by role, in the config's units.
+    """
+
+    curves: RiseCurves
+    first_code: int
+    profile_of_code: NDArray[np.int32]
+    depth_factor: float
+    tds_factor: float
+    evaporation_factor: float
+    coefficient: float
+    target_load: float
+    scheme: Scheme
+    constants: dict[str, float]
+
+
+@dataclass(frozen=True)
+class BlockResult:
+    """One block's answer before rounding.
+
+    `values` holds the continuous layers by name; where not `valid` their content means nothing.
+    `counts` are numbers of cells.
+    """
+
+    values: dict[str, Array]
+    hazard_class: NDArray[np.uint8]
+    valid: NDArray[np.bool_]
+    surface: NDArray[np.bool_]
+    depth: Array
+    counts: dict[str, int]
+
+    def zone_values(self) -> ZoneValues:
+        """The block as the zone sums take it."""
+        return ZoneValues(
+            depth_m=self.depth.ravel(),
+            evaporation_mm_per_year=self.values["evaporation"].ravel(),
+            salt_load=self.values["salt_load"].ravel(),
+            critical_depth=self.values["critical_depth"].ravel(),
+            depth_margin=self.values["depth_margin"].ravel(),
+            hazard_class=self.hazard_class.ravel(),
+        )
+
+
+def compute_block(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, int]) -> BlockResult:
+    """Every layer of one block.
+
+    Parameters
+    ----------
+    recipe : Recipe
+        Parameters of the region.
+    inputs : dict of float64 arrays, each of `shape`
+        Raster inputs by role (`depth`, or `ground` and `elevation`; `texture`; `salinity`;
+        `potential_evaporation`) in the config's units, NaN where there is no value.
+    shape : (int, int)
+        Rows and columns.
+
+    Returns
+    -------
+    BlockResult
+        A cell with NaN in any needed input is not valid in any layer.
+
+    Raises
+    ------
+    ValueError
+        A texture code has no profile: the input changed since the survey.
+    """
+    given = {
+        role: np.full(shape, value, dtype=np.float64) for role, value in recipe.constants.items()
+    }
+    given |= inputs
+    depth = _depth(recipe, given)
+    tds = given["salinity"] * recipe.tds_factor
+    demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
+    profile = _profiles(recipe, given["texture"])
+    missing = {
+        "no_depth": ~np.isfinite(depth),
+        "no_texture": np.isnan(given["texture"]),
+        "not_soil": profile < 0,
+        "no_salinity": ~np.isfinite(tds),
+        "no_potential_evaporation": ~np.isfinite(demand),
+    }
+    valid, counts = _masked(missing, shape)
+    with np.errstate(invalid="ignore"):
+        surface = valid & at_surface(depth)
+        values = _layers(recipe, profile, depth, tds, demand)
+        classes = recipe.scheme.classify(values[recipe.scheme.layer])
+        limited = valid & ~surface & (values["max_evaporation"] >= demand)
+    classes[surface] = SURFACE_CLASS
+    classes[~valid] = 0
+    counts["at_surface"] = int(surface.sum())
+    counts["assessed"] = int(valid.sum()) - counts["at_surface"]
+    counts["demand_limited"] = int(limited.sum())
+    return BlockResult(values, classes, valid, surface, depth, counts)
+
+
+def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:
+    if "depth" in given:
+        return given["depth"] * recipe.depth_factor
+    return (given["ground"] - given["elevation"]) * recipe.depth_factor
+
+
+def _profiles(recipe: Recipe, texture: Array) -> NDArray[np.int32]:
+    known = np.where(np.isnan(texture), recipe.first_code, texture)
+    position = known.astype(np.int64) - recipe.first_code
+    size = recipe.profile_of_code.size
+    if position.min() < 0 or position.max() >= size:
+        raise ValueError(f"texture code {known.min():g} or {known.max():g} is not mapped")
+    profile: NDArray[np.int32] = recipe.profile_of_code[position]
+    profile[np.isnan(texture)] = -1
+    if profile.min() < -1:
+        raise ValueError(f"texture code {known.flat[int(np.argmin(profile))]:g} is not mapped")
+    return profile
+
+
+def _masked(
+    missing: dict[str, NDArray[np.bool_]], shape: tuple[int, int]
+) -> tuple[NDArray[np.bool_], dict[str, int]]:
+    """Valid cells, and how many each reason masks; a cell counts under its first reason."""
+    valid = np.ones(shape, dtype=bool)
+    counts = {"cells": valid.size}
+    for reason, where in missing.items():
+        counts[reason] = int((valid & where).sum())
+        valid &= ~where
+    return valid, counts
+
+
+def _layers(
+    recipe: Recipe, profile: NDArray[np.int32], depth: Array, tds: Array, demand: Array
+) -> dict[str, Array]:
+    maximum = recipe.curves.max_evaporation(profile, depth)
+    evaporation = groundwater_evaporation(maximum, demand, depth) * DAYS_PER_YEAR
+    critical = critical_depth(recipe.curves, profile, demand, tds, recipe.target_load)
+    return {
+        "max_evaporation": maximum,
+        "evaporation": evaporation,
+        "salt_load": salt_load(evaporation, tds),
+        "critical_depth": critical,
+        "depth_margin": depth - critical,
+    }

@@ -1,0 +1,152 @@
+"""Zone rows and region figures from merged sums: columns, percentiles, ranks."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from saltrise.zonal import QUANTITIES, REGION, ZoneTotals
+
+Row = dict[str, Any]
+
+CLASS_COLUMNS = ("very_low_ha", "low_ha", "moderate_ha", "high_ha", "very_high_ha")
+DEPTH_COLUMNS = ("depth_under_1_ha", "depth_1_to_2_ha", "depth_2_to_3_ha", "depth_over_3_ha")
+
+RANKED_SHARE = 0.6
+"""A zone assessed on less than this share of its area has no rank."""
+
+RANK_COLUMNS = {
+    "mean": "salt_load_mean_t_per_ha_per_year",
+    "total": "salt_load_t_per_year",
+    "too_shallow": "too_shallow_ha",
+}
+
+_HA = 1e4
+
+
+def zone_table(
+    totals: ZoneTotals,
+    ids: Sequence[str],
+    names: Sequence[str],
+    area_m2: Sequence[float],
+    outside_m2: Sequence[float],
+    rank_by: str,
+) -> dict[str, list[Any]]:
+    """The table of zones, a list a column, in the order of `ids`.
+
+    Parameters
+    ----------
+    totals : ZoneTotals
+        Merged sums; zone k is `ids[k]`.
+    ids, names : sequences of str
+        Of the zones.
+    area_m2, outside_m2 : sequences of float
+        Area of each polygon and of its part beyond the grid, on the ellipsoid [m2].
+    rank_by : str
+        "mean", "total" or "too_shallow".
+
+    Returns
+    -------
+    dict of lists
+        Undefined means and ranks are None; areas of nothing are 0.
+    """
+    rows = []
+    for zone, (id_, name, area, outside) in enumerate(
+        zip(ids, names, area_m2, outside_m2, strict=True)
+    ):
+        figures = zone_figures(totals, zone)
+        share = figures["assessed_ha"] * _HA / area if area > 0 else 0.0
+        place = {
+            "zone_id": id_,
+            "name": name,
+            "area_ha": area / _HA,
+            "assessed_ha": figures["assessed_ha"],
+            "assessed_share": share,
+            "at_surface_ha": figures["at_surface_ha"],
+            "nodata_ha": figures["nodata_ha"],
+            "outside_ha": outside / _HA,
+        }
+        rows.append(place | {k: v for k, v in figures.items() if k not in place})
+    _rank(rows, RANK_COLUMNS[rank_by])
+    return {column: [row[column] for row in rows] for column in rows[0]} if rows else {}
+
+
+def _rank(rows: list[Row], column: str) -> None:
+    ranked = [
+        row for row in rows if row["assessed_share"] >= RANKED_SHARE and row[column] is not None
+    ]
+    ranked.sort(key=lambda row: (-row[column], row["zone_id"]))
+    for row in rows:
+        row["rank"] = None
+    for place, row in enumerate(ranked, start=1):
+        row["rank"] = place
+
+
+def region_figures(totals: ZoneTotals) -> Row:
+    """The figures of the whole region."""
+    return zone_figures(totals, REGION)
+
+
+def zone_figures(totals: ZoneTotals, zone: int) -> Row:
+    """Figures of one zone from its cells, in the order of the table's columns.
+
+    Means, loads, percentiles and class areas speak of assessed cells: valid, water below surface.
+    """
+    areas = totals.areas(zone)
+    by_class = areas.sum(axis=(1, 2)) / _HA
+    by_depth = areas[1:6].sum(axis=(0, 2)) / _HA
+    assessed = float(areas[1:6].sum())
+
+    def mean(name: str) -> float | None:
+        return totals.sum_of(zone, name) / assessed if assessed > 0 else None
+
+    def percentile(quantity: str, share: float) -> float | None:
+        return histogram_percentile(totals, zone, quantity, share)
+
+    figures: Row = {
+        "assessed_ha": assessed / _HA,
+        "at_surface_ha": float(by_class[6]),
+        "nodata_ha": float(by_class[0]),
+        "depth_mean_m": mean("depth"),
+    }
+    figures |= {name: float(by_depth[k]) for k, name in enumerate(DEPTH_COLUMNS)}
+    figures |= {
+        "evaporation_mean_mm_per_year": mean("evaporation"),
+        "salt_load_t_per_year": totals.sum_of(zone, "salt_load") / _HA,
+        "salt_load_mean_t_per_ha_per_year": mean("salt_load"),
+    }
+    for share in (10, 50, 90):
+        column = f"salt_load_p{share}_t_per_ha_per_year"
+        figures[column] = percentile("salt_load", share / 100)
+    figures |= {f"critical_depth_p{s}_m": percentile("critical_depth", s / 100) for s in (50, 80)}
+    figures["depth_margin_mean_m"] = mean("depth_margin")
+    figures["too_shallow_ha"] = float(areas[1:6, :, 1].sum()) / _HA
+    figures |= {name: float(by_class[k]) for k, name in enumerate(CLASS_COLUMNS, start=1)}
+    figures["at_surface_salt_load_t_per_year"] = totals.sum_of(zone, "surface_load") / _HA
+    return figures
+
+
+def histogram_percentile(
+    totals: ZoneTotals, zone: int, quantity: str, share: float
+) -> float | None:
+    """Value that `share` of a zone's assessed area does not exceed, within 0.4 %; None without.
+
+    The middle of the first bin whose cumulative weight reaches the share; 0 for the bin of zero.
+    """
+    histogram = totals.histogram
+    mine = (histogram.zone == zone) & (histogram.quantity == QUANTITIES.index(quantity))
+    weight = np.cumsum(histogram.weight[mine])
+    if weight.size == 0:
+        return None
+    first = int(np.searchsorted(weight, share * weight[-1], side="left"))
+    return _middle(histogram.bin[mine][min(first, weight.size - 1)])
+
+
+def _middle(bin_: np.int64) -> float:
+    if bin_ == 0:
+        return 0.0
+    edges: NDArray[np.float64] = (np.array([bin_, bin_ + 1]) << np.int64(44)).view(np.float64)
+    return float(edges.mean())
