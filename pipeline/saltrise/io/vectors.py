@@ -261,7 +261,8 @@ def write_zones_gpkg(path: Path, zones: Zones, table: dict[str, list[Any]], date
     for name in frame.columns:
         if name not in ("zone_id", "name", "rank", "geometry"):
             frame[name] = frame[name].astype("float64")
-    temporary = path.with_name(path.name + ".partial")
+    # GDAL insists on the extension.
+    temporary = path.with_name(f"{path.stem}.partial.gpkg")
     temporary.unlink(missing_ok=True)
     before = os.environ.get("OGR_CURRENT_DATE")
     os.environ["OGR_CURRENT_DATE"] = date.strftime("%Y-%m-%dT%H:%M:%S.000Z")
