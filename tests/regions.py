@@ -95,7 +95,8 @@ def fields(shape: tuple[int, int], random: np.random.Generator) -> dict[str, np.
 
 def tables(folder: Path, **changes: dict[str, Any]) -> dict[str, dict[str, Any]]:
     """A full config for the rasters of `write_fields`, with changed keys by table."""
-    base: dict[str, dict[str, Any]] = {
+    base: dict[str, Any] = {
+        "title": "Test",
         "water_table": {"depth": "depth.tif", "unit": "m"},
         "soil": {"texture": "texture.tif", "parameters": "rawls1982"},
         "soil.classes": {str(code): name for code, name in CODES.items()},

@@ -6,15 +6,16 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from saltrise.result import Result
-    from saltrise.run import run
+    from saltrise.job import run
 
 __all__ = ["Result", "run"]
 
 
 def __getattr__(name: str) -> Any:
-    # Late, so that `saltrise --help` does not wait for the raster libraries.
+    # Late, so that `saltrise --help` does not wait for the raster libraries. The module is not
+    # called run: importing it would put the module in the place of the function.
     if name == "run":
-        from saltrise.run import run
+        from saltrise.job import run
 
         return run
     if name == "Result":

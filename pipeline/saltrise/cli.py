@@ -93,8 +93,8 @@ _workers = click.option("--workers", type=click.IntRange(min=1), help="Overrides
 @_verbose
 def run(config: Path, force: bool, workers: int | None, quiet: bool, verbose: bool) -> None:
     """Compute the layers and zone tables of a region."""
-    from saltrise.run import Silent
-    from saltrise.run import run as run_region
+    from saltrise.job import Silent
+    from saltrise.job import run as run_region
 
     settings = _settings(config, workers)
     progress = None if quiet else console.Progress()
@@ -116,7 +116,7 @@ def run(config: Path, force: bool, workers: int | None, quiet: bool, verbose: bo
 def check(config: Path, workers: int | None, quiet: bool) -> None:
     """Survey every input of a region and say what a run would cost; write nothing."""
     from saltrise.engine.estimate import estimate_cost
-    from saltrise.run import Silent, check_output, survey
+    from saltrise.job import Silent, check_output, survey
 
     settings = _settings(config, workers)
     progress = None if quiet else console.Progress()
