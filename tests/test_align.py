@@ -9,8 +9,8 @@ import numpy as np
 import pyproj
 import pytest
 from affine import Affine
-from regions import CELL, CRS, NORTH, WEST, place, write_raster
 
+from regions import CELL, CRS, NORTH, WEST, place, write_raster
 from saltrise.errors import InputError, RunError
 from saltrise.grid import Grid, Window
 from saltrise.io.align import Aligned, BlockReader, align, relative_cell_size
@@ -28,8 +28,9 @@ def mosaic(path: Path) -> Mosaic:
     return open_mosaic("water_table.depth", Given((str(path),)), None)
 
 
-def grid_of(width: int = 12, height: int = 10, transform: Affine | None = None,
-            block: int = 16) -> Grid:
+def grid_of(
+    width: int = 12, height: int = 10, transform: Affine | None = None, block: int = 16
+) -> Grid:
     return Grid(WKT, tuple(transform or place())[:6], width, height, block)
 
 
@@ -133,8 +134,9 @@ def test_another_crs_lands_where_pyproj_says(tmp_path: Path) -> None:
     cols, rows = np.meshgrid(np.arange(60), np.arange(60))
     west, north = lon - 10 * step, lat + 10 * step
     plane = ((west + (cols + 0.5) * step) * 3 + (north - (rows + 0.5) * step) * 5).astype(float)
-    path = write_raster(tmp_path / "a.tif", plane, Affine(step, 0, west, 0, -step, north),
-                        crs="EPSG:4326")
+    path = write_raster(
+        tmp_path / "a.tif", plane, Affine(step, 0, west, 0, -step, north), crs="EPSG:4326"
+    )
     grid = grid_of()
     aligned = align(mosaic(path), grid, classes=False)
     got = read(aligned)

@@ -90,16 +90,24 @@ def test_leaching_equivalent_of_the_shipped_breaks() -> None:
     np.testing.assert_allclose(leaching_equivalent([1, 5, 15, 30]), [20, 100, 300, 600], rtol=0.03)
 
 
-@pytest.mark.parametrize(("value", "unit", "metres"), [(2, "m", 2), (250, "cm", 2.5),
-                                                       (10, "ft", 3.048)])
+@pytest.mark.parametrize(
+    ("value", "unit", "metres"), [(2, "m", 2), (250, "cm", 2.5), (10, "ft", 3.048)]
+)
 def test_depth_units(value, unit, metres) -> None:
     assert depth_in_m(value, unit) == pytest.approx(metres, rel=1e-15)
 
 
-@pytest.mark.parametrize(("value", "unit", "factor", "tds"), [
-    (2, "dS/m", 640, 1.28), (2, "mS/cm", 640, 1.28), (2000, "uS/cm", 640, 1.28),
-    (2, "dS/m", 800, 1.6), (1280, "mg/L", 640, 1.28), (1.28, "g/L", 640, 1.28),
-])
+@pytest.mark.parametrize(
+    ("value", "unit", "factor", "tds"),
+    [
+        (2, "dS/m", 640, 1.28),
+        (2, "mS/cm", 640, 1.28),
+        (2000, "uS/cm", 640, 1.28),
+        (2, "dS/m", 800, 1.6),
+        (1280, "mg/L", 640, 1.28),
+        (1.28, "g/L", 640, 1.28),
+    ],
+)
 def test_salinity_units_and_the_factor_of_handbook_60(value, unit, factor, tds) -> None:
     # USDA Handbook 60 (1954): 640 mg/L per dS/m; about 800 above 5 dS/m.
     assert tds_in_g_per_l(value, unit, factor) == pytest.approx(tds, rel=1e-14)

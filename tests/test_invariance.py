@@ -9,11 +9,11 @@ from pathlib import Path
 import numpy as np
 import pytest
 import rasterio
-import regions
 from hypothesis import HealthCheck, Phase, given, settings
 from hypothesis import strategies as st
 from shapely.geometry import Polygon
 
+import regions
 import saltrise
 from saltrise.engine.config import read_settings
 
@@ -26,12 +26,20 @@ def _fixed_date(monkeypatch: pytest.MonkeyPatch) -> None:
 def hashes(folder: Path) -> dict[str, str]:
     """SHA-256 of every file of a finished run but the record, which names the folder."""
     files = sorted(p for p in folder.rglob("*") if p.is_file() and p.name != "run.json")
-    return {p.relative_to(folder).as_posix(): hashlib.sha256(p.read_bytes()).hexdigest()
-            for p in files}
+    return {
+        p.relative_to(folder).as_posix(): hashlib.sha256(p.read_bytes()).hexdigest() for p in files
+    }
 
 
-def run(folder: Path, name: str, tile: int, workers: int, scheduler: str = "threads",
-        block: int = 16, **tables) -> dict[str, str]:
+def run(
+    folder: Path,
+    name: str,
+    tile: int,
+    workers: int,
+    scheduler: str = "threads",
+    block: int = 16,
+    **tables,
+) -> dict[str, str]:
     output = {"folder": str(folder / name)} | tables.pop("output", {})
     content = regions.tables(folder, zones={"file": "zones.gpkg"}, output=output, **tables)
     config = regions.write_config(folder, content, name)
@@ -39,7 +47,8 @@ def run(folder: Path, name: str, tile: int, workers: int, scheduler: str = "thre
     # Tests cut smaller blocks than a config may ask for.
     table = found.run.model_copy(update={"tile": tile, "workers": workers, "scheduler": scheduler})
     found = type(found)(
-        found.tables.model_copy(update={"run": table}), found.source, found.base, found.lines)
+        found.tables.model_copy(update={"run": table}), found.source, found.base, found.lines
+    )
     return hashes(saltrise.run(found, block=block).folder)
 
 
@@ -54,9 +63,17 @@ def stars(random: np.random.Generator, size: float) -> dict[str, Polygon]:
     return zones
 
 
-@settings(max_examples=8, deadline=None, phases=[Phase.generate], suppress_health_check=list(HealthCheck))
-@given(st.integers(0, 1000), st.integers(17, 90), st.integers(17, 90),
-       st.sampled_from([16, 32, 48, 64]), st.integers(1, 3), st.booleans())
+@settings(
+    max_examples=8, deadline=None, phases=[Phase.generate], suppress_health_check=list(HealthCheck)
+)
+@given(
+    st.integers(0, 1000),
+    st.integers(17, 90),
+    st.integers(17, 90),
+    st.sampled_from([16, 32, 48, 64]),
+    st.integers(1, 3),
+    st.booleans(),
+)
 def test_any_tile_and_any_workers_give_the_same_bytes(
     seed: int, width: int, height: int, tile: int, workers: int, warped: bool
 ) -> None:
@@ -88,8 +105,7 @@ def test_real_tiles_of_512_1024_2048_give_the_same_bytes(tmp_path: Path, assembl
     regions.write_fields(tmp_path, regions.fields((1100, 1300), random))
     regions.write_zones(tmp_path / "zones.gpkg", stars(random, 30_000.0))
     found = [
-        run(tmp_path, f"t{tile}w{workers}", tile, workers, block=512,
-            output={"assembly": assembly})
+        run(tmp_path, f"t{tile}w{workers}", tile, workers, block=512, output={"assembly": assembly})
         for tile, workers in ((512, 1), (1024, 2), (2048, 1))
     ]
     assert found[0] == found[1] == found[2]
@@ -104,10 +120,10 @@ def test_a_mosaic_of_tiles_is_the_raster(tmp_path: Path) -> None:
     for i, rows in enumerate((slice(0, 23), slice(23, 50))):
         for j, cols in enumerate((slice(0, 17), slice(17, 60))):
             corner = regions.place(regions.WEST + 30 * cols.start, regions.NORTH - 30 * rows.start)
-            regions.write_raster(tmp_path / f"part_{i}{j}.tif", values["depth"][rows, cols], corner,
-                                 nodata=-9999)
-    assert run(tmp_path, "parts", tile=32, workers=1,
-               water_table={"depth": "part_*.tif"}) == whole
+            regions.write_raster(
+                tmp_path / f"part_{i}{j}.tif", values["depth"][rows, cols], corner, nodata=-9999
+            )
+    assert run(tmp_path, "parts", tile=32, workers=1, water_table={"depth": "part_*.tif"}) == whole
 
 
 def test_the_assembled_layer_holds_what_gdals_own_driver_writes(tmp_path: Path) -> None:
@@ -115,11 +131,12 @@ def test_the_assembled_layer_holds_what_gdals_own_driver_writes(tmp_path: Path) 
     regions.write_fields(tmp_path, regions.fields((700, 1100), random))
     regions.write_zones(tmp_path / "zones.gpkg", stars(random, 30_000.0))
     for way in ("copy", "gdal"):
-        run(tmp_path, way, 512, 2, block=512,
-            output={"assembly": way})
+        run(tmp_path, way, 512, 2, block=512, output={"assembly": way})
     for path in sorted((tmp_path / "copy" / "layers").iterdir()):
-        with (rasterio.open(path) as ours,
-              rasterio.open(tmp_path / "gdal" / "layers" / path.name) as theirs):
+        with (
+            rasterio.open(path) as ours,
+            rasterio.open(tmp_path / "gdal" / "layers" / path.name) as theirs,
+        ):
             np.testing.assert_array_equal(ours.read(1), theirs.read(1))
             assert ours.profile == theirs.profile
             assert ours.overviews(1) == theirs.overviews(1)

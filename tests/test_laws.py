@@ -4,17 +4,23 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-import reference
 from hypothesis import given
 from hypothesis import strategies as st
-from published import table
 from scipy.integrate import quad, solve_ivp
 
+import reference
+from published import table
 from saltrise.physics import laws
 
 SOILS = [
-    (row["set"], row["texture"], float(row["he_cm_or_1/alpha"]), float(row["N_or_n"]),
-     float(row["Ks_cm_d"]), row)
+    (
+        row["set"],
+        row["texture"],
+        float(row["he_cm_or_1/alpha"]),
+        float(row["N_or_n"]),
+        float(row["Ks_cm_d"]),
+        row,
+    )
     for row in table("steady_evaporation")
 ]
 B = st.floats(0.5, 50.0)
@@ -42,7 +48,9 @@ def test_evaporation_falls_with_depth_and_grows_with_ks_and_air_entry(
 @given(DEPTH, ENTRY, B, KS)
 def test_scaling_lengths_and_rates_changes_nothing(depth, entry, b, ks) -> None:
     rate = laws.max_evaporation(depth, entry, b, ks)
-    assert laws.max_evaporation(7 * depth, 7 * entry, b, 3 * ks) == pytest.approx(3 * rate, rel=1e-11)
+    assert laws.max_evaporation(7 * depth, 7 * entry, b, 3 * ks) == pytest.approx(
+        3 * rate, rel=1e-11
+    )
 
 
 @given(ENTRY, B, KS, st.floats(1e-12, 1e6))
@@ -69,8 +77,9 @@ def test_depth_equals_quadrature_over_thirty_decades(texture: str) -> None:
         assert ours == pytest.approx(reference.rise_depth(rate, texture), rel=1e-9)
 
 
-@pytest.mark.parametrize(("name", "texture", "entry", "n", "ks", "row"), SOILS,
-                         ids=[f"{s[0]}-{s[1]}" for s in SOILS])
+@pytest.mark.parametrize(
+    ("name", "texture", "entry", "n", "ks", "row"), SOILS, ids=[f"{s[0]}-{s[1]}" for s in SOILS]
+)
 def test_reference_grid_of_four_sets(name, texture, entry, n, ks, row) -> None:
     # Computed by 30-digit quadrature outside this project; the table prints n to six digits, which
     # moves E by up to 2.5e-5 over the deepest water.
@@ -82,8 +91,9 @@ def test_reference_grid_of_four_sets(name, texture, entry, n, ks, row) -> None:
         assert depth == pytest.approx(float(row[f"crit_depth_cm_{rate}mm_d"]), rel=1e-4)
 
 
-@pytest.mark.parametrize(("texture", "depth"), [("sand", 0.3), ("loam", 1.5), ("clay", 1.0),
-                                                ("clay", 5.0)])
+@pytest.mark.parametrize(
+    ("texture", "depth"), [("sand", 0.3), ("loam", 1.5), ("clay", 1.0), ("clay", 5.0)]
+)
 def test_integrating_darcy_upward_reaches_the_depth(texture: str, depth: float) -> None:
     # dz/dh = 1 / (1 + E/K(h)) from the water table up; solve_ivp is the independent solver.
     entry, index, ks = reference.RAWLS[texture]
@@ -95,8 +105,9 @@ def test_integrating_darcy_upward_reaches_the_depth(texture: str, depth: float) 
         return [h / (1 + rate / float(laws.conductivity(h, *args)))]
 
     start = 1e-9
-    found = solve_ivp(climb, (np.log(start), np.log(1e9)), [start], rtol=1e-10, atol=1e-13,
-                      max_step=0.05)
+    found = solve_ivp(
+        climb, (np.log(start), np.log(1e9)), [start], rtol=1e-10, atol=1e-13, max_step=0.05
+    )
     assert found.y[0, -1] == pytest.approx(depth, rel=1e-6)
 
 
@@ -141,8 +152,9 @@ def test_the_closed_form_is_a_limit_not_the_answer() -> None:
     assert far == pytest.approx(1, abs=1e-6)
 
 
-@pytest.mark.parametrize(("entry_kpa", "b", "ks_cm_per_h", "printed"),
-                         [(2.6, 5.2, 0.23, 3.2), (0.7, 1.7, 21.0, 0.4)])
+@pytest.mark.parametrize(
+    ("entry_kpa", "b", "ks_cm_per_h", "printed"), [(2.6, 5.2, 0.23, 3.2), (0.7, 1.7, 21.0, 0.4)]
+)
 def test_clay_loam_and_sand_over_one_metre(entry_kpa, b, ks_cm_per_h, printed) -> None:
     # Common practice, no single source: 1 kPa is about 10.2 cm of water; such a clay loam lifts at
     # most about 3.2 mm/day over 1 m, such a sand far less, about 0.4 (10 %: "about").

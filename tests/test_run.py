@@ -11,12 +11,12 @@ import geopandas
 import numpy as np
 import pytest
 import rasterio
-import reference
-import regions
 import tifffile
 from rio_cogeo.cogeo import cog_validate
 from shapely.geometry import box
 
+import reference
+import regions
 import saltrise
 from saltrise.layers import LAYERS
 
@@ -27,12 +27,16 @@ SHAPE = (23, 31)
 def finished(tmp_path_factory: pytest.TempPathFactory) -> Path:
     folder = tmp_path_factory.mktemp("run")
     config = regions.small_region(
-        folder, SHAPE, zones={"file": "zones.gpkg"}, output={"precision": "full"})
+        folder, SHAPE, zones={"file": "zones.gpkg"}, output={"precision": "full"}
+    )
     west, north, cell = regions.WEST, regions.NORTH, regions.CELL
-    regions.write_zones(folder / "zones.gpkg", {
-        "a": box(west, north - 12 * cell, west + 20.5 * cell, north),
-        "b": box(west + 20.5 * cell, north - 30 * cell, west + 31 * cell, north),
-    })
+    regions.write_zones(
+        folder / "zones.gpkg",
+        {
+            "a": box(west, north - 12 * cell, west + 20.5 * cell, north),
+            "b": box(west + 20.5 * cell, north - 30 * cell, west + 31 * cell, north),
+        },
+    )
     return saltrise.run(config, block=16).folder
 
 
@@ -44,8 +48,9 @@ def layer(folder: Path, name: str) -> np.ndarray:
 @cache
 def expected() -> dict[str, np.ndarray]:
     values = regions.fields(SHAPE, np.random.default_rng(1))
-    texture = np.array([[regions.CODES[c] for c in row] for row in values["texture"].tolist()],
-                       dtype=object)
+    texture = np.array(
+        [[regions.CODES[c] for c in row] for row in values["texture"].tolist()], dtype=object
+    )
     texture[texture == "not soil"] = None
     depth = np.where(values["depth"] == -9999, np.nan, values["depth"]).astype(float)
     tds = values["salinity"].astype(float) * 0.64
@@ -55,7 +60,9 @@ def expected() -> dict[str, np.ndarray]:
 def test_every_cell_of_every_layer_equals_the_reference(finished: Path) -> None:
     for name, wanted in expected().items():
         # Curves are within 1e-5 of exact; a margin is a difference of depths of metres.
-        np.testing.assert_allclose(layer(finished, name), wanted, rtol=1e-5, atol=1e-4, err_msg=name)
+        np.testing.assert_allclose(
+            layer(finished, name), wanted, rtol=1e-5, atol=1e-4, err_msg=name
+        )
 
 
 def test_rounded_layers_are_within_the_contracted_precision(tmp_path: Path) -> None:
@@ -128,7 +135,12 @@ def test_zone_layer_and_table_say_the_same(finished: Path) -> None:
 def test_the_record_tells_inputs_parameters_counts_and_limits(finished: Path) -> None:
     record = json.loads((finished / "run.json").read_text("utf-8"))
     assert {entry["file"] for entry in record["inputs"]} == {
-        "depth.tif", "texture.tif", "salinity.tif", "demand.tif", "zones.gpkg"}
+        "depth.tif",
+        "texture.tif",
+        "salinity.tif",
+        "demand.tif",
+        "zones.gpkg",
+    }
     assert all(len(entry["sha256"]) == 64 for entry in record["inputs"])
     counts = record["counts_cells"]
     masked = sum(v for k, v in counts.items() if k.startswith("no"))
@@ -137,7 +149,11 @@ def test_the_record_tells_inputs_parameters_counts_and_limits(finished: Path) ->
     classes = expected()["hazard_class"]
     assert counts["at_surface"] == (classes == 6).sum()
     assert {row["texture"] for row in record["parameters"]["classes"]} == {
-        "sand", "sandy loam", "loam", "clay"}
+        "sand",
+        "sandy loam",
+        "loam",
+        "clay",
+    }
     assert all("Rawls" in row["source"] for row in record["parameters"]["classes"])
     assert "run" not in record["config"]
     assert not any("second" in key for key in record)
@@ -145,7 +161,11 @@ def test_the_record_tells_inputs_parameters_counts_and_limits(finished: Path) ->
 
 def test_only_finished_things_are_left(finished: Path) -> None:
     assert sorted(p.name for p in finished.iterdir()) == [
-        "layers", "run.json", "zones.csv", "zones.gpkg"]
+        "layers",
+        "run.json",
+        "zones.csv",
+        "zones.gpkg",
+    ]
     assert sorted(p.name for p in finished.parent.glob("out*")) == ["out"]
 
 
@@ -175,15 +195,25 @@ def test_the_same_region_in_other_units_has_the_same_answer(tmp_path, tables, fa
         values[name] = scaled
     regions.write_fields(tmp_path, values)
     config = regions.write_config(
-        tmp_path, regions.tables(tmp_path, output={"precision": "full"}, **tables))
+        tmp_path, regions.tables(tmp_path, output={"precision": "full"}, **tables)
+    )
     folder = saltrise.run(config).folder
     for name, wanted in expected().items():
         np.testing.assert_allclose(layer(folder, name), wanted, rtol=1e-5, atol=1e-4, err_msg=name)
 
 
 def test_depth_as_ground_minus_elevation(tmp_path: Path) -> None:
-    config = regions.small_region(tmp_path, SHAPE, output={"precision": "full"}, water_table={
-        "depth": None, "elevation": "level.tif", "ground": 250.0, "ground_accuracy": 0.2})
+    config = regions.small_region(
+        tmp_path,
+        SHAPE,
+        output={"precision": "full"},
+        water_table={
+            "depth": None,
+            "elevation": "level.tif",
+            "ground": 250.0,
+            "ground_accuracy": 0.2,
+        },
+    )
     depth = regions.fields(SHAPE, np.random.default_rng(1))["depth"].astype(float)
     level = np.where(depth == -9999, -9999, 250.0 - depth)
     regions.write_raster(tmp_path / "level.tif", level, nodata=-9999)
@@ -197,9 +227,16 @@ def test_numbers_stand_for_rasters_of_that_number(tmp_path: Path) -> None:
     values = regions.fields(SHAPE, np.random.default_rng(1)) | ones
     regions.write_fields(tmp_path, values)
     rasters = saltrise.run(regions.write_config(tmp_path, regions.tables(tmp_path))).folder
-    numbers = regions.write_config(tmp_path, regions.tables(
-        tmp_path, groundwater={"salinity": 4.0}, climate={"potential_evaporation": 1500.0},
-        output={"folder": str(tmp_path / "numbers")}), "numbers")
+    numbers = regions.write_config(
+        tmp_path,
+        regions.tables(
+            tmp_path,
+            groundwater={"salinity": 4.0},
+            climate={"potential_evaporation": 1500.0},
+            output={"folder": str(tmp_path / "numbers")},
+        ),
+        "numbers",
+    )
     numbers = saltrise.run(numbers).folder
     for name in LAYERS:
         np.testing.assert_array_equal(layer(rasters, name), layer(numbers, name))

@@ -12,8 +12,26 @@ from saltrise.settings import parse_settings
 from saltrise.settings.model import TABLES
 
 FULL = (Path(__file__).parent.parent / "config" / "velith.toml").read_text("utf-8")
-VALUES = ["1", "-1", "0", "nan", "inf", "true", '""', '"text"', "[]", "[1, 2]", "{}", "1979-05-27",
-          '["a", 1]', "{a = 1}", "99999999999999999999", '"' + "x" * 500 + '"', "[[1]]", "-0.0"]
+VALUES = [
+    "1",
+    "-1",
+    "0",
+    "nan",
+    "inf",
+    "true",
+    '""',
+    '"text"',
+    "[]",
+    "[1, 2]",
+    "{}",
+    "1979-05-27",
+    '["a", 1]',
+    "{a = 1}",
+    "99999999999999999999",
+    '"' + "x" * 500 + '"',
+    "[[1]]",
+    "-0.0",
+]
 
 
 def mutations(seed: int) -> str:

@@ -6,8 +6,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from published import table
 
+from published import table
 from saltrise.errors import InputError
 from saltrise.io.soil_tables import load_soil_set, parse_soil_set, shipped_sets
 from saltrise.physics.soils import TEXTURES, soil_for
@@ -17,7 +17,10 @@ HEAD = "texture,air_entry_cm,b,ks_cm_per_day,source\n"
 
 def test_three_sets_ship_each_with_eleven_classes_and_a_source_on_every_row() -> None:
     assert shipped_sets() == (
-        "clapp-hornberger1978", "clapp-hornberger1978-arithmetic", "rawls1982")
+        "clapp-hornberger1978",
+        "clapp-hornberger1978-arithmetic",
+        "rawls1982",
+    )
     for name in shipped_sets():
         rows = load_soil_set(name, Path()).rows
         assert set(rows) == set(TEXTURES) - {"silt"}
@@ -67,7 +70,8 @@ def test_clapp_hornberger1978_equals_the_printed_table() -> None:
         assert one.ks_mm_per_day == pytest.approx(float(printed["Ks_cm_min"]) * 14400, rel=1e-12)
         # The table prints Ks in cm/min and cm/s; they agree to the digits printed.
         assert float(printed["Ks_cm_min"]) / 60 == pytest.approx(
-            float(printed["Ks_cm_s"]), rel=0.007)
+            float(printed["Ks_cm_s"]), rel=0.007
+        )
 
 
 def test_cosby1984_in_ln_and_log10_is_one_regression() -> None:
@@ -96,21 +100,24 @@ def test_a_users_csv_works_like_a_shipped_set(tmp_path: Path) -> None:
     assert (mine.name, row.air_entry_m, row.b, row.ks_mm_per_day) == ("mine", 0.2, 5.0, 100.0)
 
 
-@pytest.mark.parametrize(("text", "words"), [
-    ("", "is empty"),
-    (HEAD, "has no rows"),
-    (HEAD.replace("b,", ""), "missing column b"),
-    (HEAD.replace("ks_cm_per_day", "ks_cm_day"), "did you mean 'ks_cm_per_day'"),
-    (HEAD.replace(",", ";"), "separated by commas"),
-    (HEAD + "sand,7,1.7,504", "mine.csv:2: has 4 cells, the header has 5"),
-    (HEAD + "sandy,7,1.7,504,me", "mine.csv:2: texture: is 'sandy'"),
-    (HEAD + "sand,7,1.7,504,me\nsand,7,1.7,504,me", "mine.csv:3: texture: 'sand' has a row"),
-    (HEAD + "sand,x,1.7,504,me", "mine.csv:2: air_entry_cm: is 'x', must be a number"),
-    (HEAD + "sand,7,1.7,,me", "ks_cm_per_day: is ''"),
-    (HEAD + "sand,-7,1.7,504,me", "air_entry_cm: is -7, must be from"),
-    (HEAD + "sand,7,nan,504,me", "b: is nan"),
-    (HEAD + "sand,7,1.7,504,", "source: is empty"),
-])
+@pytest.mark.parametrize(
+    ("text", "words"),
+    [
+        ("", "is empty"),
+        (HEAD, "has no rows"),
+        (HEAD.replace("b,", ""), "missing column b"),
+        (HEAD.replace("ks_cm_per_day", "ks_cm_day"), "did you mean 'ks_cm_per_day'"),
+        (HEAD.replace(",", ";"), "separated by commas"),
+        (HEAD + "sand,7,1.7,504", "mine.csv:2: has 4 cells, the header has 5"),
+        (HEAD + "sandy,7,1.7,504,me", "mine.csv:2: texture: is 'sandy'"),
+        (HEAD + "sand,7,1.7,504,me\nsand,7,1.7,504,me", "mine.csv:3: texture: 'sand' has a row"),
+        (HEAD + "sand,x,1.7,504,me", "mine.csv:2: air_entry_cm: is 'x', must be a number"),
+        (HEAD + "sand,7,1.7,,me", "ks_cm_per_day: is ''"),
+        (HEAD + "sand,-7,1.7,504,me", "air_entry_cm: is -7, must be from"),
+        (HEAD + "sand,7,nan,504,me", "b: is nan"),
+        (HEAD + "sand,7,1.7,504,", "source: is empty"),
+    ],
+)
 def test_faults_name_row_column_and_value(text: str, words: str) -> None:
     with pytest.raises(InputError) as caught:
         parse_soil_set(text.encode(), "mine", "mine.csv")

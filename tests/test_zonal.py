@@ -77,8 +77,15 @@ def test_zones_that_partition_the_region_add_up_to_it(seed: int, width: int, hei
     parts = [p for p in parts if p.area > 0]
     totals = totals_of(grid, parts, seed)
     table, region = table_of(totals, len(parts)), region_figures(totals)
-    for column in ("salt_load_t_per_year", "assessed_ha", "nodata_ha", "too_shallow_ha",
-                   "high_ha", "depth_1_to_2_ha", "at_surface_salt_load_t_per_year"):
+    for column in (
+        "salt_load_t_per_year",
+        "assessed_ha",
+        "nodata_ha",
+        "too_shallow_ha",
+        "high_ha",
+        "depth_1_to_2_ha",
+        "at_surface_salt_load_t_per_year",
+    ):
         assert sum(table[column]) == pytest.approx(region[column], rel=1e-9, abs=1e-12)
 
 
@@ -106,13 +113,17 @@ def test_region_figures_equal_plain_sums() -> None:
     total = area[assessed].sum()
     assert figures["assessed_ha"] == pytest.approx(total / 1e4, rel=1e-12)
     assert figures["depth_mean_m"] == pytest.approx(
-        (depth * area)[assessed].sum() / total, rel=1e-12)
+        (depth * area)[assessed].sum() / total, rel=1e-12
+    )
     assert figures["salt_load_t_per_year"] == pytest.approx(
-        (load * area)[assessed].sum() / 1e4, rel=1e-12)
+        (load * area)[assessed].sum() / 1e4, rel=1e-12
+    )
     assert figures["depth_2_to_3_ha"] == pytest.approx(
-        area[assessed & (depth >= 2) & (depth < 3)].sum() / 1e4, rel=1e-12)
+        area[assessed & (depth >= 2) & (depth < 3)].sum() / 1e4, rel=1e-12
+    )
     assert figures["too_shallow_ha"] == pytest.approx(
-        area[assessed & (margin < 0)].sum() / 1e4, rel=1e-12)
+        area[assessed & (margin < 0)].sum() / 1e4, rel=1e-12
+    )
     assert figures["at_surface_ha"] == pytest.approx(area[classes == 6].sum() / 1e4, rel=1e-12)
     assert figures["nodata_ha"] == pytest.approx(area[classes == 0].sum() / 1e4, rel=1e-12)
     order = np.argsort(load[assessed])
@@ -124,10 +135,17 @@ def test_region_figures_equal_plain_sums() -> None:
 
 
 def test_percentiles_know_zero() -> None:
-    values = ZoneValues(*(np.array([2.0] * 4) for _ in range(2)), np.array([0.0, 0.0, 0.0, 8.0]),
-                        np.zeros(4), np.full(4, 2.0), np.array([1, 1, 1, 3], dtype=np.uint8))
+    values = ZoneValues(
+        *(np.array([2.0] * 4) for _ in range(2)),
+        np.array([0.0, 0.0, 0.0, 8.0]),
+        np.zeros(4),
+        np.full(4, 2.0),
+        np.array([1, 1, 1, 3], dtype=np.uint8),
+    )
     nothing = BlockCover(np.empty(0, np.int32), np.empty(0, np.int32), np.empty(0))
-    figures = region_figures(merge_partials([block_partial(nothing, np.full(4, 9.0), values, UNIT)]))
+    figures = region_figures(
+        merge_partials([block_partial(nothing, np.full(4, 9.0), values, UNIT)])
+    )
     assert figures["salt_load_p50_t_per_ha_per_year"] == 0.0
     assert figures["salt_load_p90_t_per_ha_per_year"] == pytest.approx(8.0, rel=0.005)
     assert figures["critical_depth_p80_m"] == 0.0
@@ -163,8 +181,9 @@ def test_ranks_go_from_the_worst_ties_by_id_and_need_sixty_percent() -> None:
     assert sorted(r for r in half["rank"] if r) == [1, 2, 3, 4]
 
 
-@pytest.mark.parametrize(("rank_by", "column"), [
-    ("total", "salt_load_t_per_year"), ("too_shallow", "too_shallow_ha")])
+@pytest.mark.parametrize(
+    ("rank_by", "column"), [("total", "salt_load_t_per_year"), ("too_shallow", "too_shallow_ha")]
+)
 def test_other_rankings(rank_by: str, column: str) -> None:
     strips = [box(5e5 + 150 * k, 6e6 - 600, 5e5 + 150 * (k + 1), 6e6) for k in range(4)]
     table = table_of(totals_of(grid_of(20, 20), strips), 4, strips[0].area, rank_by)
@@ -177,8 +196,12 @@ def test_a_zone_without_cells_has_zeros_and_empty_means() -> None:
     table = table_of(totals, 1)
     assert table["assessed_ha"] == [0.0]
     assert table["salt_load_t_per_year"] == [0.0]
-    for column in ("depth_mean_m", "salt_load_mean_t_per_ha_per_year",
-                   "salt_load_p50_t_per_ha_per_year", "rank"):
+    for column in (
+        "depth_mean_m",
+        "salt_load_mean_t_per_ha_per_year",
+        "salt_load_p50_t_per_ha_per_year",
+        "rank",
+    ):
         assert table[column] == [None]
     assert 0 not in totals.sums
     assert REGION in totals.sums
@@ -186,7 +209,8 @@ def test_a_zone_without_cells_has_zeros_and_empty_means() -> None:
 
 def test_columns_are_the_contract_in_order() -> None:
     expected = (
-        "zone_id, name, area_ha, assessed_ha, assessed_share, at_surface_ha, nodata_ha, outside_ha, "
+        "zone_id, name, area_ha, assessed_ha, assessed_share, at_surface_ha, nodata_ha, "
+        "outside_ha, "
         "depth_mean_m, depth_under_1_ha, depth_1_to_2_ha, depth_2_to_3_ha, depth_over_3_ha, "
         "evaporation_mean_mm_per_year, salt_load_t_per_year, salt_load_mean_t_per_ha_per_year, "
         "salt_load_p10_t_per_ha_per_year, salt_load_p50_t_per_ha_per_year, "

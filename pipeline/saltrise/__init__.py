@@ -5,8 +5,8 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from saltrise.result import Result
     from saltrise.job import run
+    from saltrise.result import Result
 
 __all__ = ["Result", "run"]
 

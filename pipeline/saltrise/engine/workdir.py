@@ -98,22 +98,27 @@ def claimed(workdir: Workdir) -> Iterator[None]:
     InputError
         Another run holds it, or the folder cannot be made.
     """
+    lock = FileLock(str(workdir.unfinished) + ".lock", timeout=0)
     try:
         workdir.final.parent.mkdir(parents=True, exist_ok=True)
-        lock = FileLock(str(workdir.unfinished) + ".lock", timeout=0)
-        with lock:
-            workdir.unfinished.mkdir(exist_ok=True)
-            yield
-            Path(lock.lock_file).unlink(missing_ok=True)
+        workdir.unfinished.mkdir(exist_ok=True)
+        lock.acquire()
     except Timeout as error:
         raise InputError(
             f"{workdir.unfinished}: another run is working in this folder; wait for it or name "
             "another output.folder"
         ) from error
-    except PermissionError as error:
+    except OSError as error:
         raise InputError(
-            f"{workdir.final}: cannot be written ({error.strerror}); name another output.folder"
+            f"{workdir.final}: cannot be written ({error.strerror or error}); name another "
+            "output.folder"
         ) from error
+    try:
+        yield
+    finally:
+        # Unlinked while held, so that no other run can hold a name that is about to go.
+        Path(lock.lock_file).unlink(missing_ok=True)
+        lock.release()
 
 
 def fresh(workdir: Workdir) -> None:
