@@ -16,8 +16,15 @@ from scipy.optimize import brentq
 
 RAWLS = {
     "sand": (7.26, 0.592, 21.00),
+    "loamy sand": (8.69, 0.474, 6.11),
     "sandy loam": (14.66, 0.322, 2.59),
     "loam": (11.15, 0.220, 1.32),
+    "silt loam": (20.76, 0.211, 0.68),
+    "sandy clay loam": (28.08, 0.250, 0.43),
+    "clay loam": (25.89, 0.194, 0.23),
+    "silty clay loam": (32.56, 0.151, 0.15),
+    "sandy clay": (29.17, 0.168, 0.12),
+    "silty clay": (34.19, 0.127, 0.09),
     "clay": (37.30, 0.131, 0.06),
 }
 BREAKS = (1.0, 5.0, 15.0, 30.0)

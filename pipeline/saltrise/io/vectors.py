@@ -72,6 +72,13 @@ def read_zones(settings: Settings, grid: Grid) -> Zones:
     if faults:
         raise InputError(*faults)
     geometries, warnings = _mended(frame.geometry.to_list(), ids)
+    flat = [id_ for id_, geometry in zip(ids, geometries, strict=True) if geometry.area == 0]
+    if flat:
+        raise InputError(
+            settings.fault(
+                "zones.file", f"zones must be polygons with an area, no area in zone {_some(flat)}"
+            )
+        )
     crs = pyproj.CRS(frame.crs)
     try:
         placed = [on_grid(geometry, crs, grid) for geometry in geometries]
