@@ -40,7 +40,7 @@ def random_values(size: int, random: np.random.Generator) -> ZoneValues:
     classes[depth <= 0.001] = 6
     classes[random.random(size) < 0.1] = 0
     for array in (depth, load):
-        array[classes == 0] = np.nan
+        array[classes == 0] = 7.5
     critical = random.uniform(0, 4, size)
     return ZoneValues(depth, load * 30, load, critical, depth - critical, classes)
 

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.layers import LAYERS
 from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, groundwater_evaporation
 from saltrise.physics.salt import critical_depth, salt_load
@@ -19,6 +20,9 @@ from saltrise.units import DAYS_PER_YEAR
 from saltrise.zonal import ZoneValues
 
 Array = NDArray[np.float64]
+
+CONTINUOUS = tuple(name for name, layer in LAYERS.items() if layer.continuous)
+"""Layers that hold quantities, not classes."""
 
 
 @dataclass(frozen=True)
@@ -57,18 +61,21 @@ class Recipe:
     constants: dict[str, float]
 
 
+_STRIP_CELLS = 1 << 15
+"""Cells treated at a time: some ten float64 arrays of them stay in a core's cache."""
+
+
 @dataclass(frozen=True)
 class BlockResult:
     """One block's answer before rounding.
 
-    `values` holds the continuous layers by name; where not `valid` their content means nothing.
-    `counts` are numbers of cells.
+    `values` holds the continuous layers by name; where not `valid` their content is finite but
+    means nothing. `counts` are numbers of cells.
     """
 
     values: dict[str, Array]
     hazard_class: NDArray[np.uint8]
     valid: NDArray[np.bool_]
-    surface: NDArray[np.bool_]
     depth: Array
     counts: dict[str, int]
 
@@ -107,33 +114,55 @@ def compute_block(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, in
     ValueError
         A texture code has no profile: the input changed since the survey.
     """
-    given = {
-        role: np.full(shape, value, dtype=np.float64) for role, value in recipe.constants.items()
-    }
-    given |= inputs
+    result = BlockResult(
+        {name: np.empty(shape) for name in CONTINUOUS},
+        np.empty(shape, dtype=np.uint8),
+        np.empty(shape, dtype=bool),
+        np.empty(shape),
+        {},
+    )
+    step = max(1, _STRIP_CELLS // shape[1])
+    for top in range(0, shape[0], step):
+        rows = slice(top, min(top + step, shape[0]))
+        _compute_strip(recipe, {role: v[rows] for role, v in inputs.items()}, result, rows)
+    return result
+
+
+def _compute_strip(
+    recipe: Recipe, inputs: dict[str, Array], result: BlockResult, rows: slice
+) -> None:
+    shape = result.depth[rows].shape
+    given = {role: np.full(shape, value) for role, value in recipe.constants.items()} | inputs
     depth = _depth(recipe, given)
     tds = given["salinity"] * recipe.tds_factor
     demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
-    profile = _profiles(recipe, given["texture"])
+    profile, no_texture = _profiles(recipe, given["texture"])
     missing = {
         "no_depth": ~np.isfinite(depth),
-        "no_texture": np.isnan(given["texture"]),
+        "no_texture": no_texture,
         "not_soil": profile < 0,
         "no_salinity": ~np.isfinite(tds),
         "no_potential_evaporation": ~np.isfinite(demand),
     }
     valid, counts = _masked(missing, shape)
-    with np.errstate(invalid="ignore"):
-        surface = valid & at_surface(depth)
-        values = _layers(recipe, profile, depth, tds, demand)
-        classes = recipe.scheme.classify(values[recipe.scheme.layer])
-        limited = valid & ~surface & (values["max_evaporation"] >= demand)
+    if not valid.all():
+        # Harmless numbers where there is no answer, so that sums may weigh them with 0.
+        gone = ~valid
+        profile[gone], depth[gone], tds[gone], demand[gone] = 0, 1.0, 0.0, 0.0
+    values = _layers(recipe, profile, depth, tds, demand)
+    classes = recipe.scheme.classify(values[recipe.scheme.layer])
+    surface = at_surface(depth)
+    limited = valid & ~surface & (values["max_evaporation"] >= demand)
     classes[surface] = SURFACE_CLASS
     classes[~valid] = 0
-    counts["at_surface"] = int(surface.sum())
-    counts["assessed"] = int(valid.sum()) - counts["at_surface"]
-    counts["demand_limited"] = int(limited.sum())
-    return BlockResult(values, classes, valid, surface, depth, counts)
+    counts["at_surface"] = int(np.count_nonzero(valid & surface))
+    counts["assessed"] = int(np.count_nonzero(valid)) - counts["at_surface"]
+    counts["demand_limited"] = int(np.count_nonzero(limited))
+    for name, target in result.values.items():
+        target[rows] = values[name]
+    result.hazard_class[rows], result.valid[rows], result.depth[rows] = classes, valid, depth
+    for reason, count in counts.items():
+        result.counts[reason] = result.counts.get(reason, 0) + count
 
 
 def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:
@@ -142,17 +171,20 @@ def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:
     return (given["ground"] - given["elevation"]) * recipe.depth_factor
 
 
-def _profiles(recipe: Recipe, texture: Array) -> NDArray[np.int32]:
-    known = np.where(np.isnan(texture), recipe.first_code, texture)
-    position = known.astype(np.int64) - recipe.first_code
+def _profiles(recipe: Recipe, texture: Array) -> tuple[NDArray[np.int32], NDArray[np.bool_]]:
+    """Profile of each cell, -1 where masked or without texture; and where there is no texture."""
+    missing = np.isnan(texture)
+    known = np.where(missing, recipe.first_code, texture)
+    position = known.astype(np.int64)
+    position -= recipe.first_code
     size = recipe.profile_of_code.size
     if position.min() < 0 or position.max() >= size:
         raise ValueError(f"texture code {known.min():g} or {known.max():g} is not mapped")
     profile: NDArray[np.int32] = recipe.profile_of_code[position]
-    profile[np.isnan(texture)] = -1
     if profile.min() < -1:
         raise ValueError(f"texture code {known.flat[int(np.argmin(profile))]:g} is not mapped")
-    return profile
+    profile[missing] = -1
+    return profile, missing
 
 
 def _masked(
@@ -162,8 +194,9 @@ def _masked(
     valid = np.ones(shape, dtype=bool)
     counts = {"cells": valid.size}
     for reason, where in missing.items():
-        counts[reason] = int((valid & where).sum())
-        valid &= ~where
+        counts[reason] = int(np.count_nonzero(valid & where))
+        if counts[reason]:
+            valid &= ~where
     return valid, counts
 
 

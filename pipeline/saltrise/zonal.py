@@ -10,7 +10,6 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable
 from dataclasses import dataclass, field
-from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,7 +18,6 @@ from saltrise.coverage import BlockCover
 
 Floats = NDArray[np.float64]
 Whole = NDArray[np.int64]
-_Kind = TypeVar("_Kind", bound=np.generic)
 
 REGION = -1
 """Zone number of the whole region."""
@@ -49,7 +47,7 @@ _COMPACT = 2_000_000
 class ZoneValues:
     """One block's values before rounding, flat, in row-major order; `depth_m` [m],
     `evaporation_mm_per_year`, `salt_load` [t/ha/year], `critical_depth` and `depth_margin` [m].
-    Where `hazard_class` is 0 the others mean nothing.
+    Where `hazard_class` is 0 the others are finite but mean nothing.
     """
 
     depth_m: Floats
@@ -115,46 +113,68 @@ def block_partial(
         Area of one count in the histograms.
     """
     area = area_m2.ravel()
-    prepared = _Prepared.of(values)
-    parts = [_sums(prepared, REGION * np.ones(1, np.int64), area, None, None, unit_m2)]
-    if cover.cell.size:
-        zones, local = np.unique(cover.zone, return_inverse=True)
-        weight = cover.fraction * area[cover.cell]
-        numbers = zones.astype(np.int64)
-        parts.append(_sums(prepared, numbers, weight, cover.cell, local, unit_m2))
-    return concat(parts)
+    block = _Prepared.of(values)
+    region = _sums(block, np.array([REGION]), area, None, None, unit_m2)
+    if not cover.cell.size:
+        return region
+    zones, local = np.unique(cover.zone, return_inverse=True)
+    numbers = zones.astype(np.int64)
+    if len(zones) == 1 and cover.cell.size == area.size and cover.fraction.min() == 1.0:
+        return concat([region, _renumbered(region, numbers[0])])
+    weight = cover.fraction * area[cover.cell]
+    return concat([region, _sums(block, numbers, weight, cover.cell, local, unit_m2)])
+
+
+def _renumbered(partial: ZonePartial, zone: np.int64) -> ZonePartial:
+    histogram = partial.histogram
+    return ZonePartial(
+        np.array([zone]),
+        partial.sums,
+        Histogram(
+            np.full_like(histogram.zone, zone), histogram.quantity, histogram.bin, histogram.weight
+        ),
+    )
 
 
 @dataclass(frozen=True)
 class _Prepared:
-    """What every zone of a block needs, made once."""
+    """What every zone of a block needs, made once: values, codes, and the span of the bins."""
 
-    code: Whole
-    group: Whole
-    weighed: tuple[Floats, ...]
-    bins: tuple[Whole, ...]
-    assessed: NDArray[np.bool_]
+    values: ZoneValues
+    code: NDArray[np.uint8]
+    low: tuple[int, ...]
+    span: tuple[int, ...]
 
     @classmethod
     def of(cls, values: ZoneValues) -> _Prepared:
-        hazard = values.hazard_class.astype(np.int64)
-        valid = hazard > 0
-        with np.errstate(invalid="ignore"):
-            depth = sum((values.depth_m >= edge).astype(np.int64) for edge in DEPTH_EDGES_M)
-            shallow = values.depth_margin < 0
-        code = np.where(valid, (hazard * DEPTHS + depth) * 2 + shallow, 0)
-        group = np.where(hazard == CLASSES - 1, 2, valid)
-        weighed = (
-            values.depth_m,
-            values.evaporation_mm_per_year,
-            values.salt_load,
-            values.depth_margin,
-        )
-        bins = tuple(
-            value.view(np.int64) >> _BIN_SHIFT
-            for value in (values.salt_load, values.critical_depth)
-        )
-        return cls(code, group.astype(np.int64), weighed, bins, group == 1)
+        code = np.empty(values.hazard_class.size, dtype=np.uint8)
+        low, high = [_NO_BIN] * len(QUANTITIES), [0] * len(QUANTITIES)
+        for part in _chunks(code.size):
+            depth = values.depth_m[part]
+            kind = values.hazard_class[part] * np.uint8(DEPTHS)
+            for edge in DEPTH_EDGES_M:
+                kind += depth >= edge
+            code[part] = kind * np.uint8(2) + (values.depth_margin[part] < 0)
+            for k, name in enumerate(QUANTITIES):
+                bins = _bins(getattr(values, name)[part])
+                # Less one and unsigned: zero, which has a place of its own, becomes the greatest.
+                low[k] = min(low[k], int((bins - 1).view(np.uint64).min()) + 1)
+                high[k] = max(high[k], int(bins.max()))
+        span = tuple(max(h - b, 0) + 2 for b, h in zip(low, high, strict=True))
+        return cls(values, code, tuple(low), span)
+
+
+_NO_BIN = 1 << 30
+_CHUNK = 1 << 15
+
+
+def _chunks(size: int) -> list[slice]:
+    """Runs of cells small enough that a core's cache holds their numbers."""
+    return [slice(a, min(a + _CHUNK, size)) for a in range(0, size, _CHUNK)]
+
+
+def _bins(values: Floats) -> Whole:
+    return values.view(np.int64) >> _BIN_SHIFT
 
 
 def _sums(
@@ -166,48 +186,63 @@ def _sums(
     unit_m2: float,
 ) -> ZonePartial:
     """Sums of the given zones; `cell` and `local` (its zone's position) are None for the region."""
+    count, values = len(zones), block.values
+    columns = np.zeros((count, _COLUMNS))
+    histograms = [np.zeros((count, span)) for span in block.span]
+    weighed = (
+        values.depth_m,
+        values.evaporation_mm_per_year,
+        values.salt_load,
+        values.depth_margin,
+    )
+    for part in _chunks(weight.size):
+        where = part if cell is None else cell[part]
+        zone = None if local is None or count == 1 else local[part]
+        area, hazard = weight[part], values.hazard_class[where]
+        columns[:, :_CODES] += _counted(block.code[where], zone, area, count, _CODES)
+        surface = hazard == CLASSES - 1
+        assessed = (hazard > 0) & ~surface
+        dry = area * assessed
+        for k, value in enumerate(weighed):
+            columns[:, _CODES + k] += _summed(dry * value[where], zone, count)
+        if surface.any():
+            load = area * surface * values.salt_load[where]
+            columns[:, -1] += _summed(load, zone, count)
+        # At least one count, so that a zone far smaller than a cell still has percentiles.
+        whole = np.maximum(np.rint(area / unit_m2), 1.0) * assessed
+        for k, name in enumerate(QUANTITIES):
+            place = np.maximum(_bins(getattr(values, name)[where]) - (block.low[k] - 1), 0)
+            # Whole numbers below 2^53 add up exactly in any order.
+            histograms[k] += _counted(place, zone, whole, count, block.span[k])
+    sparse = [_histogram(zones, k, block.low[k], found) for k, found in enumerate(histograms)]
+    return ZonePartial(zones, columns, _join(sparse))
 
-    def taken(array: NDArray[_Kind]) -> NDArray[_Kind]:
-        return array if cell is None else array[cell]
 
-    count = len(zones)
-    shift: Whole = np.zeros(1, np.int64) if local is None else local.astype(np.int64)
-    code = taken(block.code) + shift * _CODES
-    columns = np.empty((count, _COLUMNS))
-    columns[:, :_CODES] = np.bincount(code, weight, count * _CODES).reshape(count, _CODES)
-    group = taken(block.group) + shift * 3
-    for k, value in enumerate(block.weighed):
-        # Groups keep apart what is assessed, at the surface and without value.
-        by_group = np.bincount(group, weight * taken(value), count * 3).reshape(count, 3)
-        columns[:, _CODES + k] = by_group[:, 1]
-        if SUMS[k] == "salt_load":
-            columns[:, -1] = by_group[:, 2]
-    keep = taken(block.assessed)
-    # At least one count, so that a zone far smaller than a cell still has percentiles.
-    whole = np.maximum(np.rint(weight[keep] / unit_m2), 1.0)
-    where = np.zeros(whole.size, np.int64) if local is None else local[keep]
-    parts = [
-        _histogram(zones, where, quantity, taken(bins)[keep], whole)
-        for quantity, bins in enumerate(block.bins)
-    ]
-    return ZonePartial(zones, columns, _join(parts))
+def _summed(values: Floats, zone: NDArray[np.intp] | None, count: int) -> Floats:
+    sums = values.sum(keepdims=True) if zone is None else np.bincount(zone, values, count)
+    return np.asarray(sums, dtype=np.float64)
 
 
-def _histogram(zones: Whole, local: Whole, quantity: int, bins: Whole, weight: Floats) -> Histogram:
-    zero = bins == 0
-    low = int(bins.min(where=~zero, initial=1 << 30))
-    span = max(int(bins.max(initial=0)) - low, 0) + 2
-    # Zero sits next to the lowest bin; its own place would make the table 2^18 wide.
-    place = np.where(zero, 0, bins - low + 1) + local * span
-    # Whole numbers below 2^53 add up exactly in any order.
-    counts = np.bincount(place, weight, len(zones) * span)
-    filled = np.flatnonzero(counts)
-    zone, position = np.divmod(filled, span)
+def _counted(
+    code: NDArray[np.uint8] | Whole,
+    zone: NDArray[np.intp] | None,
+    weight: Floats,
+    count: int,
+    width: int,
+) -> Floats:
+    """Weights by zone (rows) and code (columns)."""
+    place = code if zone is None else zone * width + code
+    counts = np.bincount(place, weight, count * width).reshape(count, width)
+    return np.asarray(counts, dtype=np.float64)
+
+
+def _histogram(zones: Whole, quantity: int, low: int, counts: Floats) -> Histogram:
+    zone, position = np.nonzero(counts)
     return Histogram(
         zones[zone],
-        np.full(filled.size, quantity, dtype=np.int64),
+        np.full(zone.size, quantity, dtype=np.int64),
         np.where(position == 0, 0, position - 1 + low).astype(np.int64),
-        counts[filled].astype(np.int64),
+        counts[zone, position].astype(np.int64),
     )
 
 
