@@ -115,8 +115,7 @@ def run(config: Path, force: bool, workers: int | None, quiet: bool, verbose: bo
 @_quiet
 def check(config: Path, workers: int | None, quiet: bool) -> None:
     """Survey every input of a region and say what a run would cost; write nothing."""
-    from saltrise.engine.estimate import estimate_cost
-    from saltrise.job import Silent, check_output, survey
+    from saltrise.job import Silent, check_output, doubts, price, survey
 
     settings = _settings(config, workers)
     progress = None if quiet else console.Progress()
@@ -126,7 +125,7 @@ def check(config: Path, workers: int | None, quiet: bool) -> None:
         if progress:
             progress.close()
     if not quiet:
-        console.print_survey(region, estimate_cost(region), check_output(settings))
+        console.print_survey(region, doubts(region), price(region), check_output(settings))
 
 
 @commands.command()

@@ -31,14 +31,17 @@ class Progress:
         self._stream = stream
         self._live = stream.isatty()
         self._name = ""
-        self._total = self._done = self._cells = 0
+        self._total = self._done = self._earlier = self._cells = 0
         self._began = self._drawn = 0.0
 
-    def stage(self, name: str, total: int, cells: int = 0) -> None:
-        """Begin a stage of `total` steps that treats `cells` cells."""
+    def stage(self, name: str, total: int, cells: int = 0, done: int = 0) -> None:
+        """Begin a stage of `total` steps, `done` of them by an earlier run; of `cells` cells."""
         self._close()
-        self._name, self._total, self._done, self._cells = name, total, 0, cells
+        self._name, self._total, self._done, self._cells = name, total, done, cells
+        self._earlier = done
         self._began = time.monotonic()
+        if done:
+            print(f"{name}: {done} of {total} done by an earlier run", file=self._stream)
 
     def advance(self) -> None:
         """One step of the stage is done."""
@@ -56,9 +59,10 @@ class Progress:
     def _line(self) -> str:
         text = f"{self._name}: {self._done}/{self._total}"
         spent = time.monotonic() - self._began
-        if self._cells and spent > 0:
-            rate = self._cells * self._done / self._total / spent
-            left = spent * (self._total - self._done) / self._done
+        made = self._done - self._earlier
+        if self._cells and spent > 0 and made:
+            rate = self._cells * made / self._total / spent
+            left = spent * (self._total - self._done) / made
             text += f", {_count(rate)} cells/s, {_duration(left)} left"
         return text
 
@@ -150,7 +154,7 @@ def print_details(result: Result) -> None:
         print(f"{name}: {found['minimum']:.6g} to {found['maximum']:.6g}, mean {found['mean']:.6g}")
 
 
-def print_survey(region: Region, estimate: Estimate, output: str) -> None:
+def print_survey(region: Region, doubts: list[str], estimate: Estimate, output: str) -> None:
     """Print what `check` found: grid, inputs, ranges, codes, profiles, zones, cost, doubts."""
     grid = region.inputs.grid
     print(f"{region.settings.title}: ready to run")
@@ -177,7 +181,7 @@ def print_survey(region: Region, estimate: Estimate, output: str) -> None:
     )
     if output:
         print(f"Output: {output}")
-    for text in region.warnings:
+    for text in (*region.warnings, *doubts):
         print(f"Warning: {text}")
 
 

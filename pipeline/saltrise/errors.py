@@ -28,3 +28,10 @@ class InputError(SaltriseError):
 
 class RunError(SaltriseError):
     """The run failed for a reason outside the config: a broken file, a full disk."""
+
+
+class UnusableInputError(RunError):
+    """An input broke, or holds what it cannot hold, while tiles ran.
+
+    A survey of the whole region then tells whether the user has something to mend.
+    """

@@ -25,6 +25,10 @@ CONTINUOUS = tuple(name for name, layer in LAYERS.items() if layer.continuous)
 """Layers that hold quantities, not classes."""
 
 
+class UnmappedCodeError(ValueError):
+    """A texture code that no profile was made for."""
+
+
 @dataclass(frozen=True)
 class Recipe:
     """Everything but the rasters that decides a cell's answer.
@@ -111,7 +115,7 @@ def compute_block(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, in
 
     Raises
     ------
-    ValueError
+    UnmappedCodeError
         A texture code has no profile: the input changed since the survey.
     """
     result = BlockResult(
@@ -179,10 +183,12 @@ def _profiles(recipe: Recipe, texture: Array) -> tuple[NDArray[np.int32], NDArra
     position -= recipe.first_code
     size = recipe.profile_of_code.size
     if position.min() < 0 or position.max() >= size:
-        raise ValueError(f"texture code {known.min():g} or {known.max():g} is not mapped")
+        raise UnmappedCodeError(f"texture code {known.min():g} or {known.max():g} is not mapped")
     profile: NDArray[np.int32] = recipe.profile_of_code[position]
     if profile.min() < -1:
-        raise ValueError(f"texture code {known.flat[int(np.argmin(profile))]:g} is not mapped")
+        raise UnmappedCodeError(
+            f"texture code {known.flat[int(np.argmin(profile))]:g} is not mapped"
+        )
     profile[missing] = -1
     return profile, missing
 

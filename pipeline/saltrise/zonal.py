@@ -288,12 +288,14 @@ def pack(partials: list[ZonePartial]) -> dict[str, NDArray[np.generic]]:
     }
 
 
-def unpack(arrays: dict[str, NDArray[np.generic]]) -> ZonePartial:
-    """The partial that `pack` took apart."""
+def unpack(arrays: dict[str, NDArray[np.generic]], prefix: str = "") -> ZonePartial:
+    """The partial that `pack` took apart, its arrays' names behind a prefix."""
     names = ("hist_zone", "hist_quantity", "hist_bin", "hist_weight")
-    histogram = Histogram(*(arrays[name].astype(np.int64) for name in names))
+    histogram = Histogram(*(arrays[prefix + name].astype(np.int64) for name in names))
     return ZonePartial(
-        arrays["zone"].astype(np.int64), arrays["sums"].astype(np.float64), histogram
+        arrays[f"{prefix}zone"].astype(np.int64),
+        arrays[f"{prefix}sums"].astype(np.float64),
+        histogram,
     )
 
 

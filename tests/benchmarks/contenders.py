@@ -41,7 +41,9 @@ def saltrise(config: Path) -> None:
 def cog_floor(config: Path) -> None:
     """Our own reader and writer around a copy."""
     from saltrise.engine import region, tiles
+    from saltrise.engine.estimate import Estimate
     from saltrise.engine.survey import BlockScan, Range, Sighting
+    from saltrise.io.fingerprint import Fingerprint
     from saltrise.recipe import BlockResult
     from saltrise.zonal import Histogram, ZonePartial
 
@@ -50,12 +52,12 @@ def cog_floor(config: Path) -> None:
         roles = {"demand": "potential_evaporation"}
         values = {name: inputs[roles.get(role, role)] for name, role in LAYERS[:-1]}
         codes = np.nan_to_num(inputs["texture"]).astype(np.uint8)
-        return BlockResult(values, codes, valid, valid, inputs["depth"], {"cells": valid.size})
+        return BlockResult(values, codes, valid, inputs["depth"], {"cells": valid.size})
 
     nothing = np.zeros(0, np.int64)
     empty = ZonePartial(np.array([-1]), np.zeros((1, 61)), Histogram(*[nothing] * 4))
 
-    def unseen(inputs, *_arguments):
+    def unseen(inputs, *_arguments, **_options):
         seen = Range(1, 0, 1.0, 1.0, None)
         codes = {float(k): Sighting(1, 0, 0) for k in range(1, 12)}
         return BlockScan(dict.fromkeys(inputs.rasters, seen), codes, 1)
@@ -64,8 +66,10 @@ def cog_floor(config: Path) -> None:
         patch.object(tiles, "compute_block", copied),
         patch.object(tiles, "block_partial", lambda *_: empty),
         patch.object(tiles, "cell_areas", lambda *_: None),
+        patch.object(tiles, "_sound_ranges", lambda *_: {}),
         patch.object(region, "_scan", unseen),
-        patch("saltrise.job._fingerprints", lambda *_: {}),
+        patch("saltrise.engine.prints.fingerprint", lambda *_: Fingerprint(0, "", "")),
+        patch("saltrise.job.estimate_cost", lambda *_: Estimate(1, 0, 0, 0, 0)),
     ):
         saltrise(config)
 

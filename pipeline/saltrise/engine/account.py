@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import os
 import time
-from collections.abc import Mapping
 from dataclasses import asdict
 from datetime import UTC, datetime
 from importlib.metadata import version
@@ -12,10 +11,10 @@ from typing import Any
 
 import rasterio
 
+from saltrise.engine import findings
 from saltrise.engine.inputs import ROLES
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
-from saltrise.io.fingerprint import Fingerprint
 from saltrise.layers import LAYERS
 from saltrise.physics.soils import soil_for
 from saltrise.zone_table import region_figures
@@ -60,21 +59,19 @@ def layer_tags(region: Region, date: datetime) -> dict[str, str]:
 def run_record(
     region: Region,
     totals: Totals,
-    fingerprints: Mapping[str, Fingerprint],
+    inputs: list[dict[str, Any]],
     date: datetime,
     worst: list[dict[str, Any]],
 ) -> dict[str, Any]:
     """Content of run.json; equal for equal inputs, versions and date."""
+    doubts = findings.warnings(region.settings, totals.ranges)
     grid = region.inputs.grid
     return {
         "program": "saltrise",
         "date": date.strftime("%Y-%m-%dT%H:%M:%SZ"),
         "title": region.settings.title,
         "config": region.settings.resolved(),
-        "inputs": [
-            {"file": path, "size_bytes": print_.size, "sha256": print_.sha256}
-            for path, print_ in fingerprints.items()
-        ],
+        "inputs": inputs,
         "alignment": alignment(region),
         "grid": {
             "crs": grid.crs_wkt,
@@ -92,7 +89,7 @@ def run_record(
             name: {"unit": LAYERS[name].unit, "meaning": LAYERS[name].meaning}
             for name in region.settings.output.layers
         },
-        "warnings": list(region.warnings),
+        "warnings": [*region.warnings, *doubts],
         "use_limits": list(CAUTIONS),
         "versions": versions(),
     }

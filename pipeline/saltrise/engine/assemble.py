@@ -6,12 +6,11 @@ from collections.abc import Mapping
 from pathlib import Path
 
 import numpy as np
-from numpy.typing import NDArray
 
 from saltrise.engine.coarse import coarse_levels
 from saltrise.engine.merge import Statistics
 from saltrise.engine.plan import Plan
-from saltrise.engine.workdir import Record, read_numbers, section, section_path, tile_file
+from saltrise.engine.records import Record, section, section_path, tile_file
 from saltrise.grid import Window
 from saltrise.io.blocks import Level, template, write_assembled
 from saltrise.io.cog import virtual_layer, write_cog
@@ -77,7 +76,7 @@ def _stored_level(plan: Plan, records: list[Record], name: str, level: int) -> L
     rows, cols = -(-height // block), -(-width // block)
     file, start, size = (np.zeros((rows, cols), dtype=np.int64) for _ in range(3))
     for position, record in enumerate(records):
-        places = _places(plan, record, section(name, level))
+        places = np.array(record.blocks[section(name, level)], dtype=np.int64)
         top, left, h, w = (-(-v // 2**level) for v in record.window)
         here = (
             slice(top // block, top // block - (-h // block)),
@@ -89,12 +88,6 @@ def _stored_level(plan: Plan, records: list[Record], name: str, level: int) -> L
         size[here] = places[:, 1].reshape(shape)
     paths = [tile_file(plan.work, record.index) for record in records]
     return Level(width, height, paths, file.ravel(), start.ravel(), size.ravel())
-
-
-def _places(plan: Plan, record: Record, part: str) -> NDArray[np.int64]:
-    places = read_numbers(plan.work, record, "blocks.")[part].astype(np.int64)
-    places[:, 0] += record.sections[part][0]
-    return places
 
 
 def _layer_tags(plan: Plan, layer: Layer) -> _Tags:

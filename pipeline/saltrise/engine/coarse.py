@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from saltrise.engine.plan import Plan
-from saltrise.engine.workdir import Record, section, section_path
+from saltrise.engine.records import Record, section, section_path
 from saltrise.grid import Window
 from saltrise.io.blocks import Level, block_places
 from saltrise.io.durable import append
@@ -59,7 +59,7 @@ class _Spool:
         self._plan, self._layer = plan, layer
         self._size = (width, height)
         self._path = plan.work / "coarse" / f"{section(layer.name, level)}.bin"
-        self._path.parent.mkdir(exist_ok=True)
+        self._path.parent.mkdir(parents=True, exist_ok=True)
         self._path.unlink(missing_ok=True)
         self._places: list[NDArray[np.int64]] = []
         self._written = 0

@@ -1,13 +1,15 @@
-"""What a run would cost, from one real sample of the region."""
+"""What a run would cost, from a sample of real blocks of the region."""
 
 from __future__ import annotations
 
+import shutil
 import time
 from dataclasses import dataclass
+from pathlib import Path
 
-from saltrise.engine.region import Region, make_plan
+from saltrise.engine.plan import Plan
 from saltrise.engine.tiles import compute_tile
-from saltrise.engine.workdir import Workdir
+from saltrise.errors import InputError
 from saltrise.grid import Window
 
 _LIBRARIES_GB = 0.35
@@ -16,8 +18,13 @@ _LIBRARIES_GB = 0.35
 _BLOCK_COPIES = 40
 """Float64 arrays of one block alive at once at the peak, inputs and zone sums included."""
 
-_ASSEMBLY = 1.5
-"""Final files with overviews over tile files; and assembly's time over the tiles'."""
+_OVERVIEWS = 1.02
+"""Final files over tile files: framing of blocks and the coarsest levels."""
+
+_ASSEMBLY = 0.2
+"""Time of everything after the tiles over the tiles' own."""
+
+_SAMPLES = 5
 
 
 @dataclass(frozen=True)
@@ -31,19 +38,22 @@ class Estimate:
     seconds: float
 
 
-def estimate_cost(region: Region) -> Estimate:
-    """Expected cost of a run, by computing one block from the middle of the region."""
-    plan = make_plan(region, Workdir(region.settings.output_folder))
-    grid, workers = plan.grid, region.settings.workers
+def estimate_cost(plan: Plan, workers: int) -> Estimate:
+    """Expected cost of a run, by computing blocks here and there in the region."""
+    grid = plan.grid
     blocks = list(grid.blocks())
-    middle = blocks[len(blocks) // 2]
-    sample = Window(middle.row, middle.col, middle.height, middle.width)
-    compute_tile(plan, sample)  # opens files and fills caches, which a long run pays once
-    began = time.perf_counter()
-    done = compute_tile(plan, sample)
-    spent = time.perf_counter() - began
-    cells, sampled = grid.width * grid.height, sample.width * sample.height
-    scratch = sum(len(part) for part in done.sections.values()) * cells / sampled / 1e9
+    count = min(_SAMPLES, len(blocks))
+    chosen = [blocks[(2 * k + 1) * len(blocks) // (2 * count)] for k in range(count)]
+    compute_tile(plan, _window(chosen[0]))  # opens files and fills caches, which a run pays once
+    spent, written, sampled = 0.0, 0, 0
+    for block in chosen:
+        began = time.perf_counter()
+        done = compute_tile(plan, _window(block))
+        spent += time.perf_counter() - began
+        written += sum(len(part) for part in done.sections.values())
+        sampled += block.width * block.height
+    cells = grid.width * grid.height
+    scratch = written * cells / sampled / 1e9
     stored = sum(5 if name == "hazard_class" else 4 for name in plan.layers)
     tile_gb = min(plan.tile**2, cells) * stored * 2 / 1e9
     block_gb = grid.block**2 * 8 * _BLOCK_COPIES / 1e9
@@ -51,6 +61,38 @@ def estimate_cost(region: Region) -> Estimate:
         tiles=len(plan.tiles()),
         memory_gb=_LIBRARIES_GB + workers * (tile_gb + block_gb),
         scratch_gb=scratch,
-        final_gb=scratch * _ASSEMBLY,
+        final_gb=scratch * _OVERVIEWS,
         seconds=spent * cells / sampled / workers * (1 + _ASSEMBLY),
     )
+
+
+def _window(block: Window) -> Window:
+    return Window(block.row, block.col, block.height, block.width)
+
+
+def require_room(folder: Path, estimate: Estimate) -> None:
+    """Refuse a run that the disk cannot hold.
+
+    Parameters
+    ----------
+    folder : Path
+        Folder of the unfinished run; what is in it already counts as paid.
+    estimate : Estimate
+        Expected cost.
+
+    Raises
+    ------
+    InputError
+        Tiles and final files together need more than is free; names both.
+    """
+    there = folder
+    while not there.exists():
+        there = there.parent
+    held = sum(file.stat().st_size for file in folder.rglob("*") if file.is_file()) / 1e9
+    need = estimate.scratch_gb + estimate.final_gb - held
+    free = shutil.disk_usage(there).free / 1e9
+    if need > free:
+        raise InputError(
+            f"{folder}: the run needs about {need:.3g} GB of disk for tiles and final layers, "
+            f"{free:.3g} GB are free; free some, name another output.folder or fewer output.layers"
+        )

@@ -12,6 +12,9 @@ from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
 if TYPE_CHECKING:
     from saltrise.settings import Settings
 
+NEVER_NEGATIVE = frozenset({"salinity", "potential_evaporation"})
+"""Inputs that cannot hold a number below zero."""
+
 _SHOWN = 10
 
 # Values beyond these are possible but far more often a wrong unit or an undeclared nodata.
@@ -28,7 +31,7 @@ def faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
         key = ROLES[role]
         if seen.valid == 0:
             lines.append(settings.fault(key, _all_nodata(inputs, role)))
-        elif role in ("salinity", "potential_evaporation") and seen.negative:
+        elif role in NEVER_NEGATIVE and seen.negative:
             lines.append(
                 settings.fault(
                     key,
@@ -84,33 +87,33 @@ def _place(inputs: Inputs, role: str, seen: Sighting) -> str:
     return f"{where}: {file[0]}, pixel column {file[1]}, row {file[2]}" if file else where
 
 
-def warnings(settings: Settings, found: BlockScan) -> list[str]:
+def warnings(settings: Settings, ranges: dict[str, Range]) -> list[str]:
     """Every finding that does not stop the run but may make its answer wrong."""
     lines = []
-    for role, seen in found.ranges.items():
-        if seen.valid:
-            lines += _doubts(settings, role, seen)
+    for role, seen in ranges.items():
+        if seen.low is not None and seen.high is not None:
+            lines += _doubts(settings, role, seen.low, seen.high)
     return [f"{ROLES[role]}: {text}" for role, text in lines]
 
 
-def _doubts(settings: Settings, role: str, seen: Range) -> list[tuple[str, str]]:
+def _doubts(settings: Settings, role: str, lowest: float, highest: float) -> list[tuple[str, str]]:
     groundwater, climate = settings.groundwater, settings.climate
     if role == "depth":
-        low, high = (float(depth_in_m(v, settings.water_table.unit)) for v in (seen.low, seen.high))
+        low, high = (float(depth_in_m(v, settings.water_table.unit)) for v in (lowest, highest))
         if low < -_WATER_ABOVE_M:
             text = (
-                f"water stands up to {-low:g} m above ground; if {seen.low:g} marks missing cells, "
+                f"water stands up to {-low:g} m above ground; if {lowest:g} marks missing cells, "
                 "declare it as nodata"
             )
             return [(role, text)]
         if high > _DEEP_M:
             return [(role, f"depths reach {high:g} m; check unit and nodata")]
     if role == "salinity":
-        tds = float(tds_in_g_per_l(seen.high, groundwater.unit, groundwater.tds_per_ec))
+        tds = float(tds_in_g_per_l(highest, groundwater.unit, groundwater.tds_per_ec))
         if tds > _BRINE_G_PER_L:
             return [(role, f"reaches {tds:g} g/L, more than a saturated brine; check the unit")]
     if role == "potential_evaporation":
-        rate = float(evaporation_in_mm_per_day(seen.high, climate.unit))
+        rate = float(evaporation_in_mm_per_day(highest, climate.unit))
         if rate > _FAST_MM_PER_DAY:
             return [(role, f"reaches {rate:g} mm/day; check the unit")]
     return []

@@ -11,7 +11,8 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.engine.workdir import Record, read_numbers
+from saltrise.engine.records import Record, read_numbers
+from saltrise.engine.survey import Range, add_ranges
 from saltrise.zonal import ZonePartial, ZoneTotals, merge_partials, unpack
 
 
@@ -28,9 +29,13 @@ class Statistics:
 
 @dataclass(frozen=True)
 class Totals:
-    """The region's numbers; `statistics` lacks a layer that has no valid cell."""
+    """The region's numbers.
+
+    `statistics` lacks a layer that has no valid cell; `ranges` are what each input holds.
+    """
 
     counts: dict[str, int]
+    ranges: dict[str, Range]
     statistics: dict[str, Statistics]
     zones: ZoneTotals
 
@@ -42,20 +47,23 @@ def merge(work: Path, records: list[Record], layers: Iterable[str]) -> Totals:
     histograms are whole numbers.
     """
     counts: Counter[str] = Counter()
+    ranges: dict[str, Range] = {}
     moments: dict[str, list[NDArray[np.float64]]] = {name: [] for name in layers}
 
     def partials() -> Iterator[ZonePartial]:
+        nonlocal ranges
         for record in records:
-            yield unpack(read_numbers(work, record, "zonal."))
+            numbers = read_numbers(work, record)
+            counts.update(record.counts)
+            ranges = add_ranges(ranges, record.ranges)
+            for name, rows in moments.items():
+                rows.append(numbers[f"statistics.{name}"].astype(np.float64))
+            yield unpack(numbers, "zonal.")
 
     zones = merge_partials(partials())
-    for record in records:
-        counts.update(record.counts)
-        for name, rows in read_numbers(work, record, "statistics.").items():
-            moments[name].append(rows.astype(np.float64))
     statistics = {name: _statistics(np.concatenate(rows)) for name, rows in moments.items()}
     found = {name: value for name, value in statistics.items() if value is not None}
-    return Totals(dict(counts), found, zones)
+    return Totals(dict(counts), ranges, found, zones)
 
 
 def _statistics(blocks: NDArray[np.float64]) -> Statistics | None:

@@ -20,6 +20,8 @@ class Plan:
     ----------
     work : Path
         Folder of tiles and records, seen by every worker.
+    run : str
+        Name of the run, for its records.
     grid : Grid
         The region's grid.
     readers : dict of BlockReader
@@ -43,6 +45,7 @@ class Plan:
     """
 
     work: Path
+    run: str
     grid: Grid
     readers: dict[str, BlockReader]
     recipe: Recipe

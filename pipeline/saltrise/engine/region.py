@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -16,8 +17,7 @@ from saltrise.engine import findings
 from saltrise.engine.inputs import ROLES, Inputs, open_inputs
 from saltrise.engine.plan import Plan
 from saltrise.engine.schedule import on_threads
-from saltrise.engine.survey import BlockScan, scan
-from saltrise.engine.workdir import Workdir
+from saltrise.engine.survey import BlockScan, first_look, scan
 from saltrise.errors import InputError, RunError
 from saltrise.grid import Window, cell_areas
 from saltrise.io.align import BlockReader
@@ -47,7 +47,8 @@ _CODE_SPAN = 1 << 24
 class Region:
     """A surveyed region.
 
-    `textures` are the texture classes that occur, in the order of their profiles.
+    `textures` are the texture classes that occur, in the order of their profiles. `warnings` lack
+    what only the ranges of whole inputs can tell, see `findings.warnings`.
     """
 
     settings: Settings
@@ -60,10 +61,20 @@ class Region:
     warnings: tuple[str, ...]
 
 
-def survey_region(
-    settings: Settings, block: int, workers: int, done: Callable[[int, int], None]
-) -> Region:
-    """Open, scan and check everything a run needs.
+@dataclass(frozen=True)
+class Opened:
+    """A region whose files are open and sound by their headers; nothing is scanned yet."""
+
+    settings: Settings
+    inputs: Inputs
+    soils: SoilSet
+    scheme: Scheme
+    zones: Zones | None
+    zone_faults: tuple[str, ...]
+
+
+def open_region(settings: Settings, block: int) -> Opened:
+    """Open everything a region names.
 
     Parameters
     ----------
@@ -71,41 +82,64 @@ def survey_region(
         The region.
     block : int
         Edge of the unit of arithmetic [cells].
-    workers : int
-        Threads that scan.
-    done : callable
-        Called with windows scanned and windows in all.
 
     Raises
     ------
     InputError
-        Every fault of config references, rasters, codes and zones found together.
+        Every fault of config references and raster headers.
     """
     require_working_libraries()
     soils, scheme = _references(settings)
     inputs = open_inputs(settings, block)
     zones: Zones | None = None
-    zone_faults: tuple[str, ...] = ()
+    faults: tuple[str, ...] = ()
     if settings.zones is not None:
         try:
             zones = read_zones(settings, inputs.grid)
         except InputError as error:
-            zone_faults = error.faults
+            faults = error.faults
+    return Opened(settings, inputs, soils, scheme, zones, faults)
+
+
+def survey_region(
+    opened: Opened, done: Callable[[int, int], None], found: BlockScan | None, *, whole: bool
+) -> Region:
+    """Scan and check everything a run needs.
+
+    Parameters
+    ----------
+    opened : Opened
+        The region.
+    done : callable
+        Called with windows scanned and windows in all.
+    found : BlockScan or None
+        What an earlier scan of these very inputs found.
+    whole : bool
+        Scan every cell of every input, rather than what a run has to know beforehand.
+
+    Raises
+    ------
+    InputError
+        Every fault of inputs, codes and zones found together.
+    """
+    settings, inputs = opened.settings, opened.inputs
     try:
-        found = _scan(inputs, settings.run.tile, workers, done)
+        found = found or _scan(inputs, settings, done, whole=whole)
         clashes = [text for m in inputs.mosaics().values() for text in disagreements(m)]
     except (RunError, RasterioError) as error:
         # Until tiles run, a broken raster is the user's to mend.
-        raise InputError(*zone_faults, str(error)) from error
+        raise InputError(*opened.zone_faults, str(error)) from error
     textures = _textures(settings, inputs, found)
-    faults = [*zone_faults, *findings.faults(settings, inputs, found)]
+    faults = [*opened.zone_faults, *findings.faults(settings, inputs, found)]
     if not faults:
-        faults += _soil_faults(settings, soils, textures)
+        faults += _soil_faults(settings, opened.soils, textures)
     if faults:
         raise InputError(*faults)
-    warnings = [*settings.warnings, *inputs.warnings, *findings.warnings(settings, found)]
-    warnings += clashes + (list(zones.warnings) if zones else [])
-    return Region(settings, inputs, found, soils, textures, scheme, zones, tuple(warnings))
+    zones = opened.zones
+    warnings = [*settings.warnings, *inputs.warnings, *clashes, *(zones.warnings if zones else ())]
+    return Region(
+        settings, inputs, found, opened.soils, textures, opened.scheme, zones, tuple(warnings)
+    )
 
 
 def _references(settings: Settings) -> tuple[SoilSet, Scheme]:
@@ -124,8 +158,10 @@ def _references(settings: Settings) -> tuple[SoilSet, Scheme]:
     return soils, scheme
 
 
-def _scan(inputs: Inputs, tile: int, workers: int, done: Callable[[int, int], None]) -> BlockScan:
-    total = len(list(inputs.grid.tiles(tile)))
+def _scan(
+    inputs: Inputs, settings: Settings, done: Callable[[int, int], None], *, whole: bool
+) -> BlockScan:
+    total = len(list(inputs.grid.tiles(settings.run.tile)))
     seen = 0
 
     def heard(_: BlockScan) -> None:
@@ -133,7 +169,14 @@ def _scan(inputs: Inputs, tile: int, workers: int, done: Callable[[int, int], No
         seen += 1
         done(seen, total)
 
-    return scan(inputs, tile, partial(on_threads, workers=workers, done=heard))
+    each = partial(on_threads, workers=settings.workers, done=heard)
+    if whole:
+        return scan(inputs, settings.run.tile, each)
+    look = first_look(inputs)
+    if "texture" not in inputs.rasters:
+        return look
+    codes = scan(inputs, settings.run.tile, each, roles=("texture",))
+    return replace(look, codes=codes.codes)
 
 
 def _textures(settings: Settings, inputs: Inputs, found: BlockScan) -> tuple[str, ...]:
@@ -157,14 +200,15 @@ def _soil_faults(settings: Settings, soils: SoilSet, textures: tuple[str, ...]) 
     return faults
 
 
-def make_plan(region: Region, workdir: Workdir) -> Plan:
-    """Settle everything the tiles need."""
+def make_plan(region: Region, work: Path, run: str) -> Plan:
+    """Settle everything the tiles need: in the folder `work`, for the run of that name."""
     settings, grid = region.settings, region.inputs.grid
     middle = next(iter(grid.blocks(Window(*_middle_block(region), 1, 1))))
     nominal = float(cell_areas(grid, middle).flat[0])
     shapes: ZoneShapes = prepare_zones(region.zones.grid_geometries if region.zones else [], grid)
     return Plan(
-        work=workdir.work,
+        work=work,
+        run=run,
         grid=grid,
         readers={role: BlockReader(aligned) for role, aligned in region.inputs.rasters.items()},
         recipe=make_recipe(region),

@@ -1,7 +1,13 @@
-"""Look at every cell of every input before any tile runs: ranges, codes, faults."""
+"""Look at inputs before any tile runs: which codes occur, whether anything can be computed.
+
+`scan` looks at every cell of every input, which is as much work as reading them for a run. A run
+therefore looks at all texture codes and, of the rest, only until one cell has every input; its
+tiles tell what else the inputs hold, and whatever is found amiss there is settled by a scan.
+"""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from functools import partial
@@ -33,20 +39,20 @@ class Sighting:
 
 @dataclass(frozen=True)
 class Range:
-    """What one quantity holds on the region's grid, in the config's unit."""
+    """What one quantity holds on the region's grid, in the config's unit; None where nothing."""
 
     valid: int
     nodata: int
-    low: float
-    high: float
+    low: float | None
+    high: float | None
     negative: Sighting | None
 
     def __add__(self, other: Range) -> Range:
         return Range(
             self.valid + other.valid,
             self.nodata + other.nodata,
-            min(self.low, other.low),
-            max(self.high, other.high),
+            _either(min, self.low, other.low),
+            _either(max, self.high, other.high),
             _both(self.negative, other.negative),
         )
 
@@ -61,21 +67,35 @@ class BlockScan:
     """Cells where every input has a value."""
 
     def __add__(self, other: BlockScan) -> BlockScan:
-        ranges = dict(self.ranges)
-        for role, found in other.ranges.items():
-            ranges[role] = ranges[role] + found if role in ranges else found
+        ranges = add_ranges(self.ranges, other.ranges)
         codes = dict(self.codes)
         for code, seen in other.codes.items():
             codes[code] = codes[code] + seen if code in codes else seen
         return BlockScan(ranges, codes, self.complete + other.complete)
 
 
+def add_ranges(one: dict[str, Range], other: dict[str, Range]) -> dict[str, Range]:
+    """Ranges of two parts of a region together."""
+    total = dict(one)
+    for role, found in other.items():
+        total[role] = total[role] + found if role in total else found
+    return total
+
+
+def _either(
+    pick: Callable[[float, float], float], a: float | None, b: float | None
+) -> float | None:
+    if a is None or b is None:
+        return b if a is None else a
+    return pick(a, b)
+
+
 def _both(a: Sighting | None, b: Sighting | None) -> Sighting | None:
     return a + b if a is not None and b is not None else a or b
 
 
-def scan(inputs: Inputs, tile: int, each: Each) -> BlockScan:
-    """Scan all inputs on the region's grid.
+def scan(inputs: Inputs, tile: int, each: Each, roles: Iterable[str] | None = None) -> BlockScan:
+    """Scan inputs on the region's grid.
 
     Parameters
     ----------
@@ -85,6 +105,8 @@ def scan(inputs: Inputs, tile: int, each: Each) -> BlockScan:
         Edge of the windows handed to `each` [cells].
     each : Each
         Runs the scan over windows, on as many threads as it likes.
+    roles : iterable of str, optional
+        Inputs to scan; all unless given.
 
     Returns
     -------
@@ -93,14 +115,44 @@ def scan(inputs: Inputs, tile: int, each: Each) -> BlockScan:
 
     Raises
     ------
-    RunError
+    UnusableInputError
         A file breaks while it is read.
     """
-    readers = {role: BlockReader(aligned) for role, aligned in inputs.rasters.items()}
+    readers = _readers(inputs, roles)
     total = BlockScan({}, {}, 0)
     for found in each(partial(_scan_window, inputs, readers), inputs.grid.tiles(tile)):
         total = total + found
     return total
+
+
+def first_look(inputs: Inputs) -> BlockScan:
+    """Scan blocks here and there until every input has a value and some cell has all.
+
+    Raises
+    ------
+    UnusableInputError
+        A file breaks while it is read.
+    """
+    readers, blocks = _readers(inputs, None), list(inputs.grid.blocks())
+    total = BlockScan({}, {}, 0)
+    for position in _spread(len(blocks)):
+        total = total + _scan_window(inputs, readers, blocks[position])
+        if total.complete and all(found.valid for found in total.ranges.values()):
+            break
+    return total
+
+
+def _spread(count: int) -> Iterable[int]:
+    """All numbers below `count`, neighbours far apart: steps of the golden section."""
+    step = max(1, round(count * 0.618))
+    while math.gcd(step, count) != 1:
+        step += 1
+    return (position * step % count for position in range(count))
+
+
+def _readers(inputs: Inputs, roles: Iterable[str] | None) -> dict[str, BlockReader]:
+    wanted = set(inputs.rasters if roles is None else roles)
+    return {r: BlockReader(aligned) for r, aligned in inputs.rasters.items() if r in wanted}
 
 
 def _scan_window(inputs: Inputs, readers: dict[str, BlockReader], window: Window) -> BlockScan:
@@ -112,6 +164,20 @@ def _scan_window(inputs: Inputs, readers: dict[str, BlockReader], window: Window
     return total
 
 
+def block_ranges(
+    values: dict[str, NDArray[np.float64]], constants: dict[str, float], block: Window
+) -> dict[str, Range]:
+    """What each input, and depth where it is a difference, holds in one block."""
+    if "ground" in values or "elevation" in values:
+        shape = (block.height, block.width)
+        ground, water = (
+            values[role] if role in values else np.full(shape, constants[role])
+            for role in ("ground", "elevation")
+        )
+        values = values | {"depth": ground - water}
+    return {role: _range(read, block) for role, read in values.items()}
+
+
 def _scan_block(
     values: dict[str, NDArray[np.float64]], constants: dict[str, float], block: Window
 ) -> BlockScan:
@@ -121,24 +187,19 @@ def _scan_block(
     codes = {}
     if "texture" in values and np.isfinite(values["texture"]).any():
         codes = _codes(values["texture"], block)
-    if "ground" in values or "elevation" in values:
-        ground, water = (
-            values[role] if role in values else np.full(complete.shape, constants[role])
-            for role in ("ground", "elevation")
-        )
-        values = values | {"depth": ground - water}
-    ranges = {role: _range(read, block) for role, read in values.items()}
-    return BlockScan(ranges, codes, int(complete.sum()))
+    return BlockScan(block_ranges(values, constants, block), codes, int(complete.sum()))
 
 
 def _range(values: NDArray[np.float64], block: Window) -> Range:
-    finite = np.isfinite(values)
-    valid = int(finite.sum())
+    # fmin and fmax pass over NaN.
+    low, high = float(np.fmin.reduce(values, None)), float(np.fmax.reduce(values, None))
+    if not (np.isfinite(low) and np.isfinite(high)):
+        values = np.where(np.isfinite(values), values, np.nan)
+        low, high = float(np.fmin.reduce(values, None)), float(np.fmax.reduce(values, None))
+    valid = values.size - int(np.count_nonzero(np.isnan(values)))
     if valid == 0:
-        return Range(0, values.size, np.inf, -np.inf, None)
-    low = float(np.min(values, where=finite, initial=np.inf))
-    high = float(np.max(values, where=finite, initial=-np.inf))
-    negative = _sighting(finite & (values < 0), block) if low < 0 else None
+        return Range(0, values.size, None, None, None)
+    negative = _sighting(values < 0, block) if low < 0 else None
     return Range(valid, values.size - valid, low, high, negative)
 
 
@@ -149,21 +210,30 @@ def _sighting(found: NDArray[np.bool_], block: Window) -> Sighting:
 
 def _codes(values: NDArray[np.float64], block: Window) -> dict[float, Sighting]:
     flat = values.ravel()
-    whole = np.isfinite(flat)
-    if not whole.all():
-        flat = flat[whole]
-    seen = _distinct(flat)
-    codes = {}
-    for code in seen:
-        codes[float(code)] = _sighting(values == code, block)
-    return codes
+    codes, first, counts = _distinct(flat)
+    return {
+        float(code): Sighting(int(n), block.row + at // block.width, block.col + at % block.width)
+        for code, at, n in zip(codes.tolist(), first.tolist(), counts.tolist(), strict=True)
+    }
 
 
-def _distinct(flat: NDArray[np.float64]) -> NDArray[np.float64]:
-    low, high = flat.min(), flat.max()
-    if low >= 0 and high < 65536:
+def _distinct(
+    flat: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.int64]]:
+    """Distinct numbers that are not NaN, where each comes first, and how often it comes."""
+    low, high = np.fmin.reduce(flat), np.fmax.reduce(flat)
+    if low >= 0 and high < _FEW_CODES:
         # Counting beats sorting by ten for the small codes that class maps have.
-        whole = flat.astype(np.int64)
-        if np.array_equal(whole, flat):
-            return np.flatnonzero(np.bincount(whole)).astype(np.float64)
-    return np.unique(flat)
+        whole = np.where(np.isnan(flat), _FEW_CODES, flat)
+        places = whole.astype(np.int64)
+        if np.array_equal(places, whole):
+            counts = np.bincount(places, minlength=_FEW_CODES + 1)[:_FEW_CODES]
+            few = np.flatnonzero(counts)
+            first = np.array([int(np.argmax(places == code)) for code in few], dtype=np.int64)
+            return few.astype(np.float64), first, counts[few].astype(np.int64)
+    seen = np.flatnonzero(~np.isnan(flat))
+    codes, at, counts = np.unique(flat[seen], return_index=True, return_counts=True)
+    return codes, seen[at].astype(np.int64), counts.astype(np.int64)
+
+
+_FEW_CODES = 4096

@@ -8,15 +8,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from saltrise.coverage import block_cover
+from saltrise.engine.findings import NEVER_NEGATIVE
+from saltrise.engine.inputs import ROLES
 from saltrise.engine.plan import Plan
+from saltrise.engine.records import ComputedTile, section, write_tile
 from saltrise.engine.stop import check_stop
-from saltrise.engine.workdir import section, write_tile
+from saltrise.engine.survey import Range, add_ranges, block_ranges
+from saltrise.errors import UnusableInputError
 from saltrise.grid import Window, cell_areas
-from saltrise.io.blocks import block_places
 from saltrise.io.encode import encode, store
 from saltrise.layers import LAYERS
 from saltrise.pyramid import Stored, halve
-from saltrise.recipe import BlockResult, compute_block
+from saltrise.recipe import BlockResult, UnmappedCodeError, compute_block
 from saltrise.zonal import ZonePartial, block_partial, pack
 
 Array = NDArray[np.float64]
@@ -30,15 +33,7 @@ class _Gathered:
     statistics: dict[str, list[Array]]
     partials: list[ZonePartial]
     counts: dict[str, int]
-
-
-@dataclass(frozen=True)
-class ComputedTile:
-    """A tile ready to be written: cell counts, encoded layers by name, sums by name."""
-
-    counts: dict[str, int]
-    sections: dict[str, bytes]
-    numbers: dict[str, NDArray[np.generic]]
+    ranges: dict[str, Range]
 
 
 def run_tile(plan: Plan, index: int) -> int:
@@ -53,27 +48,28 @@ def run_tile(plan: Plan, index: int) -> int:
 
     Raises
     ------
+    UnusableInputError
+        An input breaks, or holds what it cannot hold.
     RunError
-        An input breaks or the tile cannot be written; the message names file or folder.
+        The tile cannot be written; the message names the folder.
     """
     window = plan.tiles()[index]
-    done = compute_tile(plan, window)
-    write_tile(plan.work, index, window, done.counts, done.sections, done.numbers)
+    write_tile(plan.work, plan.run, index, window, compute_tile(plan, window))
     return index
 
 
 def compute_tile(plan: Plan, window: Window) -> ComputedTile:
     """Compute, reduce and encode one window of whole blocks, in memory."""
     gathered = _gather(plan, window)
-    sections, places = {}, {}
+    sections = {}
     for name, values in gathered.layers.items():
         stored: Stored = values
         for level in range(plan.tile_levels() + 1):
             part = section(name, level)
             sections[part] = encode(stored, LAYERS[name], plan.compression, plan.grid.block)
-            places[f"blocks.{part}"] = block_places(sections[part])
-            stored = halve(stored, rounded=plan.rounded)
-    return ComputedTile(gathered.counts, sections, _numbers(gathered) | places)
+            if level < plan.tile_levels():
+                stored = halve(stored, rounded=plan.rounded)
+    return ComputedTile(gathered.counts, gathered.ranges, sections, _numbers(gathered))
 
 
 def _gather(plan: Plan, window: Window) -> _Gathered:
@@ -83,11 +79,16 @@ def _gather(plan: Plan, window: Window) -> _Gathered:
         {name: [] for name in plan.layers},
         [],
         {},
+        {},
     )
     for block in plan.grid.blocks(window):
         check_stop()
         inputs = {role: reader.read(block) for role, reader in plan.readers.items()}
-        result = compute_block(plan.recipe, inputs, (block.height, block.width))
+        gathered.ranges = add_ranges(gathered.ranges, _sound_ranges(plan, inputs, block))
+        try:
+            result = compute_block(plan.recipe, inputs, (block.height, block.width))
+        except UnmappedCodeError as error:
+            raise UnusableInputError(f"{ROLES['texture']}: {error}") from error
         for name, count in result.counts.items():
             gathered.counts[name] = gathered.counts.get(name, 0) + count
         _place(plan, gathered, result, block, window)
@@ -95,6 +96,14 @@ def _gather(plan: Plan, window: Window) -> _Gathered:
         areas = cell_areas(plan.grid, block)
         gathered.partials.append(block_partial(cover, areas, result.zone_values(), plan.unit_m2))
     return gathered
+
+
+def _sound_ranges(plan: Plan, inputs: dict[str, Array], block: Window) -> dict[str, Range]:
+    found = block_ranges(inputs, plan.recipe.constants, block)
+    for role in NEVER_NEGATIVE & found.keys():
+        if found[role].negative is not None:
+            raise UnusableInputError(f"{ROLES[role]}: holds negative values")
+    return found
 
 
 def _place(

@@ -1,28 +1,29 @@
-"""The folder of an unfinished run: its lock, tile files, records and the rename that ends it.
+"""The folder of a run: its lock, its beginning or resumption, and the rename that ends it.
 
-A run into FOLDER works in `FOLDER.unfinished`; a tile is done once its record exists. The folder
-becomes FOLDER by one rename when run.json, written last, is in it.
+A run into FOLDER works in `FOLDER.unfinished`, which becomes FOLDER by one rename when run.json,
+written last, is in it. `work/started.json` says which run it is.
 """
 
 from __future__ import annotations
 
-import io
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import asdict, dataclass
+from dataclasses import dataclass
+from datetime import datetime
 from pathlib import Path
+from typing import Any
 
-import numpy as np
 from filelock import FileLock, Timeout
-from numpy.typing import NDArray
 
+from saltrise.engine.identity import SHARED, differences
 from saltrise.errors import InputError
-from saltrise.grid import Window
 from saltrise.io import durable
 
 FINISHED = "run.json"
 KNOWN = frozenset({"layers", "zones.gpkg", "zones.csv", FINISHED})
 """What a finished run's folder may hold."""
+
+_SHOWN = 8
 
 
 @dataclass(frozen=True)
@@ -41,21 +42,27 @@ class Workdir:
         """Tiles, records and plan; gone when the run ends."""
         return self.unfinished / "work"
 
+    @property
+    def replaced(self) -> Path:
+        """Where an older run is for the moment between two renames."""
+        return self.final.with_name(self.final.name + ".replaced")
+
+    @property
+    def started(self) -> Path:
+        """Which run the unfinished folder holds."""
+        return self.work / "started.json"
+
 
 @dataclass(frozen=True)
-class Record:
-    """One finished tile: its window, its counts of cells, and where each part lies in its file.
+class Beginning:
+    """How a run begins: its date; whether it goes on with an older one; whether that is whole."""
 
-    `sections` maps a part's name to its first byte and length.
-    """
-
-    index: int
-    window: tuple[int, int, int, int]
-    counts: dict[str, int]
-    sections: dict[str, tuple[int, int]]
+    date: datetime
+    resumed: bool
+    whole: bool = False
 
 
-def check_target(final: Path, *, force: bool) -> None:
+def check_target(workdir: Workdir, *, force: bool) -> None:
     """Refuse a target folder that a run may not replace.
 
     Raises
@@ -64,6 +71,7 @@ def check_target(final: Path, *, force: bool) -> None:
         The folder holds a finished run and `force` is not set, holds anything but a run, is a
         file, or its parent cannot be written.
     """
+    final, unfinished = workdir.final, workdir.unfinished
     if final.exists() and not final.is_dir():
         raise InputError(f"{final}: is a file, must be a folder; name another output.folder")
     if final.is_dir():
@@ -80,18 +88,18 @@ def check_target(final: Path, *, force: bool) -> None:
                 f"{final}: holds a finished run; use --force to replace it once the new run is "
                 "whole, or name another output.folder"
             )
-    unfinished = Workdir(final).unfinished
     if unfinished.exists() and not (unfinished.is_dir() and _is_ours(unfinished)):
         raise InputError(f"{unfinished}: is no unfinished run of this tool; move it away")
 
 
 def _is_ours(unfinished: Path) -> bool:
-    return (unfinished / "work").is_dir() or not any(unfinished.iterdir())
+    ours = (unfinished / "work").is_dir() or (unfinished / FINISHED).is_file()
+    return ours or not any(unfinished.iterdir())
 
 
 @contextmanager
 def claimed(workdir: Workdir) -> Iterator[None]:
-    """Hold the run's folder against any other run.
+    """Hold the run's folder against any other run; leave no trace of one that never began.
 
     Raises
     ------
@@ -116,77 +124,75 @@ def claimed(workdir: Workdir) -> Iterator[None]:
     try:
         yield
     finally:
+        if workdir.unfinished.is_dir() and not any(workdir.unfinished.iterdir()):
+            workdir.unfinished.rmdir()
         # Unlinked while held, so that no other run can hold a name that is about to go.
         Path(lock.lock_file).unlink(missing_ok=True)
         lock.release()
 
 
-def fresh(workdir: Workdir) -> None:
-    """Empty the unfinished folder and lay out its rooms."""
+def begin(
+    workdir: Workdir, identity: Mapping[str, Any], date: datetime, *, force: bool
+) -> Beginning:
+    """Go on with the unfinished run in the folder if it is this one, else start afresh.
+
+    Parameters
+    ----------
+    workdir : Workdir
+        The claimed folder.
+    identity : mapping
+        What makes this run this run, see `engine.identity`.
+    date : datetime
+        The run's date if it starts now; a resumed run keeps its own.
+    force : bool
+        Discard an unfinished run that differs or was begun without it. An unfinished run begun
+        with it is resumed, so that the same command always goes on where it was.
+
+    Raises
+    ------
+    InputError
+        The folder holds an unfinished run with other settings, inputs or software; names them.
+    """
+    held = _held(workdir)
+    if held is not None:
+        changed = differences(held["identity"], identity)
+        if changed and not force:
+            more = f" and {len(changed) - _SHOWN} more" if len(changed) > _SHOWN else ""
+            raise InputError(
+                f"{workdir.unfinished}: holds an unfinished run of something else: "
+                f"{'; '.join(changed[:_SHOWN])}{more}. Put that back to resume it, or use --force "
+                "to discard it and start over"
+            )
+        if not changed and (held["force"] or not force):
+            for rest in workdir.unfinished.rglob("*.partial*"):
+                rest.unlink(missing_ok=True)
+            kept = datetime.fromisoformat(held["date"])
+            return Beginning(kept, resumed=True, whole=held["whole"])
     durable.remove_tree(workdir.unfinished)
     for folder in ("work/tiles", "work/records", "layers"):
         (workdir.unfinished / folder).mkdir(parents=True)
+    content = {"date": date.isoformat(), "force": force, "identity": identity}
+    durable.write_json(workdir.started, content)
+    return Beginning(date, resumed=False)
 
 
-def _record_file(work: Path, index: int) -> Path:
-    return work / "records" / f"{index:06d}.json"
+def _held(workdir: Workdir) -> dict[str, Any] | None:
+    """Identity, date and state of the run in the unfinished folder, if there is one."""
+    record = workdir.unfinished / FINISHED
+    if record.is_file():
+        # Whole, but not handed over: what is left of its work no longer matters.
+        raw = durable.read_json(record)
+        identity = {name: raw[name] for name in SHARED}
+        return {"identity": identity, "date": raw["date"], "force": True, "whole": True}
+    if workdir.started.is_file():
+        held: dict[str, Any] = durable.read_json(workdir.started)
+        return held | {"whole": False}
+    return None
 
 
-def write_tile(
-    work: Path,
-    index: int,
-    window: Window,
-    counts: dict[str, int],
-    sections: dict[str, bytes],
-    numbers: dict[str, NDArray[np.generic]],
-) -> None:
-    """Make one tile durable: its file first, then the small record that says it is whole."""
-    buffer = io.BytesIO()
-    np.savez(buffer, **numbers)  # type: ignore[arg-type]
-    parts = sections | {"numbers": buffer.getvalue()}
-    places, start = {}, 0
-    for name, part in parts.items():
-        places[name] = (start, len(part))
-        start += len(part)
-    durable.write_whole(tile_file(work, index), parts.values())
-    record = Record(index, (window.row, window.col, window.height, window.width), counts, places)
-    durable.write_json(_record_file(work, index), asdict(record))
-
-
-def read_record(work: Path, index: int) -> Record:
-    """The record of a finished tile."""
-    raw = durable.read_json(_record_file(work, index))
-    return Record(
-        raw["index"],
-        tuple(raw["window"]),
-        raw["counts"],
-        {name: (start, size) for name, (start, size) in raw["sections"].items()},
-    )
-
-
-def section(layer: str, level: int) -> str:
-    """Name of the part that holds a layer at an overview level (0: full resolution)."""
-    return f"{layer}@{level}" if level else layer
-
-
-def tile_file(work: Path, index: int) -> Path:
-    """File of a tile."""
-    return work / "tiles" / f"{index:06d}.bin"
-
-
-def section_path(work: Path, record: Record, name: str) -> str:
-    """A part of a tile's file as a path GDAL opens."""
-    start, size = record.sections[name]
-    return f"/vsisubfile/{start}_{size},{tile_file(work, record.index)}"
-
-
-def read_numbers(work: Path, record: Record, prefix: str) -> dict[str, NDArray[np.generic]]:
-    """The arrays a tile kept under a prefix (such as "zonal."), by the rest of their names."""
-    start, size = record.sections["numbers"]
-    part = durable.read_slice(tile_file(work, record.index), start, size)
-    with np.load(io.BytesIO(part)) as archive:
-        names = [name for name in archive.files if name.startswith(prefix)]
-        return {name.removeprefix(prefix): archive[name] for name in names}
+def discard(workdir: Workdir) -> None:
+    """Give up an unfinished run of which nothing is of use."""
+    durable.remove_tree(workdir.unfinished)
 
 
 def finish(workdir: Workdir) -> None:
@@ -194,11 +200,17 @@ def finish(workdir: Workdir) -> None:
     durable.remove_tree(workdir.work)
     durable.sync_folder(workdir.unfinished)
     durable.step("work removed")
-    old = workdir.final.with_name(workdir.final.name + ".replaced")
-    durable.remove_tree(old)
     if workdir.final.exists():
-        workdir.final.rename(old)
+        durable.remove_tree(workdir.replaced)
+        workdir.final.rename(workdir.replaced)
+        durable.step("older run moved")
     workdir.unfinished.rename(workdir.final)
     durable.sync_folder(workdir.final.parent)
     durable.step("finished")
-    durable.remove_tree(old)
+    tidy(workdir)
+
+
+def tidy(workdir: Workdir) -> None:
+    """Remove an older run that a finished one has replaced."""
+    if (workdir.final / FINISHED).is_file() and (workdir.replaced / FINISHED).is_file():
+        durable.remove_tree(workdir.replaced)

@@ -19,14 +19,18 @@ from rasterio.warp import transform as transform_points
 from rasterio.warp import transform_bounds
 from rasterio.windows import Window as RasterWindow
 
-from saltrise.errors import InputError, RunError
+from saltrise.errors import InputError, UnusableInputError
 from saltrise.grid import Grid, Window
-from saltrise.io.mosaic import ALIGNED, Mosaic, cell_offset, intersect, same_crs
+from saltrise.io.mosaic import ALIGNED, Mosaic, Placed, cell_offset, intersect, same_crs
+from saltrise.io.vrt import Rect
 
 Method = Literal["cell for cell", "nearest", "bilinear", "average"]
 
 MUCH_FINER = 0.5
 """A source cell under this part of a grid cell is averaged instead of interpolated."""
+
+_KERNEL = 4
+"""Source cells beyond the region that a warp may touch."""
 
 _RESAMPLING = {
     "nearest": Resampling.nearest,
@@ -70,6 +74,35 @@ class Aligned:
             if intersect(tile.rect, (x, y, 1, 1)):
                 return tile.file.path, x - tile.col, y - tile.row
         return None
+
+    def needed(self, tile: Placed) -> Rect | None:
+        """Cells of a tile's file that the region can need: column, row, width, height.
+
+        None where the region needs none. A warp's kernel and curved edges are allowed for.
+        """
+        grid = self.grid
+        if self.method == "cell for cell":
+            shift_col, shift_row, _ = cell_offset(self.mosaic.transform, grid.transform, 1, 1)
+            rect = (round(shift_col), round(shift_row), grid.width, grid.height)
+        else:
+            rect = self._warped_rect()
+        common = intersect(tile.rect, rect)
+        return common and (common[0] - tile.col, common[1] - tile.row, common[2], common[3])
+
+    def _warped_rect(self) -> Rect:
+        grid, mosaic = self.grid, self.mosaic
+        bounds = extent(grid.transform, grid.width, grid.height)
+        if not same_crs(mosaic.crs_wkt, grid.crs_wkt):
+            source, target = CRS.from_wkt(grid.crs_wkt), CRS.from_wkt(mosaic.crs_wkt)
+            bounds = transform_bounds(source, target, *bounds)
+        a, b, c, d, e, f = mosaic.transform
+        det = a * e - b * d
+        corners = [(x - c, y - f) for x in bounds[::2] for y in bounds[1::2]]
+        cols = [(e * x - b * y) / det for x, y in corners]
+        rows = [(a * y - d * x) / det for x, y in corners]
+        left, top = math.floor(min(cols)) - _KERNEL, math.floor(min(rows)) - _KERNEL
+        right, bottom = math.ceil(max(cols)) + _KERNEL, math.ceil(max(rows)) + _KERNEL
+        return left, top, right - left, bottom - top
 
 
 def align(mosaic: Mosaic, grid: Grid, *, classes: bool) -> Aligned:
@@ -181,7 +214,7 @@ class BlockReader:
 
         Raises
         ------
-        RunError
+        UnusableInputError
             GDAL cannot read a file behind it; names the input, block and GDAL's reason.
         """
         try:
@@ -189,7 +222,7 @@ class BlockReader:
             block = RasterWindow(window.col, window.row, window.width, window.height)
             values = dataset.read(1, window=block)
         except RasterioError as error:
-            raise RunError(self._broken(window, error)) from error
+            raise UnusableInputError(self._broken(window, error)) from error
         wide: NDArray[np.float64] = values.astype(np.float64)
         return wide
 

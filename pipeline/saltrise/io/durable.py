@@ -7,6 +7,8 @@ import json
 import os
 import pickle
 import shutil
+import uuid
+import zlib
 from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import Any, BinaryIO
@@ -31,7 +33,8 @@ def write_whole(path: Path, parts: Iterable[bytes]) -> None:
     RunError
         The disk is full, the folder cannot be written or a quota is met; names the file.
     """
-    temporary = path.with_name(path.name + ".partial")
+    # A name of its own: on a cluster two workers may hold the same tile for a moment.
+    temporary = path.with_name(f"{path.name}.partial-{uuid.uuid4().hex[:12]}")
     try:
         with temporary.open("wb") as file:
             for part in parts:
@@ -40,6 +43,7 @@ def write_whole(path: Path, parts: Iterable[bytes]) -> None:
             os.fsync(file.fileno())
         temporary.replace(path)
     except OSError as error:
+        temporary.unlink(missing_ok=True)
         raise RunError(explain(path, error)) from error
     step(path.name)
 
@@ -69,9 +73,9 @@ def explain(path: Path, error: OSError) -> str:
     return f"{path}: cannot be written: {error.strerror or error}"
 
 
-def write_json(path: Path, content: Any) -> None:
+def write_json(path: Path, content: Any, indent: int | None = 2) -> None:
     """Write JSON, keys in the order given, numbers in full."""
-    text = json.dumps(content, indent=2, ensure_ascii=False, allow_nan=False)
+    text = json.dumps(content, indent=indent, ensure_ascii=False, allow_nan=False)
     write_whole(path, [text.encode(), b"\n"])
 
 
@@ -117,6 +121,24 @@ def read_part(file: BinaryIO, start: int, size: int) -> bytes:
     if len(part) != size:
         raise RunError(f"{file.name}: ends before byte {start + size}; delete it and run again")
     return part
+
+
+def checksum(path: Path) -> int:
+    """CRC-32 of a file's bytes.
+
+    Raises
+    ------
+    RunError
+        The file is unreadable.
+    """
+    found = 0
+    try:
+        with path.open("rb") as file:
+            while part := file.read(1 << 20):
+                found = zlib.crc32(part, found)
+    except OSError as error:
+        raise RunError(f"{path}: cannot be read: {error.strerror or error}") from error
+    return found
 
 
 def write_pickle(path: Path, content: object) -> None:

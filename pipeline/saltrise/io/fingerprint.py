@@ -1,33 +1,134 @@
-"""What an input file was: its size and the hash of its bytes."""
+"""What an input file was: its size and the hash of its bytes, or of the part of it that is read."""
 
 from __future__ import annotations
 
 import hashlib
+import json
+import urllib.error
+import urllib.request
 from dataclasses import dataclass
 from pathlib import Path
 
-from saltrise.errors import RunError
+import rasterio
+from rasterio.errors import RasterioError
+from rasterio.windows import Window as RasterWindow
+
+from saltrise.errors import UnusableInputError
+from saltrise.io.sources import is_remote
+from saltrise.io.vrt import Rect
+
+WHOLE = "whole file"
+PART = "size, header and the blocks read"
+
+_HUGE = 1_000_000_000
+"""Bytes from which on a file that is mostly not read is not hashed as a whole."""
+
+_TIMEOUT_S = 20
 
 
 @dataclass(frozen=True)
 class Fingerprint:
-    """A file's size [bytes] and the SHA-256 of its content."""
+    """A file's size [bytes], a SHA-256, and what that covers."""
 
     size: int
     sha256: str
+    covers: str
 
 
-def fingerprint(path: str) -> Fingerprint:
-    """Fingerprint of a whole local file.
+def fingerprint(path: str, needed: Rect | None = None, share: float = 1.0) -> Fingerprint:
+    """Fingerprint of an input.
+
+    Parameters
+    ----------
+    path : str
+        Local file or anything GDAL opens.
+    needed : rectangle, optional
+        Column, row, width and height of the cells that are read, for a raster.
+    share : float
+        Part of the raster's cells that `needed` holds.
+
+    Returns
+    -------
+    Fingerprint
+        Of every byte; for a remote raster, or a huge one of which less than half is read, of its
+        size, header and the decoded blocks that hold the needed cells.
 
     Raises
     ------
-    RunError
+    UnusableInputError
         The file cannot be read.
     """
+    if needed is not None and is_remote(path):
+        return _of_blocks(path, _remote_size(path), needed)
     try:
+        size = Path(path).stat().st_size
+        if needed is not None and size > _HUGE and share < 0.5:
+            return _of_blocks(path, size, needed)
         with Path(path).open("rb") as file:
             digest = hashlib.file_digest(file, "sha256")
-            return Fingerprint(file.tell(), digest.hexdigest())
+            return Fingerprint(file.tell(), digest.hexdigest(), WHOLE)
     except OSError as error:
-        raise RunError(f"{path}: cannot be read: {error.strerror or error}") from error
+        raise UnusableInputError(f"{path}: cannot be read: {error.strerror or error}") from error
+
+
+def _of_blocks(path: str, size: int, needed: Rect) -> Fingerprint:
+    digest = hashlib.sha256(f"{size}\n".encode())
+    try:
+        with rasterio.open(path) as dataset:
+            high, wide = dataset.block_shapes[0]
+            header = (
+                dataset.width,
+                dataset.height,
+                dataset.dtypes,
+                dataset.nodatavals,
+                dataset.crs.to_wkt() if dataset.crs else "",
+                list(dataset.transform),
+                (high, wide),
+            )
+            digest.update(json.dumps(header).encode())
+            col, row, width, height = needed
+            left, top = col // wide * wide, row // high * high
+            right = min(-(-(col + width) // wide) * wide, dataset.width)
+            bottom = min(-(-(row + height) // high) * high, dataset.height)
+            for y in range(top, bottom, high):
+                for x in range(left, right, wide):
+                    window = RasterWindow(x, y, min(wide, right - x), min(high, bottom - y))
+                    digest.update(dataset.read(1, window=window).tobytes())
+    except RasterioError as error:
+        reason = error.__cause__ or error.__context__ or error
+        raise UnusableInputError(f"{path}: cannot be read: {reason}") from error
+    return Fingerprint(size, digest.hexdigest(), PART)
+
+
+def _remote_size(path: str) -> int:
+    head = _head(path)
+    return int(head.get("Content-Length", 0)) if head else 0
+
+
+def stamp(path: str) -> tuple[str, ...]:
+    """What changes when a file changes, cheaply: its size and time, or a server's own marks.
+
+    Only for comparison within and between runs; it enters no output. Empty where nothing can be
+    told (and so nothing compared); `("gone",)` where a local file is not there.
+    """
+    if is_remote(path):
+        head = _head(path)
+        marks = ("ETag", "Last-Modified", "Content-Length")
+        return tuple(f"{mark}={head[mark]}" for mark in marks if mark in head) if head else ()
+    try:
+        found = Path(path).stat()
+    except OSError:
+        return ("gone",)
+    return str(found.st_size), str(found.st_mtime_ns)
+
+
+def _head(path: str) -> dict[str, str] | None:
+    url = path.removeprefix("/vsicurl/")
+    if not url.startswith(("http://", "https://")):
+        return None
+    try:
+        request = urllib.request.Request(url, method="HEAD")
+        with urllib.request.urlopen(request, timeout=_TIMEOUT_S) as answer:
+            return dict(answer.headers.items())
+    except (urllib.error.URLError, OSError, ValueError):
+        return None
