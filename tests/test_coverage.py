@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely.geometry import MultiPolygon, Polygon, box
 
-from saltrise.coverage import BlockCover, block_cover, prepare_zones
+from saltrise.coverage import block_cover, prepare_zones
 from saltrise.grid import Grid, Window
 
 WKT = pyproj.CRS.from_epsg(32740).to_wkt()
@@ -26,9 +26,9 @@ def dense(shape, grid: Grid) -> np.ndarray:
     zones = prepare_zones([shape], grid)
     out = np.zeros((grid.height, grid.width))
     for block in grid.blocks():
-        cover = block_cover(zones, block)
-        row, col = np.divmod(cover.cell, block.width)
-        out[block.row + row, block.col + col] = cover.fraction
+        _, cell, fraction = block_cover(zones, block).every_cell(block.height * block.width)
+        row, col = np.divmod(cell, block.width)
+        out[block.row + row, block.col + col] = fraction
     return out
 
 
@@ -100,8 +100,8 @@ def test_a_block_does_not_know_its_neighbours() -> None:
     zones = prepare_zones([star], wide)
     again = prepare_zones([star], wide)
     block = Window(32, 32, 16, 16)
-    one, two = block_cover(zones, block), block_cover(again, block)
-    np.testing.assert_array_equal(one.fraction, two.fraction)
+    one, two = (block_cover(z, block).every_cell(256)[2] for z in (zones, again))
+    np.testing.assert_array_equal(one, two)
 
 
 def test_turned_and_south_up_grids_cover_the_same_ground() -> None:
@@ -115,12 +115,39 @@ def test_turned_and_south_up_grids_cover_the_same_ground() -> None:
     assert dense(star, turned).sum() == pytest.approx(star.area, rel=1e-12)
 
 
-def test_overlapping_zones_are_each_whole_and_in_order() -> None:
+@pytest.mark.parametrize("order", [(0, 1, 2), (2, 1, 0), (1, 0, 2)])
+def test_overlapping_zones_are_each_whole_and_in_order(order) -> None:
     grid = grid_of(16, 16)
-    zones = prepare_zones([box(0, 0, 16, 16), box(4, 4, 8, 8), box(-9, -9, 99, 99)], grid)
-    cover: BlockCover = block_cover(zones, Window(0, 0, 16, 16))
-    assert np.bincount(cover.zone, cover.fraction).tolist() == [256, 16, 256]
-    assert np.all(np.diff(cover.zone) >= 0)
+    shapes = [box(0, 0, 16, 16), box(4, 4, 8, 8.5), box(-9, -9, 99, 99)]
+    areas = [256, 18, 256]
+    zones = prepare_zones([shapes[k] for k in order], grid)
+    zone, cell, fraction = block_cover(zones, Window(0, 0, 16, 16)).every_cell(256)
+    expected = [areas[k] for k in order]
+    np.testing.assert_allclose(np.bincount(zone, fraction), expected, rtol=1e-14)
+    assert np.all(np.diff(zone) >= 0)
+    assert np.all(np.diff(cell)[np.diff(zone) == 0] > 0)
+
+
+@settings(max_examples=30, deadline=None)
+@given(st.integers(0, 10_000))
+def test_runs_and_single_cells_share_the_block_out(seed: int) -> None:
+    random = np.random.default_rng(seed)
+    stars = [shapely.make_valid(random_star(random, 30.0)) for _ in range(4)]
+    grid = grid_of(30, 30, 32)
+    cover = block_cover(prepare_zones(stars, grid), Window(0, 0, 30, 30))
+    assert cover.run_start[0] == 0
+    assert np.all(np.diff(np.append(cover.run_start, 900)) > 0)
+    label = np.repeat(cover.run_slot, np.diff(np.append(cover.run_start, 900)))
+    assert np.all(cover.fraction > 0)
+    assert np.all(np.diff(cover.cell) >= 0)
+    # A cell that a zone has as a whole is never counted again for the same zone.
+    assert not np.any(label[cover.cell] == cover.slot)
+    zone, cell, fraction = cover.every_cell(900)
+    for number, star in enumerate(stars):
+        mine = zone == number
+        np.testing.assert_allclose(
+            np.bincount(cell[mine], fraction[mine], 900), dense(star, grid).ravel(), atol=1e-12
+        )
 
 
 def test_a_polygon_of_many_vertices() -> None:
@@ -130,4 +157,6 @@ def test_a_polygon_of_many_vertices() -> None:
 
 
 def test_no_zones_cover_nothing() -> None:
-    assert block_cover(prepare_zones([], grid_of(3, 3)), Window(0, 0, 3, 3)).cell.size == 0
+    cover = block_cover(prepare_zones([], grid_of(3, 3)), Window(0, 0, 3, 3))
+    assert cover.every_cell(9)[0].size == 0
+    assert cover.run_slot.tolist() == [0]

@@ -2,8 +2,9 @@
 
 Coverage is found by signed areas, as scan converters of outline fonts do it: every edge is cut
 at cell lines, each piece adds its height and the area to its right to its cell, and running sums
-along the rows turn that into covered fractions. All in float64: fractions of zones that share
-edges add up to 1 within rounding, which float32 fractions would miss by 1e-8.
+along the rows turn that into covered fractions. Only cells that an edge touches are visited: what
+lies between them is a run of one fraction. All in float64: fractions of zones that share edges
+add up to 1 within rounding, which float32 fractions would miss by 1e-8.
 """
 
 from __future__ import annotations
@@ -22,6 +23,7 @@ from shapely.geometry.base import BaseGeometry
 from saltrise.grid import Grid, Window
 
 Floats = NDArray[np.float64]
+Whole = NDArray[np.int64]
 
 _DUST = 1e-12
 """A fraction this close to 0 or 1 is rounding."""
@@ -41,14 +43,30 @@ class ZoneShapes:
 
 @dataclass(frozen=True)
 class BlockCover:
-    """Cells of one block that zones cover: zone, cell (row-major in the block), fraction.
+    """How zones cover the cells of one block (row-major).
 
-    Ordered by zone, then cell.
+    The block is cut into runs of cells, `run_start` being their first cells: in a run of slot 0
+    every cell is either free or in `cell`; a run of slot k > 0 lies wholly inside zone
+    `zones[k - 1]`. Cells that a zone covers partly, or that lie wholly in a second zone, are in
+    `cell`, in rising order, with their slot and fraction.
     """
 
-    zone: NDArray[np.int32]
-    cell: NDArray[np.int32]
+    zones: Whole
+    run_start: Whole
+    run_slot: NDArray[np.intp]
+    cell: Whole
+    slot: NDArray[np.intp]
     fraction: Floats
+
+    def every_cell(self, size: int) -> tuple[Whole, Whole, Floats]:
+        """Zone, cell and fraction of every covered cell of a block of `size` cells, by zone."""
+        label = np.repeat(self.run_slot, np.diff(np.append(self.run_start, size)))
+        whole = np.flatnonzero(label)
+        zone = self.zones[np.concatenate([label[whole], self.slot]) - 1]
+        cell = np.concatenate([whole, self.cell])
+        fraction = np.concatenate([np.ones(whole.size), self.fraction])
+        order = np.lexsort((cell, zone))
+        return zone[order], cell[order], fraction[order]
 
 
 def prepare_zones(geometries: Sequence[BaseGeometry], grid: Grid) -> ZoneShapes:
@@ -101,26 +119,69 @@ def block_cover(zones: ZoneShapes, block: Window) -> BlockCover:
     Returns
     -------
     BlockCover
-        Fractions in (0, 1], each within about 1e-13 of exact.
+        Fractions in (0, 1], each within about 1e-12 of exact.
     """
-    found: list[tuple[int, NDArray[np.int32], Floats]] = []
+    numbers: list[int] = []
+    runs: list[_Runs] = []
     if zones.shapes:
         tree, shapes = _index(zones)
         box = shapely.box(block.col, block.row, block.col + block.width, block.row + block.height)
         for zone in sorted(tree.query(box, predicate="intersects").tolist()):
             if shapely.contains_properly(shapes[zone], box):
-                cells = np.arange(block.width * block.height, dtype=np.int32)
-                found.append((zone, cells, np.ones(cells.size)))
+                whole = np.array([0]), np.array([block.width * block.height]), np.ones(1)
+                runs.append(whole)
             else:
-                found.append((zone, *_partial_cover(zones.edges[zone], block)))
+                runs.append(_covered_runs(zones.edges[zone], block))
+            numbers.append(zone)
+    return _arranged(numbers, runs, block.width * block.height)
+
+
+_Runs = tuple[Whole, Whole, Floats]
+"""First cell, end (first cell after) and fraction of runs of one zone, in rising order."""
+
+
+def _arranged(numbers: list[int], runs: list[_Runs], size: int) -> BlockCover:
+    """Share the block's cells out: whole runs to their zone, what is left over cell by cell."""
+    start, end, slot = (np.empty(0, dtype=np.int64) for _ in range(3))
+    rest: list[tuple[Whole, NDArray[np.intp], Floats]] = []
+    for k, (first, after, fraction) in enumerate(runs, start=1):
+        taken = fraction == 1.0
+        # Free if no run that was taken before reaches into it.
+        free = np.searchsorted(end, first, side="right") == np.searchsorted(start, after)
+        taken &= free
+        rest.append(_cell_by_cell(first[~taken], after[~taken], fraction[~taken], k))
+        start, end = np.append(start, first[taken]), np.append(end, after[taken])
+        slot = np.append(slot, np.full(int(taken.sum()), k))
+        order = np.argsort(start)
+        start, end, slot = start[order], end[order], slot[order]
+    cell = np.concatenate([c for c, _, _ in rest] or [start[:0]])
+    slots = np.concatenate([s for _, s, _ in rest] or [slot[:0]])
+    fraction = np.concatenate([f for _, _, f in rest] or [np.empty(0)])
+    order = np.argsort(cell, kind="stable")
+    # Gaps between the runs, and before and after them, are runs of slot 0.
+    edges = np.column_stack([start, end]).ravel()
+    slot_after = np.column_stack([slot, np.zeros_like(slot)]).ravel()
+    edges, slot_after = np.append(0, edges), np.append(0, slot_after)
+    filled = np.diff(np.append(edges, size)) > 0
     return BlockCover(
-        np.concatenate([np.full(c.size, z, dtype=np.int32) for z, c, _ in found] or [_NO_CELLS]),
-        np.concatenate([c for _, c, _ in found] or [_NO_CELLS]),
-        np.concatenate([f for _, _, f in found] or [np.empty(0)]),
+        np.array(numbers, dtype=np.int64),
+        edges[filled],
+        slot_after[filled].astype(np.intp),
+        cell[order],
+        slots[order].astype(np.intp),
+        fraction[order],
     )
 
 
-_NO_CELLS = np.empty(0, dtype=np.int32)
+def _cell_by_cell(
+    first: Whole, after: Whole, fraction: Floats, slot: int
+) -> tuple[Whole, NDArray[np.intp], Floats]:
+    length = after - first
+    begin = np.repeat(np.cumsum(length) - length, length)
+    cell = np.repeat(first, length) + np.arange(len(begin)) - begin
+    return cell, np.full(cell.size, slot, dtype=np.intp), np.repeat(fraction, length)
+
+
 _LOCAL = threading.local()
 
 
@@ -135,8 +196,8 @@ def _index(zones: ZoneShapes) -> tuple[shapely.STRtree, NDArray[Any]]:
     return held[1], held[2]
 
 
-def _partial_cover(edges: Floats, block: Window) -> tuple[NDArray[np.int32], Floats]:
-    """Covered cells and fractions of one zone whose boundary meets the block."""
+def _covered_runs(edges: Floats, block: Window) -> _Runs:
+    """Runs of cells of equal fraction of one zone whose boundary meets the block."""
     low, high = np.minimum(edges[:, 1], edges[:, 3]), np.maximum(edges[:, 1], edges[:, 3])
     near = (high > block.row) & (low < block.row + block.height)
     near &= np.minimum(edges[:, 0], edges[:, 2]) < block.col + block.width
@@ -147,13 +208,28 @@ def _partial_cover(edges: Floats, block: Window) -> tuple[NDArray[np.int32], Flo
     # What lies left of the block covers all of its row; what lies right of it, nothing.
     right = np.where(x < 0, 0.0, x - column)
     stride = block.width + 2
-    at = row * stride + column
-    size = block.height * stride
-    added = np.bincount(at, dy * (1 - right), size) + np.bincount(at + 1, dy * right, size)
-    cover = np.cumsum(added.reshape(block.height, stride), axis=1)[:, : block.width].ravel()
-    cover[cover > 1 - _DUST] = 1.0
-    cells = np.flatnonzero(cover > _DUST).astype(np.int32)
-    return cells, cover[cells]
+    place = np.concatenate([row * stride + column, row * stride + column + 1])
+    added = np.concatenate([dy * (1 - right), dy * right])
+    order = np.argsort(place, kind="stable")
+    place, first = np.unique(place[order], return_index=True)
+    if place.size == 0:
+        return place, place, np.empty(0)
+    total = np.cumsum(np.add.reduceat(added[order], first))
+    row, column = np.divmod(place, stride)
+    opens = np.flatnonzero(np.append(True, row[1:] != row[:-1]))
+    before = np.append(0.0, total)[opens]
+    fraction = total - np.repeat(before, np.diff(np.append(opens, row.size)))
+    fraction[fraction > 1 - _DUST] = 1.0
+    after = np.append(column[1:], block.width)
+    after[np.append(opens[1:] - 1, row.size - 1)] = block.width
+    kept = (fraction > _DUST) & (column < block.width)
+    base = row[kept] * block.width
+    start, end, fraction = base + column[kept], base + after[kept], fraction[kept]
+    # Whole runs that touch, mostly from row to row, become one.
+    heads, tails = np.ones(start.size, dtype=bool), np.ones(start.size, dtype=bool)
+    joined = (fraction[1:] == 1.0) & (fraction[:-1] == 1.0) & (start[1:] == end[:-1])
+    heads[1:] = tails[:-1] = ~joined
+    return start[heads], end[tails], fraction[heads]
 
 
 def _pieces(edges: Floats, width: int, height: int) -> tuple[Floats, Floats, Floats]:

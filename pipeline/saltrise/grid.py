@@ -97,7 +97,19 @@ class Grid:
         return f"{cells} of {size}, {crs.name}"
 
 
-def cell_areas(grid: Grid, window: Window) -> Floats:
+@dataclass(frozen=True)
+class BlockAreas:
+    """True areas of a block's cells [m2]: `down` (rows, nodes) times `across` (nodes, columns)."""
+
+    down: Floats
+    across: Floats
+
+    def rows(self, first: int, after: int) -> Floats:
+        """Areas of rows `first` to before `after`: float64 (rows, columns)."""
+        return _weighted_sum(self.down[first:after], self.across)
+
+
+def block_areas(grid: Grid, window: Window) -> BlockAreas:
     """True areas of a block's cells on the ellipsoid of the grid's CRS.
 
     Parameters
@@ -109,8 +121,8 @@ def cell_areas(grid: Grid, window: Window) -> Floats:
 
     Returns
     -------
-    float64 array (rows, columns)
-        Areas [m2]. They depend on grid and block only.
+    BlockAreas
+        They depend on grid and block only.
 
     Raises
     ------
@@ -128,7 +140,7 @@ def cell_areas(grid: Grid, window: Window) -> Floats:
     _, b, _, d, _, _ = grid.transform
     if crs.is_geographic and b == 0 and d == 0:
         rows = _geographic_rows(grid, window, crs)
-        return np.repeat(rows[:, np.newaxis], window.width, axis=1)
+        return BlockAreas(rows[:, np.newaxis], np.ones((1, window.width)))
     # The full block even at a ragged edge: its points must not depend on the grid's size.
     nodes = _chebyshev(grid.block)
     row, col = np.meshgrid(window.row + nodes, window.col + nodes, indexing="ij")
@@ -143,23 +155,21 @@ def cell_areas(grid: Grid, window: Window) -> Floats:
     if not np.all(np.isfinite(scale)):
         scale = np.where(np.isfinite(scale), scale, np.nanmean(scale))
     weights = _interpolation(grid.block)
-    across = _weighted_sum(weights[: window.width], scale.T)
-    return grid.cell_area * _weighted_sum(weights[: window.height], across.T)
+    across = _weighted_sum(weights[: window.width], grid.cell_area * scale.T)
+    return BlockAreas(weights[: window.height], np.ascontiguousarray(across.T))
+
+
+def cell_areas(grid: Grid, window: Window) -> Floats:
+    """All of `block_areas` as one float64 array (rows, columns) [m2]."""
+    return block_areas(grid, window).rows(0, window.height)
 
 
 def _weighted_sum(weights: Floats, values: Floats) -> Floats:
     # Not a matrix product: a library's blocking must not decide the last bits.
-    total = np.empty((len(weights), values.shape[1]))
-    for top in range(0, len(weights), _ROWS):
-        part = total[top : top + _ROWS]
-        part[:] = weights[top : top + _ROWS, 0, np.newaxis] * values[0]
-        for k in range(1, _NODES):
-            part += weights[top : top + _ROWS, k, np.newaxis] * values[k]
+    total: Floats = weights[:, 0, np.newaxis] * values[0]
+    for k in range(1, len(values)):
+        total += weights[:, k, np.newaxis] * values[k]
     return total
-
-
-_ROWS = 64
-"""Rows treated at a time, so that they stay in a core's cache."""
 
 
 def _chebyshev(block: int) -> Floats:

@@ -1,4 +1,4 @@
-"""The job on one block of arrays: inputs and parameters in, layer values out.
+"""The job on arrays of cells: inputs and parameters in, layer values out.
 
 Pure NumPy: no files, no grid, no tiles. Each layer's values are bound to their function here and
 nowhere else.
@@ -11,7 +11,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.layers import LAYERS
 from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, groundwater_evaporation
 from saltrise.physics.salt import critical_depth, salt_load
@@ -20,9 +19,6 @@ from saltrise.units import DAYS_PER_YEAR
 from saltrise.zonal import ZoneValues
 
 Array = NDArray[np.float64]
-
-CONTINUOUS = tuple(name for name, layer in LAYERS.items() if layer.continuous)
-"""Layers that hold quantities, not classes."""
 
 
 class UnmappedCodeError(ValueError):
@@ -65,13 +61,9 @@ class Recipe:
     constants: dict[str, float]
 
 
-_STRIP_CELLS = 1 << 15
-"""Cells treated at a time: some ten float64 arrays of them stay in a core's cache."""
-
-
 @dataclass(frozen=True)
-class BlockResult:
-    """One block's answer before rounding.
+class CellResult:
+    """Answer of an array of cells before rounding.
 
     `values` holds the continuous layers by name; where not `valid` their content is finite but
     means nothing. `counts` are numbers of cells.
@@ -84,7 +76,7 @@ class BlockResult:
     counts: dict[str, int]
 
     def zone_values(self) -> ZoneValues:
-        """The block as the zone sums take it."""
+        """The cells as the zone sums take them."""
         return ZoneValues(
             depth_m=self.depth.ravel(),
             evaporation_mm_per_year=self.values["evaporation"].ravel(),
@@ -95,14 +87,14 @@ class BlockResult:
         )
 
 
-def compute_block(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, int]) -> BlockResult:
-    """Every layer of one block.
+def compute_cells(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, int]) -> CellResult:
+    """Every layer of some cells.
 
     Parameters
     ----------
     recipe : Recipe
         Parameters of the region.
-    inputs : dict of float64 arrays, each of `shape`
+    inputs : dict of float arrays, each of `shape`
         Raster inputs by role (`depth`, or `ground` and `elevation`; `texture`; `salinity`;
         `potential_evaporation`) in the config's units, NaN where there is no value.
     shape : (int, int)
@@ -110,7 +102,7 @@ def compute_block(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, in
 
     Returns
     -------
-    BlockResult
+    CellResult
         A cell with NaN in any needed input is not valid in any layer.
 
     Raises
@@ -118,25 +110,8 @@ def compute_block(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, in
     UnmappedCodeError
         A texture code has no profile: the input changed since the survey.
     """
-    result = BlockResult(
-        {name: np.empty(shape) for name in CONTINUOUS},
-        np.empty(shape, dtype=np.uint8),
-        np.empty(shape, dtype=bool),
-        np.empty(shape),
-        {},
-    )
-    step = max(1, _STRIP_CELLS // shape[1])
-    for top in range(0, shape[0], step):
-        rows = slice(top, min(top + step, shape[0]))
-        _compute_strip(recipe, {role: v[rows] for role, v in inputs.items()}, result, rows)
-    return result
-
-
-def _compute_strip(
-    recipe: Recipe, inputs: dict[str, Array], result: BlockResult, rows: slice
-) -> None:
-    shape = result.depth[rows].shape
-    given = {role: np.full(shape, value) for role, value in recipe.constants.items()} | inputs
+    given = {role: values.astype(np.float64) for role, values in inputs.items()}
+    given |= {role: np.full(shape, value) for role, value in recipe.constants.items()}
     depth = _depth(recipe, given)
     tds = given["salinity"] * recipe.tds_factor
     demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
@@ -162,11 +137,7 @@ def _compute_strip(
     counts["at_surface"] = int(np.count_nonzero(valid & surface))
     counts["assessed"] = int(np.count_nonzero(valid)) - counts["at_surface"]
     counts["demand_limited"] = int(np.count_nonzero(limited))
-    for name, target in result.values.items():
-        target[rows] = values[name]
-    result.hazard_class[rows], result.valid[rows], result.depth[rows] = classes, valid, depth
-    for reason, count in counts.items():
-        result.counts[reason] = result.counts.get(reason, 0) + count
+    return CellResult(values, classes, valid, depth, counts)
 
 
 def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:

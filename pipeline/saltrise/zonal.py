@@ -8,7 +8,7 @@ The region as a whole takes part as zone `REGION`.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -45,9 +45,10 @@ _COMPACT = 2_000_000
 
 @dataclass(frozen=True)
 class ZoneValues:
-    """One block's values before rounding, flat, in row-major order; `depth_m` [m],
-    `evaporation_mm_per_year`, `salt_load` [t/ha/year], `critical_depth` and `depth_margin` [m].
-    Where `hazard_class` is 0 the others are finite but mean nothing.
+    """Values before rounding of a run of a block's cells, flat, in row-major order.
+
+    `depth_m` [m], `evaporation_mm_per_year`, `salt_load` [t/ha/year], `critical_depth` and
+    `depth_margin` [m]. Where `hazard_class` is 0 the others are finite but mean nothing.
     """
 
     depth_m: Floats
@@ -96,154 +97,195 @@ class ZoneTotals:
         return self.sums.get(zone, np.zeros(_COLUMNS))
 
 
-def block_partial(
-    cover: BlockCover, area_m2: Floats, values: ZoneValues, unit_m2: float
-) -> ZonePartial:
-    """Sums of one block for the region and every zone that meets it.
+class BlockSums:
+    """Sums of one block under way, for the region and every zone that meets it.
 
-    Parameters
-    ----------
-    cover : BlockCover
-        Cells that zones cover.
-    area_m2 : float64 array
-        True areas of the block's cells.
-    values : ZoneValues
-        The block's values.
-    unit_m2 : float
-        Area of one count in the histograms.
+    A class because a block comes strip by strip, while its numbers are still in the processor's
+    cache. Slot 0 holds what belongs to no zone as a whole, slot k the whole cells of zone k; the
+    region is all slots together. What zones cover in part is weighed apart.
     """
-    area = area_m2.ravel()
-    block = _Prepared.of(values)
-    region = _sums(block, np.array([REGION]), area, None, None, unit_m2)
-    if not cover.cell.size:
-        return region
-    zones, local = np.unique(cover.zone, return_inverse=True)
-    numbers = zones.astype(np.int64)
-    if len(zones) == 1 and cover.cell.size == area.size and cover.fraction.min() == 1.0:
-        return concat([region, _renumbered(region, numbers[0])])
-    weight = cover.fraction * area[cover.cell]
-    return concat([region, _sums(block, numbers, weight, cover.cell, local, unit_m2)])
 
+    def __init__(self, cover: BlockCover, unit_m2: float) -> None:
+        self._cover, self._unit = cover, unit_m2
+        slots = len(cover.zones) + 1
+        self._whole = np.zeros((slots, _COLUMNS))
+        self._part = np.zeros((slots, _COLUMNS))
+        self._whole_bins = [_Bins(slots) for _ in QUANTITIES]
+        self._part_bins = [_Bins(slots) for _ in QUANTITIES]
 
-def _renumbered(partial: ZonePartial, zone: np.int64) -> ZonePartial:
-    histogram = partial.histogram
-    return ZonePartial(
-        np.array([zone]),
-        partial.sums,
-        Histogram(
-            np.full_like(histogram.zone, zone), histogram.quantity, histogram.bin, histogram.weight
-        ),
-    )
+    def add(self, first: int, area_m2: Floats, values: ZoneValues) -> None:
+        """Take the cells from `first` on, in the block's row-major order.
+
+        Parameters
+        ----------
+        first : int
+            Position of the first cell in the block.
+        area_m2 : flat float64 array
+            True areas of the cells.
+        values : ZoneValues
+            Their values.
+        """
+        starts, slots = self._runs(first, area_m2.size)
+        cells = _Cells.of(values)
+        lengths = np.diff(np.append(starts, area_m2.size))
+        label = None if starts.size == 1 else np.repeat(slots, lengths)
+        dry = area_m2 * cells.assessed
+        whole = self._whole
+        for column, weighed in enumerate(cells.weighed(dry, area_m2)):
+            sums = np.add.reduceat(weighed, starts)
+            whole[:, _CODES + column] += np.bincount(slots, sums, len(whole))
+        self._count(self._whole, self._whole_bins, cells, label, int(slots[0]), area_m2)
+        self._add_part(first, area_m2, values)
+
+    def _runs(self, first: int, size: int) -> tuple[Whole, NDArray[np.intp]]:
+        """Starts (within the strip) and slots of the runs of a strip."""
+        cover = self._cover
+        low = int(np.searchsorted(cover.run_start, first, side="right")) - 1
+        high = int(np.searchsorted(cover.run_start, first + size))
+        return np.maximum(cover.run_start[low:high] - first, 0), cover.run_slot[low:high]
+
+    def _add_part(self, first: int, area_m2: Floats, values: ZoneValues) -> None:
+        """Cells that a zone covers in part, or that lie in several zones."""
+        cover = self._cover
+        low, high = np.searchsorted(cover.cell, (first, first + area_m2.size))
+        if low == high:
+            return
+        here, slot = cover.cell[low:high] - first, cover.slot[low:high]
+        cells = _Cells.of(ZoneValues(*(array[here] for array in vars(values).values())))
+        weight = area_m2[here] * cover.fraction[low:high]
+        part = self._part
+        for column, weighed in enumerate(cells.weighed(weight * cells.assessed, weight)):
+            part[:, _CODES + column] += np.bincount(slot, weighed, len(part))
+        self._count(part, self._part_bins, cells, slot, 0, weight)
+
+    def _count(
+        self,
+        columns: Floats,
+        bins: list[_Bins],
+        cells: _Cells,
+        slot: NDArray[np.intp] | None,
+        only: int,
+        weight: Floats,
+    ) -> None:
+        """Areas by code and histograms; `only` is the slot where all cells share one."""
+        place = cells.code if slot is None else slot * _CODES + cells.code
+        if slot is None:
+            columns[only, :_CODES] += np.bincount(place, weight, _CODES)
+        else:
+            counted = np.bincount(place, weight, len(columns) * _CODES)
+            columns[:, :_CODES] += counted.reshape(-1, _CODES)
+        # At least one count, so that a zone far smaller than a cell still has percentiles.
+        count = np.maximum(np.rint(weight * (1.0 / self._unit)), 1.0) * cells.assessed
+        for held, values in zip(bins, cells.quantities, strict=True):
+            held.add(values, slot, only, count)
+
+    def partial(self) -> ZonePartial:
+        """The block's sums: a row for the region, then one a zone."""
+        numbers = np.append(REGION, self._cover.zones)
+        sums = self._whole + self._part
+        sums[0] = self._whole.sum(axis=0)
+        parts = []
+        for quantity in range(len(QUANTITIES)):
+            whole, part = self._whole_bins[quantity], self._part_bins[quantity]
+            parts += [
+                whole.histogram(np.full(numbers.size, REGION), quantity, first=0),
+                whole.histogram(numbers, quantity, first=1),
+                part.histogram(numbers, quantity, first=1),
+            ]
+        return ZonePartial(numbers, sums, _join(parts))
 
 
 @dataclass(frozen=True)
-class _Prepared:
-    """What every zone of a block needs, made once: values, codes, and the span of the bins."""
+class _Cells:
+    """What the sums need of a run of cells: its code, whether it is assessed, its quantities."""
 
-    values: ZoneValues
     code: NDArray[np.uint8]
-    low: tuple[int, ...]
-    span: tuple[int, ...]
+    assessed: NDArray[np.bool_]
+    surface: NDArray[np.bool_]
+    summed: tuple[Floats, ...]
+    load: Floats
+    quantities: tuple[Floats, ...]
 
     @classmethod
-    def of(cls, values: ZoneValues) -> _Prepared:
-        code = np.empty(values.hazard_class.size, dtype=np.uint8)
-        low, high = [_NO_BIN] * len(QUANTITIES), [0] * len(QUANTITIES)
-        for part in _chunks(code.size):
-            depth = values.depth_m[part]
-            kind = values.hazard_class[part] * np.uint8(DEPTHS)
-            for edge in DEPTH_EDGES_M:
-                kind += depth >= edge
-            code[part] = kind * np.uint8(2) + (values.depth_margin[part] < 0)
-            for k, name in enumerate(QUANTITIES):
-                bins = _bins(getattr(values, name)[part])
-                # Less one and unsigned: zero, which has a place of its own, becomes the greatest.
-                low[k] = min(low[k], int((bins - 1).view(np.uint64).min()) + 1)
-                high[k] = max(high[k], int(bins.max()))
-        span = tuple(max(h - b, 0) + 2 for b, h in zip(low, high, strict=True))
-        return cls(values, code, tuple(low), span)
-
-
-_NO_BIN = 1 << 30
-_CHUNK = 1 << 15
-
-
-def _chunks(size: int) -> list[slice]:
-    """Runs of cells small enough that a core's cache holds their numbers."""
-    return [slice(a, min(a + _CHUNK, size)) for a in range(0, size, _CHUNK)]
-
-
-def _bins(values: Floats) -> Whole:
-    return values.view(np.int64) >> _BIN_SHIFT
-
-
-def _sums(
-    block: _Prepared,
-    zones: Whole,
-    weight: Floats,
-    cell: NDArray[np.int32] | None,
-    local: NDArray[np.intp] | None,
-    unit_m2: float,
-) -> ZonePartial:
-    """Sums of the given zones; `cell` and `local` (its zone's position) are None for the region."""
-    count, values = len(zones), block.values
-    columns = np.zeros((count, _COLUMNS))
-    histograms = [np.zeros((count, span)) for span in block.span]
-    weighed = (
-        values.depth_m,
-        values.evaporation_mm_per_year,
-        values.salt_load,
-        values.depth_margin,
-    )
-    for part in _chunks(weight.size):
-        where = part if cell is None else cell[part]
-        zone = None if local is None or count == 1 else local[part]
-        area, hazard = weight[part], values.hazard_class[where]
-        columns[:, :_CODES] += _counted(block.code[where], zone, area, count, _CODES)
+    def of(cls, values: ZoneValues) -> _Cells:
+        hazard = values.hazard_class
+        code = hazard * np.uint8(DEPTHS)
+        for edge in DEPTH_EDGES_M:
+            code += values.depth_m >= edge
+        code *= np.uint8(2)
+        code += values.depth_margin < 0
         surface = hazard == CLASSES - 1
-        assessed = (hazard > 0) & ~surface
-        dry = area * assessed
-        for k, value in enumerate(weighed):
-            columns[:, _CODES + k] += _summed(dry * value[where], zone, count)
-        if surface.any():
-            load = area * surface * values.salt_load[where]
-            columns[:, -1] += _summed(load, zone, count)
-        # At least one count, so that a zone far smaller than a cell still has percentiles.
-        whole = np.maximum(np.rint(area / unit_m2), 1.0) * assessed
-        for k, name in enumerate(QUANTITIES):
-            place = np.maximum(_bins(getattr(values, name)[where]) - (block.low[k] - 1), 0)
-            # Whole numbers below 2^53 add up exactly in any order.
-            histograms[k] += _counted(place, zone, whole, count, block.span[k])
-    sparse = [_histogram(zones, k, block.low[k], found) for k, found in enumerate(histograms)]
-    return ZonePartial(zones, columns, _join(sparse))
+        return cls(
+            code,
+            (hazard > 0) & ~surface,
+            surface,
+            (
+                values.depth_m,
+                values.evaporation_mm_per_year,
+                values.salt_load,
+                values.depth_margin,
+            ),
+            values.salt_load,
+            (values.salt_load, values.critical_depth),
+        )
+
+    def weighed(self, dry: Floats, area: Floats) -> Iterator[Floats]:
+        """Values of `SUMS`, in its order, each times its weight [m2]."""
+        for values in self.summed:
+            yield dry * values
+        yield area * self.surface * self.load if self.surface.any() else np.zeros_like(area)
 
 
-def _summed(values: Floats, zone: NDArray[np.intp] | None, count: int) -> Floats:
-    sums = values.sum(keepdims=True) if zone is None else np.bincount(zone, values, count)
-    return np.asarray(sums, dtype=np.float64)
+class _Bins:
+    """Histograms of one quantity for all slots, over a span of bins that grows as needed."""
+
+    def __init__(self, slots: int) -> None:
+        self._low = 0
+        self._counts = np.zeros((slots, 0))
+
+    def add(self, values: Floats, slot: NDArray[np.intp] | None, only: int, count: Floats) -> None:
+        """Count cells into their bins; `only` is the slot where all cells share one."""
+        bins = values.view(np.int64) >> _BIN_SHIFT
+        # Less one and unsigned: zero, which has a place of its own, becomes the greatest.
+        low, high = int((bins - 1).view(np.uint64).min()) + 1, int(bins.max())
+        self._cover_span(low, max(high, 1))
+        place = np.maximum(bins - (self._low - 1), 0)
+        slots, span = self._counts.shape
+        # Whole numbers below 2^53 add up exactly in any order.
+        if slot is None:
+            self._counts[only] += np.bincount(place, count, span)
+        else:
+            place += slot * span
+            self._counts += np.bincount(place, count, slots * span).reshape(slots, span)
+
+    def _cover_span(self, low: int, high: int) -> None:
+        slots, span = self._counts.shape
+        if span == 0:
+            # A class of bins beyond what comes first, so that the span seldom has to grow.
+            self._low = max(min(low, high) - _SPARE, 1)
+            self._counts = np.zeros((slots, high - self._low + 2 + _SPARE))
+            return
+        more_low = max(self._low - min(low, high), 0)
+        more_high = max(high - (self._low + span - 2), 0)
+        if more_low or more_high:
+            grown = np.zeros((slots, span + more_low + more_high))
+            grown[:, 0] = self._counts[:, 0]
+            grown[:, 1 + more_low : span + more_low] = self._counts[:, 1:]
+            self._counts, self._low = grown, self._low - more_low
+
+    def histogram(self, zones: Whole, quantity: int, first: int) -> Histogram:
+        """Filled bins of the slots from `first` on; slot k counts for `zones[k]`."""
+        slot, position = np.nonzero(self._counts[first:])
+        counts = self._counts[first:][slot, position]
+        return Histogram(
+            zones[slot + first],
+            np.full(slot.size, quantity, dtype=np.int64),
+            np.where(position == 0, 0, position - 1 + self._low).astype(np.int64),
+            counts.astype(np.int64),
+        )
 
 
-def _counted(
-    code: NDArray[np.uint8] | Whole,
-    zone: NDArray[np.intp] | None,
-    weight: Floats,
-    count: int,
-    width: int,
-) -> Floats:
-    """Weights by zone (rows) and code (columns)."""
-    place = code if zone is None else zone * width + code
-    counts = np.bincount(place, weight, count * width).reshape(count, width)
-    return np.asarray(counts, dtype=np.float64)
-
-
-def _histogram(zones: Whole, quantity: int, low: int, counts: Floats) -> Histogram:
-    zone, position = np.nonzero(counts)
-    return Histogram(
-        zones[zone],
-        np.full(zone.size, quantity, dtype=np.int64),
-        np.where(position == 0, 0, position - 1 + low).astype(np.int64),
-        counts[zone, position].astype(np.int64),
-    )
+_SPARE = 512
 
 
 def concat(partials: Iterable[ZonePartial]) -> ZonePartial:

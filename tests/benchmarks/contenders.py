@@ -44,18 +44,28 @@ def cog_floor(config: Path) -> None:
     from saltrise.engine.estimate import Estimate
     from saltrise.engine.survey import BlockScan, Range, Sighting
     from saltrise.io.fingerprint import Fingerprint
-    from saltrise.recipe import BlockResult
+    from saltrise.recipe import CellResult
     from saltrise.zonal import Histogram, ZonePartial
 
     def copied(_recipe, inputs, _shape):
         valid = np.logical_and.reduce([np.isfinite(values) for values in inputs.values()])
         roles = {"demand": "potential_evaporation"}
-        values = {name: inputs[roles.get(role, role)] for name, role in LAYERS[:-1]}
+        values = {n: inputs[roles.get(r, r)].astype(np.float64) for n, r in LAYERS[:-1]}
         codes = np.nan_to_num(inputs["texture"]).astype(np.uint8)
-        return BlockResult(values, codes, valid, inputs["depth"], {"cells": valid.size})
+        return CellResult(values, codes, valid, inputs["depth"], {"cells": valid.size})
+
+    class Unsummed:
+        """Stands for both areas and sums, and does nothing."""
+
+        def __init__(self, *_: object) -> None: ...
+        def rows(self, *_: object) -> np.ndarray:
+            return nothing
+
+        def add(self, *_: object) -> None: ...
+        def partial(self) -> ZonePartial:
+            return ZonePartial(np.array([-1]), np.zeros((1, 61)), Histogram(*[nothing] * 4))
 
     nothing = np.zeros(0, np.int64)
-    empty = ZonePartial(np.array([-1]), np.zeros((1, 61)), Histogram(*[nothing] * 4))
 
     def unseen(inputs, *_arguments, **_options):
         seen = Range(1, 0, 1.0, 1.0, None)
@@ -63,9 +73,9 @@ def cog_floor(config: Path) -> None:
         return BlockScan(dict.fromkeys(inputs.rasters, seen), codes, 1)
 
     with (
-        patch.object(tiles, "compute_block", copied),
-        patch.object(tiles, "block_partial", lambda *_: empty),
-        patch.object(tiles, "cell_areas", lambda *_: None),
+        patch.object(tiles, "compute_cells", copied),
+        patch.object(tiles, "BlockSums", Unsummed),
+        patch.object(tiles, "block_areas", lambda *_: Unsummed()),
         patch.object(tiles, "_sound_ranges", lambda *_: {}),
         patch.object(region, "_scan", unseen),
         patch("saltrise.engine.prints.fingerprint", lambda *_: Fingerprint(0, "", "")),
@@ -126,7 +136,7 @@ def xarray_dask(config: Path) -> None:
     from saltrise.engine.config import read_settings
     from saltrise.engine.region import make_recipe
     from saltrise.job import Silent, survey
-    from saltrise.recipe import compute_block
+    from saltrise.recipe import compute_cells
 
     recipe = make_recipe(survey(read_settings(config), Silent()))
     folder, target = config.parent, config.parent / "out_xarray"
@@ -141,7 +151,7 @@ def xarray_dask(config: Path) -> None:
 
     def layer(*arrays: np.ndarray, name: str) -> np.ndarray:
         inputs = {r: a.astype(np.float64) for r, a in zip(opened, arrays, strict=True)}
-        result = compute_block(recipe, inputs, arrays[0].shape)
+        result = compute_cells(recipe, inputs, arrays[0].shape)
         if name == "hazard_class":
             return result.hazard_class
         return np.where(result.valid, result.values[name], np.nan).astype(np.float32)

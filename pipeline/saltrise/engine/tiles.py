@@ -15,14 +15,17 @@ from saltrise.engine.records import ComputedTile, section, write_tile
 from saltrise.engine.stop import check_stop
 from saltrise.engine.survey import Range, add_ranges, block_ranges
 from saltrise.errors import UnusableInputError
-from saltrise.grid import Window, cell_areas
+from saltrise.grid import Window, block_areas
 from saltrise.io.encode import encode, store
 from saltrise.layers import LAYERS
 from saltrise.pyramid import Stored, halve
-from saltrise.recipe import BlockResult, UnmappedCodeError, compute_block
-from saltrise.zonal import ZonePartial, block_partial, pack
+from saltrise.recipe import CellResult, UnmappedCodeError, compute_cells
+from saltrise.zonal import BlockSums, ZonePartial, pack
 
 Array = NDArray[np.float64]
+
+_STRIP_CELLS = 1 << 16
+"""Cells computed at a time: some twenty float64 arrays of them fit in a core's cache."""
 
 
 @dataclass
@@ -86,16 +89,29 @@ def _gather(plan: Plan, window: Window) -> _Gathered:
         inputs = {role: reader.read(block) for role, reader in plan.readers.items()}
         gathered.ranges = add_ranges(gathered.ranges, _sound_ranges(plan, inputs, block))
         try:
-            result = compute_block(plan.recipe, inputs, (block.height, block.width))
+            _add_block(plan, gathered, inputs, block, window)
         except UnmappedCodeError as error:
             raise UnusableInputError(f"{ROLES['texture']}: {error}") from error
-        for name, count in result.counts.items():
-            gathered.counts[name] = gathered.counts.get(name, 0) + count
-        _place(plan, gathered, result, block, window)
-        cover = block_cover(plan.zones, block)
-        areas = cell_areas(plan.grid, block)
-        gathered.partials.append(block_partial(cover, areas, result.zone_values(), plan.unit_m2))
     return gathered
+
+
+def _add_block(
+    plan: Plan, gathered: _Gathered, inputs: dict[str, Array], block: Window, window: Window
+) -> None:
+    """Compute a block by strips of rows, so that its numbers stay in the processor's cache."""
+    areas = block_areas(plan.grid, block)
+    sums = BlockSums(block_cover(plan.zones, block), plan.unit_m2)
+    top, left = block.row - window.row, block.col - window.col
+    step = max(1, _STRIP_CELLS // block.width)
+    for first in range(0, block.height, step):
+        after = min(first + step, block.height)
+        strip = {role: values[first:after] for role, values in inputs.items()}
+        result = compute_cells(plan.recipe, strip, (after - first, block.width))
+        here = (slice(top + first, top + after), slice(left, left + block.width))
+        _place(plan, gathered, result, here)
+        area = areas.rows(first, after).ravel()
+        sums.add(first * block.width, area, result.zone_values())
+    gathered.partials.append(sums.partial())
 
 
 def _sound_ranges(plan: Plan, inputs: dict[str, Array], block: Window) -> dict[str, Range]:
@@ -106,23 +122,23 @@ def _sound_ranges(plan: Plan, inputs: dict[str, Array], block: Window) -> dict[s
     return found
 
 
-def _place(
-    plan: Plan, gathered: _Gathered, result: BlockResult, block: Window, window: Window
-) -> None:
-    top, left = block.row - window.row, block.col - window.col
-    here = (slice(top, top + block.height), slice(left, left + block.width))
+def _place(plan: Plan, gathered: _Gathered, result: CellResult, here: tuple[slice, slice]) -> None:
+    """Store a strip's layers and note their moments and counts."""
+    everywhere = bool(result.valid.all())
     for name, target in gathered.layers.items():
-        if LAYERS[name].continuous:
-            stored = store(result.values[name], result.valid, rounded=plan.rounded)
-            gathered.statistics[name].append(_moments(stored[result.valid]))
-            target[here] = stored
-        else:
-            target[here] = result.hazard_class
-            gathered.statistics[name].append(_moments(result.hazard_class[result.valid]))
+        stored = (
+            store(result.values[name], result.valid, rounded=plan.rounded)
+            if LAYERS[name].continuous
+            else result.hazard_class
+        )
+        target[here] = stored
+        gathered.statistics[name].append(_moments(stored if everywhere else stored[result.valid]))
+    for reason, count in result.counts.items():
+        gathered.counts[reason] = gathered.counts.get(reason, 0) + count
 
 
 def _moments(stored: NDArray[np.float32] | NDArray[np.uint8]) -> Array:
-    """Count, least, greatest, mean and sum of squared deviations of one block's valid cells."""
+    """Count, least, greatest, mean and sum of squared deviations of a strip's valid cells."""
     if stored.size == 0:
         return np.array([0.0, np.inf, -np.inf, 0.0, 0.0])
     wide = stored.astype(np.float64)
