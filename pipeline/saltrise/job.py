@@ -227,7 +227,7 @@ def _tiles(plan: Plan, settings: Settings, ears: Listener) -> None:
     indices = range(len(plan.tiles()))
     missing = [index for index in indices if not is_done(plan.work, plan.run, index)]
     if missing:
-        require_room(plan.work.parent, estimate_cost(plan, settings.workers))
+        require_room(plan, settings.workers)
     done = len(indices) - len(missing)
     ears.stage("tiles", len(indices), plan.grid.width * plan.grid.height, done)
     run_tiles(plan, missing, settings.run.scheduler, settings.workers, lambda _: ears.advance())

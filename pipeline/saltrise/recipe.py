@@ -6,6 +6,7 @@ nowhere else.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -87,7 +88,11 @@ class CellResult:
         )
 
 
-def compute_cells(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, int]) -> CellResult:
+def compute_cells(
+    recipe: Recipe,
+    inputs: Mapping[str, NDArray[np.float32] | Array],
+    shape: tuple[int, int],
+) -> CellResult:
     """Every layer of some cells.
 
     Parameters
@@ -110,7 +115,7 @@ def compute_cells(recipe: Recipe, inputs: dict[str, Array], shape: tuple[int, in
     UnmappedCodeError
         A texture code has no profile: the input changed since the survey.
     """
-    given = {role: values.astype(np.float64) for role, values in inputs.items()}
+    given: dict[str, Array] = {role: values.astype(np.float64) for role, values in inputs.items()}
     given |= {role: np.full(shape, value) for role, value in recipe.constants.items()}
     depth = _depth(recipe, given)
     tds = given["salinity"] * recipe.tds_factor

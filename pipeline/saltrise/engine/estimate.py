@@ -5,7 +5,6 @@ from __future__ import annotations
 import shutil
 import time
 from dataclasses import dataclass
-from pathlib import Path
 
 from saltrise.engine.plan import Plan
 from saltrise.engine.tiles import compute_tile
@@ -25,6 +24,9 @@ _ASSEMBLY = 0.2
 """Time of everything after the tiles over the tiles' own."""
 
 _SAMPLES = 5
+
+_PLAIN_BYTES = 4 * 1.4 * 2
+"""Bytes a cell and layer without compression: float32, overviews, tiles and final file."""
 
 
 @dataclass(frozen=True)
@@ -70,27 +72,32 @@ def _window(block: Window) -> Window:
     return Window(block.row, block.col, block.height, block.width)
 
 
-def require_room(folder: Path, estimate: Estimate) -> None:
+def require_room(plan: Plan, workers: int) -> None:
     """Refuse a run that the disk cannot hold.
 
     Parameters
     ----------
-    folder : Path
-        Folder of the unfinished run; what is in it already counts as paid.
-    estimate : Estimate
-        Expected cost.
+    plan : Plan
+        The region; what is in its folder already counts as paid.
+    workers : int
+        Threads or processes at work.
 
     Raises
     ------
     InputError
         Tiles and final files together need more than is free; names both.
     """
+    folder = plan.work.parent
     there = folder
     while not there.exists():
         there = there.parent
+    free = shutil.disk_usage(there).free / 1e9
+    cells = plan.grid.width * plan.grid.height
+    if cells * len(plan.layers) * _PLAIN_BYTES / 1e9 < free:
+        return  # room enough even if nothing compressed: no need for a sample
+    estimate = estimate_cost(plan, workers)
     held = sum(file.stat().st_size for file in folder.rglob("*") if file.is_file()) / 1e9
     need = estimate.scratch_gb + estimate.final_gb - held
-    free = shutil.disk_usage(there).free / 1e9
     if need > free:
         raise InputError(
             f"{folder}: the run needs about {need:.3g} GB of disk for tiles and final layers, "

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import ctypes
 import multiprocessing
+import os
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import Executor, ProcessPoolExecutor, ThreadPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
@@ -25,6 +27,21 @@ T = TypeVar("T")
 R = TypeVar("R")
 
 PLAN = "plan.pickle"
+
+_MMAP_THRESHOLD, _TRIM_THRESHOLD = -3, -1
+_KEPT_BYTES = 32 << 20
+
+
+def keep_memory() -> None:
+    """Ask the C library to keep freed arrays of up to 32 MB for the next block.
+
+    glibc gives each back to the system and takes it anew, zeroed, for every block: a tenth of
+    the run. Other C libraries are left as they are.
+    """
+    tune = getattr(ctypes.CDLL(None), "mallopt", None) if os.name == "posix" else None
+    if tune is not None:
+        tune(_MMAP_THRESHOLD, _KEPT_BYTES)
+        tune(_TRIM_THRESHOLD, 32 * _KEPT_BYTES)
 
 
 def on_threads(
@@ -63,6 +80,7 @@ def run_tiles(
         A tile failed, or a worker process was killed.
     """
     if scheduler == "threads":
+        keep_memory()
         on_threads(lambda index: run_tile(plan, index), indices, workers, done)
         return
     durable.write_pickle(plan.work / PLAN, plan)
@@ -97,6 +115,7 @@ def _run_tile_of(place: tuple[str, int]) -> int:
 
 @lru_cache(maxsize=1)
 def _plan_in(work: str) -> Plan:
+    keep_memory()
     plan: Plan = durable.read_pickle(Path(work) / PLAN)
     return plan
 

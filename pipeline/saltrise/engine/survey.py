@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from saltrise.engine.inputs import Inputs
 from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
-from saltrise.io.align import BlockReader
+from saltrise.io.align import BlockReader, Floats
 
 Each = Callable[[Callable[[Window], "BlockScan"], Iterable[Window]], Iterable["BlockScan"]]
 """Applies a function to windows, in any order and on any threads."""
@@ -165,7 +165,7 @@ def _scan_window(inputs: Inputs, readers: dict[str, BlockReader], window: Window
 
 
 def block_ranges(
-    values: dict[str, NDArray[np.float64]], constants: dict[str, float], block: Window
+    values: dict[str, Floats], constants: dict[str, float], block: Window
 ) -> dict[str, Range]:
     """What each input, and depth where it is a difference, holds in one block."""
     if "ground" in values or "elevation" in values:
@@ -174,13 +174,11 @@ def block_ranges(
             values[role] if role in values else np.full(shape, constants[role])
             for role in ("ground", "elevation")
         )
-        values = values | {"depth": ground - water}
+        values = values | {"depth": ground.astype(np.float64) - water}
     return {role: _range(read, block) for role, read in values.items()}
 
 
-def _scan_block(
-    values: dict[str, NDArray[np.float64]], constants: dict[str, float], block: Window
-) -> BlockScan:
+def _scan_block(values: dict[str, Floats], constants: dict[str, float], block: Window) -> BlockScan:
     complete = np.ones((block.height, block.width), dtype=bool)
     for read in values.values():
         complete &= np.isfinite(read)
@@ -190,7 +188,7 @@ def _scan_block(
     return BlockScan(block_ranges(values, constants, block), codes, int(complete.sum()))
 
 
-def _range(values: NDArray[np.float64], block: Window) -> Range:
+def _range(values: Floats, block: Window) -> Range:
     # fmin and fmax pass over NaN.
     low, high = float(np.fmin.reduce(values, None)), float(np.fmax.reduce(values, None))
     if not (np.isfinite(low) and np.isfinite(high)):
@@ -208,7 +206,7 @@ def _sighting(found: NDArray[np.bool_], block: Window) -> Sighting:
     return Sighting(int(found.sum()), block.row + row, block.col + col)
 
 
-def _codes(values: NDArray[np.float64], block: Window) -> dict[float, Sighting]:
+def _codes(values: Floats, block: Window) -> dict[float, Sighting]:
     flat = values.ravel()
     codes, first, counts = _distinct(flat)
     return {
@@ -218,14 +216,14 @@ def _codes(values: NDArray[np.float64], block: Window) -> dict[float, Sighting]:
 
 
 def _distinct(
-    flat: NDArray[np.float64],
+    flat: Floats,
 ) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.int64]]:
     """Distinct numbers that are not NaN, where each comes first, and how often it comes."""
     low, high = np.fmin.reduce(flat), np.fmax.reduce(flat)
     if low >= 0 and high < _FEW_CODES:
         # Counting beats sorting by ten for the small codes that class maps have.
-        whole = np.where(np.isnan(flat), _FEW_CODES, flat)
-        places = whole.astype(np.int64)
+        whole = np.where(np.isnan(flat), np.float32(_FEW_CODES), flat)
+        places = whole.astype(np.int32)
         if np.array_equal(places, whole):
             counts = np.bincount(places, minlength=_FEW_CODES + 1)[:_FEW_CODES]
             few = np.flatnonzero(counts)
@@ -233,7 +231,7 @@ def _distinct(
             return few.astype(np.float64), first, counts[few].astype(np.int64)
     seen = np.flatnonzero(~np.isnan(flat))
     codes, at, counts = np.unique(flat[seen], return_index=True, return_counts=True)
-    return codes, seen[at].astype(np.int64), counts.astype(np.int64)
+    return codes.astype(np.float64), seen[at].astype(np.int64), counts.astype(np.int64)
 
 
 _FEW_CODES = 4096

@@ -24,6 +24,8 @@ from saltrise.grid import Grid, Window
 from saltrise.io.mosaic import ALIGNED, Mosaic, Placed, cell_offset, intersect, same_crs
 from saltrise.io.vrt import Rect
 
+Floats = NDArray[np.float32] | NDArray[np.float64]
+
 Method = Literal["cell for cell", "nearest", "bilinear", "average"]
 
 MUCH_FINER = 0.5
@@ -40,6 +42,18 @@ _RESAMPLING = {
 
 
 @dataclass(frozen=True)
+class Direct:
+    """A plain file that holds the whole region cell for cell: no virtual raster is needed.
+
+    `corner` is the column and row in the file of the region's first cell.
+    """
+
+    path: str
+    corner: tuple[int, int]
+    nodata: float | None
+
+
+@dataclass(frozen=True)
 class Aligned:
     """One input on the region's grid.
 
@@ -53,6 +67,7 @@ class Aligned:
     method: Method
     offset: tuple[float, float] | None
     vrt: str
+    direct: Direct | None = None
 
     def describe(self) -> str:
         """One phrase for the run's report."""
@@ -129,7 +144,8 @@ def align(mosaic: Mosaic, grid: Grid, *, classes: bool) -> Aligned:
         if worst <= ALIGNED:
             shift = (round(col), round(row))
             vrt = mosaic.vrt_on(grid.width, grid.height, grid.transform, *shift)
-            return Aligned(mosaic, grid, "cell for cell", (col - shift[0], row - shift[1]), vrt)
+            apart = (col - shift[0], row - shift[1])
+            return Aligned(mosaic, grid, "cell for cell", apart, vrt, _direct(mosaic, grid, *shift))
         same_cells = _same_cells(mosaic.transform, grid.transform)
         offset = (col - round(col), row - round(row)) if same_cells else None
     else:
@@ -138,6 +154,23 @@ def align(mosaic: Mosaic, grid: Grid, *, classes: bool) -> Aligned:
     if not classes and relative_cell_size(mosaic, grid) < MUCH_FINER:
         method = "average"
     return Aligned(mosaic, grid, method, offset, mosaic.vrt())
+
+
+def _direct(mosaic: Mosaic, grid: Grid, col: int, row: int) -> Direct | None:
+    """The one file that can be read as it is; it saves the virtual raster's work on every cell."""
+    tile = mosaic.tiles[0]
+    file = tile.file
+    corner = (col - tile.col, row - tile.row)
+    inside = (
+        min(corner) >= 0
+        and corner[0] + grid.width <= file.width
+        and corner[1] + grid.height <= file.height
+    )
+    plain = not file.masked and mosaic.dtype == "Float32"
+    both = None not in (file.nodata, mosaic.nodata) and file.nodata != mosaic.nodata
+    if len(mosaic.tiles) > 1 or not inside or not plain or both:
+        return None
+    return Direct(file.path, corner, file.nodata if mosaic.nodata is None else mosaic.nodata)
 
 
 def _same_cells(a: tuple[float, ...], b: tuple[float, ...]) -> bool:
@@ -209,8 +242,10 @@ class BlockReader:
         # Handles stay behind: another process opens its own.
         return BlockReader, (self.aligned,)
 
-    def read(self, window: Window) -> NDArray[np.float64]:
-        """Values of one block of the region's grid, float64, NaN where there is no value.
+    def read(self, window: Window) -> Floats:
+        """Values of one block of the region's grid, NaN where there is no value.
+
+        float32 where that holds every value of the input exactly, else float64.
 
         Raises
         ------
@@ -219,12 +254,17 @@ class BlockReader:
         """
         try:
             dataset = self._open()
-            block = RasterWindow(window.col, window.row, window.width, window.height)
-            values = dataset.read(1, window=block)
+            direct = self.aligned.direct
+            col, row = (0, 0) if direct is None else direct.corner
+            block = RasterWindow(window.col + col, window.row + row, window.width, window.height)
+            values: Floats = dataset.read(1, window=block)
         except RasterioError as error:
             raise UnusableInputError(self._broken(window, error)) from error
-        wide: NDArray[np.float64] = values.astype(np.float64)
-        return wide
+        if direct is not None:
+            values = values.astype(np.float32, copy=False)
+            if direct.nodata is not None:
+                values[values == np.float32(direct.nodata)] = np.nan
+        return values
 
     def _open(self) -> rasterio.DatasetReader | WarpedVRT:
         if not hasattr(self._local, "dataset"):
@@ -242,6 +282,8 @@ class BlockReader:
 
 
 def _open(aligned: Aligned) -> rasterio.DatasetReader | WarpedVRT:
+    if aligned.direct is not None:
+        return rasterio.open(aligned.direct.path)
     source = rasterio.open(aligned.vrt)
     if aligned.method == "cell for cell":
         return source

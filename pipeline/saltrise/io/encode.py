@@ -69,5 +69,6 @@ def encode(
             blockysize=block,
             **creation_options(layer, compression),
         ) as dataset:
-            dataset.write(padded, 1)
+            # Three axes: rasterio would copy a plain matrix first.
+            dataset.write(padded[np.newaxis])
         return bytes(memory.getbuffer())
