@@ -34,25 +34,28 @@ def main() -> None:
     signal.signal(signal.SIGTERM, _terminate)
     try:
         code = commands.main(standalone_mode=False)
-    except InputError as error:
-        console.print_faults(error.faults)
-        code = error.exit_code
-    except SaltriseError as error:
-        console.print_faults((str(error),))
-        code = error.exit_code
     except click.ClickException as error:
         error.show()
         code = error.exit_code
-    except (KeyboardInterrupt, click.Abort):
-        console.print_faults((f"interrupted; {_RESUME}",))
-        code = INTERRUPTED
-    except _Terminated:
-        console.print_faults((f"terminated; {_RESUME}",))
-        code = TERMINATED
-    except MemoryError:
-        console.print_faults(("out of memory; use a smaller run.tile or fewer run.workers",))
-        code = 1
+    except BaseException as error:
+        code, faults = _outcome(error)
+        console.print_faults(faults)
     sys.exit(code or 0)
+
+
+def _outcome(error: BaseException) -> tuple[int, tuple[str, ...]]:
+    """Exit code of an error that a user is meant to read, and its lines; others go on."""
+    if isinstance(error, InputError):
+        return error.exit_code, error.faults
+    if isinstance(error, SaltriseError):
+        return error.exit_code, (str(error),)
+    if isinstance(error, KeyboardInterrupt | click.Abort):
+        return INTERRUPTED, (f"interrupted; {_RESUME}",)
+    if isinstance(error, _Terminated):
+        return TERMINATED, (f"terminated; {_RESUME}",)
+    if isinstance(error, MemoryError):
+        return 1, ("out of memory; use a smaller run.tile or fewer run.workers",)
+    raise error
 
 
 def _version(context: click.Context, _parameter: click.Parameter, wanted: bool) -> None:
@@ -85,24 +88,56 @@ _verbose = click.option("-v", "--verbose", is_flag=True, help="Print more of wha
 _workers = click.option("--workers", type=click.IntRange(min=1), help="Overrides run.workers.")
 
 
+_scheduler = click.option(
+    "--scheduler",
+    metavar="WHERE",
+    help="Overrides run.scheduler: threads, processes or tcp://host:port of a dask scheduler.",
+)
+
+
 @commands.command()
 @_config
-@click.option("--force", is_flag=True, help="Replace a finished run in the output folder.")
+@click.option(
+    "--force",
+    is_flag=True,
+    help="Replace a finished run in the output folder, discard an unfinished one that differs.",
+)
 @_workers
+@_scheduler
+@click.option(
+    "--log", type=click.Path(path_type=Path), help="Write progress to this file as JSON lines."
+)
 @_quiet
 @_verbose
-def run(config: Path, force: bool, workers: int | None, quiet: bool, verbose: bool) -> None:
-    """Compute the layers and zone tables of a region."""
-    from saltrise.job import Silent
+def run(
+    config: Path,
+    force: bool,
+    workers: int | None,
+    scheduler: str | None,
+    log: Path | None,
+    quiet: bool,
+    verbose: bool,
+) -> None:
+    """Compute the layers and zone tables of a region, or go on where a run was cut short."""
+    from saltrise.io.log import LogFile
     from saltrise.job import run as run_region
 
-    settings = _settings(config, workers)
+    file = LogFile(log) if log else None
     progress = None if quiet else console.Progress()
+    ears = console.Ears([ear for ear in (progress, file) if ear])
     try:
-        result = run_region(settings, force=force, listener=progress or Silent())
+        settings = _settings(config, workers, scheduler)
+        result = run_region(settings, force=force, listener=ears)
+    except BaseException as error:
+        if file:
+            code, faults = _outcome(error)
+            file.end(code, "\n".join(faults))
+        raise
     finally:
         if progress:
             progress.close()
+    if file:
+        file.end(0, str(result.folder))
     if not quiet:
         console.print_summary(result)
     if verbose:
@@ -113,19 +148,22 @@ def run(config: Path, force: bool, workers: int | None, quiet: bool, verbose: bo
 @_config
 @_workers
 @_quiet
-def check(config: Path, workers: int | None, quiet: bool) -> None:
+@_verbose
+def check(config: Path, workers: int | None, quiet: bool, verbose: bool) -> None:
     """Survey every input of a region and say what a run would cost; write nothing."""
-    from saltrise.job import Silent, check_output, doubts, price, survey
+    from saltrise.job import check_output, doubts, price, survey
 
-    settings = _settings(config, workers)
+    settings = _settings(config, workers, None)
     progress = None if quiet else console.Progress()
     try:
-        region = survey(settings, progress or Silent())
+        region = survey(settings, console.Ears([progress] if progress else []))
     finally:
         if progress:
             progress.close()
     if not quiet:
         console.print_survey(region, doubts(region), price(region), check_output(settings))
+    if verbose:
+        console.print_files(region)
 
 
 @commands.command()
@@ -146,8 +184,7 @@ def template() -> None:
     console.print_text(file.read_text("utf-8"))
 
 
-def _settings(config: Path, workers: int | None) -> Settings:
+def _settings(config: Path, workers: int | None, scheduler: str | None) -> Settings:
     from saltrise.engine.config import read_settings
 
-    settings = read_settings(config)
-    return settings if workers is None else settings.with_workers(workers)
+    return read_settings(config).with_run(workers=workers, scheduler=scheduler)

@@ -7,8 +7,11 @@ import time
 from typing import TYPE_CHECKING, Any, TextIO
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from saltrise.engine.estimate import Estimate
     from saltrise.engine.region import Region
+    from saltrise.job import Listener
     from saltrise.physics.soils import SoilSet
     from saltrise.result import Result
 
@@ -19,6 +22,23 @@ _MASK_REASONS = {
     "no_salinity": "no groundwater salinity",
     "no_potential_evaporation": "no potential evaporation",
 }
+
+
+class Ears:
+    """Several listeners as one."""
+
+    def __init__(self, listeners: Sequence[Listener]) -> None:
+        self._listeners = listeners
+
+    def stage(self, name: str, total: int, cells: int = 0, done: int = 0) -> None:
+        """Tell all of a new stage."""
+        for listener in self._listeners:
+            listener.stage(name, total, cells, done)
+
+    def advance(self) -> None:
+        """Tell all of a step."""
+        for listener in self._listeners:
+            listener.advance()
 
 
 class Progress:
@@ -183,6 +203,14 @@ def print_survey(region: Region, doubts: list[str], estimate: Estimate, output: 
         print(f"Output: {output}")
     for text in (*region.warnings, *doubts):
         print(f"Warning: {text}")
+
+
+def print_files(region: Region) -> None:
+    """Print every raster file of a region."""
+    for role, aligned in region.inputs.rasters.items():
+        for tile in aligned.mosaic.tiles:
+            file = tile.file
+            print(f"{role}: {file.path}: {file.width} x {file.height}, {file.dtype}")
 
 
 def _print_codes(region: Region) -> None:

@@ -8,11 +8,11 @@ from pathlib import Path
 from typing import Any, Protocol
 
 from saltrise.engine import findings
-from saltrise.engine.account import layer_tags, run_date, run_record, versions
+from saltrise.engine.account import layer_tags, run_date, run_record
 from saltrise.engine.assemble import assemble
 from saltrise.engine.config import read_settings
 from saltrise.engine.estimate import Estimate, estimate_cost, require_room
-from saltrise.engine.identity import digest, identify
+from saltrise.engine.identity import digest, identify, versions
 from saltrise.engine.merge import Totals, merge
 from saltrise.engine.plan import Plan
 from saltrise.engine.prints import Prints, take_prints

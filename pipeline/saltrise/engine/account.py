@@ -9,9 +9,8 @@ from datetime import UTC, datetime
 from importlib.metadata import version
 from typing import Any
 
-import rasterio
-
 from saltrise.engine import findings
+from saltrise.engine.identity import versions
 from saltrise.engine.inputs import ROLES
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
@@ -30,8 +29,6 @@ CAUTIONS = (
     "The choice of soil parameter set can change the answer by a factor of ten or more.",
     "Local codes, standards and licensed practice take precedence.",
 )
-
-_SHOWN_PACKAGES = ("saltrise", "numpy", "scipy", "rasterio", "pyproj", "shapely", "dask")
 
 
 def run_date() -> datetime:
@@ -109,9 +106,3 @@ def parameters(region: Region) -> dict[str, Any]:
         "conductivity": region.soils.conductivity,
         "classes": rows,
     }
-
-
-def versions() -> dict[str, str]:
-    """Versions of what computed the numbers."""
-    found = {name: version(name) for name in _SHOWN_PACKAGES}
-    return found | {"gdal": str(rasterio.__gdal_version__)}

@@ -5,11 +5,15 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Mapping
+from importlib.metadata import version
 from typing import Any
+
+import rasterio
 
 SHARED = ("config", "inputs", "versions")
 """The parts of an identity that run.json holds too."""
 
+_PACKAGES = ("saltrise", "numpy", "scipy", "rasterio", "pyproj", "shapely", "dask")
 _WORDS = {"config": "config", "versions": "version of", "cut": "run"}
 
 
@@ -82,3 +86,9 @@ def _flat(content: Any, key: str = "") -> dict[str, Any]:
 
 def _show(flat: Mapping[str, Any], key: str) -> str:
     return repr(flat[key]) if key in flat else "not given"
+
+
+def versions() -> dict[str, str]:
+    """Versions of what computed the numbers."""
+    found = {name: version(name) for name in _PACKAGES}
+    return found | {"gdal": str(rasterio.__gdal_version__)}

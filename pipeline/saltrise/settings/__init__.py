@@ -134,9 +134,21 @@ class Settings:
         assert self.grid.like is not None
         return RasterInput(paths=(resolve(self.base, self.grid.like),), given=self.grid.like)
 
-    def with_workers(self, workers: int) -> Settings:
-        """The same region with another number of workers."""
-        run = self.run.model_copy(update={"workers": workers})
+    def with_run(self, *, workers: int | None = None, scheduler: str | None = None) -> Settings:
+        """The same region with other workers or another scheduler, where they are given.
+
+        Raises
+        ------
+        InputError
+            There is no such scheduler.
+        """
+        given = {"workers": workers, "scheduler": scheduler}
+        changed = {key: value for key, value in given.items() if value is not None}
+        faults = rule_faults({"run": changed}, self.base) if scheduler is not None else []
+        said = [text for key, text in faults if key == ("run", "scheduler")]
+        if said:
+            raise InputError(*(f"--scheduler: {text}" for text in said))
+        run = self.run.model_copy(update=changed)
         return replace(self, tables=self.tables.model_copy(update={"run": run}))
 
     def fault(self, key: str, message: str) -> str:
