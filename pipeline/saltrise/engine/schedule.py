@@ -22,7 +22,7 @@ from saltrise.engine.identity import versions
 from saltrise.engine.plan import Plan
 from saltrise.engine.stop import ask_stop, clear_stop
 from saltrise.engine.tiles import run_tile
-from saltrise.errors import InputError, RunError
+from saltrise.errors import InputError, RunError, SaltriseError
 from saltrise.io import durable
 from saltrise.io.sources import is_remote
 
@@ -131,7 +131,12 @@ def _processes(workers: int) -> Iterator[Executor]:
 
 def _run_tile_of(task: _Task) -> int:
     work, run, index = task
-    return run_tile(_plan_in(work, run), index)
+    try:
+        return run_tile(_plan_in(work, run), index)
+    except SaltriseError as error:
+        # What lies behind it (a GDAL error) may not pickle, and would take the message with it.
+        error.__cause__ = error.__context__ = None
+        raise
 
 
 @lru_cache(maxsize=1)
@@ -182,7 +187,7 @@ def _on_cluster(plan: Plan, tasks: list[_Task], address: str, done: Callable[[in
         _require_fit(client, plan)
         futures = client.map(_run_tile_of, tasks, pure=False, key=_keys(tasks))
         try:
-            for future in as_completed(futures):
+            for future in as_completed(futures, loop=client.loop):
                 done(future.result())
         except KilledWorker as error:
             raise RunError(f"several dask workers were killed over one tile{_KILLED}") from error
