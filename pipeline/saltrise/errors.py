@@ -35,3 +35,7 @@ class UnusableInputError(RunError):
 
     A survey of the whole region then tells whether the user has something to mend.
     """
+
+
+class BrokenInputError(UnusableInputError):
+    """An input could not be read."""

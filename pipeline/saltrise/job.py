@@ -30,7 +30,13 @@ from saltrise.engine.workdir import (
     finish,
     tidy,
 )
-from saltrise.errors import InputError, RunError, SaltriseError, UnusableInputError
+from saltrise.errors import (
+    BrokenInputError,
+    InputError,
+    RunError,
+    SaltriseError,
+    UnusableInputError,
+)
 from saltrise.io import durable
 from saltrise.io.tables import write_zones_csv
 from saltrise.io.vectors import write_zones_gpkg
@@ -204,6 +210,8 @@ def _settled(
     """What an input that broke under way means: it changed, or the user has to mend it."""
     try:
         _require_unchanged(prints)
+        if isinstance(error, BrokenInputError) and prints.remote():
+            return RunError(f"{error}; finished tiles are kept, run the same command again")
         survey_region(opened, _steps("survey", ears), None, whole=True)
     except InputError as faults:
         if not prints.changed():

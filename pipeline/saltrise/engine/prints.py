@@ -11,6 +11,7 @@ from saltrise.engine.inputs import ROLES
 from saltrise.engine.region import Opened
 from saltrise.engine.schedule import on_threads
 from saltrise.io.fingerprint import Fingerprint, fingerprint, stamp
+from saltrise.io.sources import is_remote
 from saltrise.io.vrt import Rect
 
 _SIDECARS = (".shx", ".dbf", ".prj", ".cpg")
@@ -35,6 +36,10 @@ class Prints:
         """Inputs that are no longer what they were, by their stamps."""
         return [path for path, old in self.stamps.items() if stamp(path) != old]
 
+    def remote(self) -> list[str]:
+        """Inputs that come over a network."""
+        return [path for path in self.stamps if is_remote(path)]
+
     def entries(self, shown: Callable[[str], str]) -> list[dict[str, Any]]:
         """Inputs as run.json and the run's identity hold them."""
         return [
@@ -48,7 +53,7 @@ def take_prints(opened: Opened, done: Callable[[int, int], None]) -> Prints:
 
     Raises
     ------
-    UnusableInputError
+    BrokenInputError
         A file cannot be read.
     """
     files = _files(opened)

@@ -115,7 +115,7 @@ def scan(inputs: Inputs, tile: int, each: Each, roles: Iterable[str] | None = No
 
     Raises
     ------
-    UnusableInputError
+    BrokenInputError
         A file breaks while it is read.
     """
     readers = _readers(inputs, roles)
@@ -130,7 +130,7 @@ def first_look(inputs: Inputs) -> BlockScan:
 
     Raises
     ------
-    UnusableInputError
+    BrokenInputError
         A file breaks while it is read.
     """
     readers, blocks = _readers(inputs, None), list(inputs.grid.blocks())

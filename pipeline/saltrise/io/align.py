@@ -19,7 +19,7 @@ from rasterio.warp import transform as transform_points
 from rasterio.warp import transform_bounds
 from rasterio.windows import Window as RasterWindow
 
-from saltrise.errors import InputError, UnusableInputError
+from saltrise.errors import BrokenInputError, InputError
 from saltrise.grid import Grid, Window
 from saltrise.io.mosaic import ALIGNED, Mosaic, Placed, cell_offset, intersect, same_crs
 from saltrise.io.vrt import Rect
@@ -249,7 +249,7 @@ class BlockReader:
 
         Raises
         ------
-        UnusableInputError
+        BrokenInputError
             GDAL cannot read a file behind it; names the input, block and GDAL's reason.
         """
         try:
@@ -259,7 +259,7 @@ class BlockReader:
             block = RasterWindow(window.col + col, window.row + row, window.width, window.height)
             values: Floats = dataset.read(1, window=block)
         except RasterioError as error:
-            raise UnusableInputError(self._broken(window, error)) from error
+            raise BrokenInputError(self._broken(window, error)) from error
         if direct is not None:
             values = values.astype(np.float32, copy=False)
             if direct.nodata is not None:

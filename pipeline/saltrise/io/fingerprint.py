@@ -13,7 +13,7 @@ import rasterio
 from rasterio.errors import RasterioError
 from rasterio.windows import Window as RasterWindow
 
-from saltrise.errors import UnusableInputError
+from saltrise.errors import BrokenInputError
 from saltrise.io.sources import is_remote
 from saltrise.io.vrt import Rect
 
@@ -55,7 +55,7 @@ def fingerprint(path: str, needed: Rect | None = None, share: float = 1.0) -> Fi
 
     Raises
     ------
-    UnusableInputError
+    BrokenInputError
         The file cannot be read.
     """
     if needed is not None and is_remote(path):
@@ -68,7 +68,7 @@ def fingerprint(path: str, needed: Rect | None = None, share: float = 1.0) -> Fi
             digest = hashlib.file_digest(file, "sha256")
             return Fingerprint(file.tell(), digest.hexdigest(), WHOLE)
     except OSError as error:
-        raise UnusableInputError(f"{path}: cannot be read: {error.strerror or error}") from error
+        raise BrokenInputError(f"{path}: cannot be read: {error.strerror or error}") from error
 
 
 def _of_blocks(path: str, size: int, needed: Rect) -> Fingerprint:
@@ -96,7 +96,7 @@ def _of_blocks(path: str, size: int, needed: Rect) -> Fingerprint:
                     digest.update(dataset.read(1, window=window).tobytes())
     except RasterioError as error:
         reason = error.__cause__ or error.__context__ or error
-        raise UnusableInputError(f"{path}: cannot be read: {reason}") from error
+        raise BrokenInputError(f"{path}: cannot be read: {reason}") from error
     return Fingerprint(size, digest.hexdigest(), PART)
 
 

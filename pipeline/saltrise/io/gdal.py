@@ -9,6 +9,13 @@ from saltrise.errors import InputError
 # GDAL's default cache is 5 % of all memory for each process; it is read at first use.
 os.environ.setdefault("GDAL_CACHEMAX", "256")
 
+# A server that stumbles is asked again before a run gives up.
+os.environ.setdefault("GDAL_HTTP_MAX_RETRY", "5")
+os.environ.setdefault("GDAL_HTTP_RETRY_DELAY", "0.5")
+os.environ.setdefault("GDAL_HTTP_CONNECTTIMEOUT", "20")
+os.environ.setdefault("GDAL_HTTP_LOW_SPEED_TIME", "60")
+os.environ.setdefault("GDAL_HTTP_LOW_SPEED_LIMIT", "1")
+
 _DATA_VARIABLES = ("PROJ_DATA", "PROJ_LIB", "GDAL_DATA")
 
 

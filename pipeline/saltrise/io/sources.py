@@ -41,6 +41,24 @@ class SourceFile:
     """The file declares cells as points (`AREA_OR_POINT=Point`)."""
 
 
+_SCHEMES = {
+    "http://": "/vsicurl/http://",
+    "https://": "/vsicurl/https://",
+    "s3://": "/vsis3/",
+    "gs://": "/vsigs/",
+    "az://": "/vsiaz/",
+}
+"""Addresses and the paths by which GDAL reads them by blocks instead of as a whole."""
+
+
+def gdal_path(path: str) -> str:
+    """A path or address as GDAL reads it by blocks."""
+    for scheme, prefix in _SCHEMES.items():
+        if path.startswith(scheme):
+            return prefix + path.removeprefix(scheme)
+    return path
+
+
 def is_remote(path: str) -> bool:
     """Whether GDAL, not the file system, resolves this path."""
     return path.startswith("/vsi") or "://" in path
@@ -55,7 +73,7 @@ def expand(paths: Sequence[str]) -> tuple[list[str], list[str]]:
     faults: list[str] = []
     for path in paths:
         if is_remote(path) or Path(path).is_file():
-            found[path] = None
+            found[gdal_path(path)] = None
             continue
         if Path(path).is_dir():
             faults.append(f"{path} is a folder, must be a raster file or a pattern of files")

@@ -158,7 +158,7 @@ class Settings:
     def shown(self, path: str) -> str:
         """A file's path for the record: relative to the config's folder where it is below it."""
         if path.startswith("/vsi") or "://" in path:
-            return path
+            return path.removeprefix("/vsicurl/")
         return Path(os.path.relpath(path, self.base)).as_posix()
 
     def resolved(self) -> dict[str, Any]:
