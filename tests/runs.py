@@ -142,11 +142,7 @@ def child(
         return subprocess.run(
             command, capture_output=True, text=True, timeout=120, env=environment, check=False
         )
+    nowhere = subprocess.DEVNULL
     return subprocess.Popen(
-        command,
-        stdout=subprocess.PIPE,
-        stderr=subprocess.PIPE,
-        text=True,
-        env=environment,
-        start_new_session=True,
+        command, stdout=nowhere, stderr=nowhere, env=environment, start_new_session=True
     )
