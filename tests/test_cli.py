@@ -106,6 +106,23 @@ def test_soils_of_a_csv_and_of_nothing_known(tmp_path: Path) -> None:
     assert call("soils", "nothing").returncode == 2
 
 
+def test_soils_side_by_side() -> None:
+    done = call("soils", "--compare", "--depth", "1.5")
+    assert done.returncode == 0
+    head, *rows = done.stdout.splitlines()[1:]
+    sets = head.split()[1:]
+    loam = next(row.split() for row in rows if row.startswith("loam "))
+    rates = dict(zip(sets, map(float, loam[1:]), strict=True))
+    # By quadrature outside this project, mm/day.
+    assert rates["rawls1982"] == pytest.approx(0.603, abs=5e-4)
+    assert rates["clapp-hornberger1978"] == pytest.approx(3.07, abs=5e-3)
+    assert rates["clapp-hornberger1978-arithmetic"] == pytest.approx(60.4, abs=0.05)
+    assert rates["carsel-parrish1988"] == pytest.approx(0.152, abs=5e-4)
+    silt = next(row for row in rows if row.startswith("silt  "))
+    assert "no row" in silt
+    assert call("soils", "--compare", "--depth", "-1").returncode == 2
+
+
 def test_the_template_is_a_config(tmp_path: Path) -> None:
     done = call("template")
     assert done.returncode == 0

@@ -11,10 +11,10 @@ from hypothesis import strategies as st
 
 from saltrise.io.soil_tables import load_soil_set, shipped_sets
 from saltrise.physics.curve import build_curves
-from saltrise.physics.profile import Homogeneous, homogeneous
+from saltrise.physics.profile import Campbell, GardnerExponential, GardnerPower
 
 SETS = [load_soil_set(name, Path()) for name in shipped_sets()]
-SOILS = {f"{s.name}-{t}": homogeneous(row) for s in SETS for t, row in s.rows.items()}
+SOILS = {f"{s.name}-{t}": row.profile for s in SETS for t, row in s.rows.items()}
 CURVES = build_curves(list(SOILS.values()))
 DEPTHS = np.unique(np.r_[np.geomspace(0.05, 30.0, 4001), np.linspace(0.05, 30, 4001)])
 
@@ -32,15 +32,40 @@ def test_error_over_the_contracted_range(number: int) -> None:
     np.testing.assert_allclose(back, DEPTHS, rtol=1e-5)
 
 
+@pytest.mark.parametrize("alpha", [0.3, 1.0, 5.0, 20.0])
+def test_error_under_the_exponential_law(alpha: float) -> None:
+    # Gardner (1958): E = Ks / (exp(alpha L) - 1); the contract holds where E exceeds 1e-6 mm/day.
+    curves = build_curves([GardnerExponential(500.0, alpha)])
+    exact = 500.0 / np.expm1(alpha * DEPTHS)
+    counts = exact > 1e-6
+    ours = curves.max_evaporation(np.zeros(DEPTHS.size, np.int32), DEPTHS)
+    np.testing.assert_allclose(ours[counts], exact[counts], rtol=1e-4)
+    assert np.all(np.isfinite(ours))
+    assert np.all(ours >= 0)
+
+
+@pytest.mark.parametrize("n", [1.5, 2.0, 4.0])
+def test_error_under_gardners_power_law(n: float) -> None:
+    soil = GardnerPower(30.0, 0.6, n)
+    curves = build_curves([soil])
+    profile = np.zeros(DEPTHS.size, np.int32)
+    exact = soil.evaporation(DEPTHS)[0]
+    np.testing.assert_allclose(curves.max_evaporation(profile, DEPTHS), exact, rtol=1e-5)
+    np.testing.assert_allclose(curves.critical_depth(profile, exact), DEPTHS, rtol=1e-5)
+
+
 @given(st.floats(0.5, 50), st.floats(1e-3, 10.0), st.floats(0.01, 1e5))
 def test_error_for_any_parameters_a_csv_may_hold(b, entry, ks) -> None:
-    soil = Homogeneous(entry, b, ks)
+    soil = Campbell(entry, b, ks)
     depths = np.geomspace(0.05, 30.0, 997)
     profile = np.zeros(depths.size, dtype=np.int32)
     exact, _ = soil.evaporation(depths)
     curves = build_curves([soil])
     np.testing.assert_allclose(curves.max_evaporation(profile, depths), exact, rtol=1e-4)
-    np.testing.assert_allclose(curves.critical_depth(profile, exact), depths, rtol=1e-4)
+    # Below 1e-20 mm/day a century lifts less than an atom's breadth.
+    counts = exact > 1e-20
+    back = curves.critical_depth(profile, exact)
+    np.testing.assert_allclose(back[counts], depths[counts], rtol=1e-4)
 
 
 def test_above_one_millimetre_the_curve_holds_its_value() -> None:
@@ -88,6 +113,6 @@ def test_a_cells_answer_does_not_depend_on_its_neighbours_or_profile_number() ->
 def test_talsma_1963_intermediate_textures_reach_deepest(soils) -> None:
     # Talsma T. (1963) Meded. Landbouwhogeschool Wageningen 63(10), abstract: the depth at which
     # flow falls to about 1 mm/day is greatest for intermediate textures.
-    depth = {t: float(homogeneous(r).depth(np.array([1.0]))[0][0]) for t, r in soils.rows.items()}
+    depth = {t: float(r.profile.depth(np.array([1.0]))[0][0]) for t, r in soils.rows.items()}
     assert depth["silt loam"] > depth["sand"]
     assert depth["silt loam"] > depth["clay"]

@@ -13,11 +13,10 @@ from saltrise.errors import InputError
 from saltrise.io.soil_tables import load_soil_set
 from saltrise.physics.curve import build_curves
 from saltrise.physics.demand import at_surface, groundwater_evaporation
-from saltrise.physics.profile import homogeneous
 from saltrise.physics.salt import critical_depth, critical_flux, leaching_equivalent, salt_load
 from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
 
-LOAM = homogeneous(load_soil_set("rawls1982", Path()).rows["loam"])
+LOAM = load_soil_set("rawls1982", Path()).rows["loam"].profile
 CURVES = build_curves([LOAM])
 
 

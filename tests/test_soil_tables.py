@@ -15,22 +15,26 @@ from saltrise.physics.soils import TEXTURES, soil_for
 HEAD = "texture,air_entry_cm,b,ks_cm_per_day,source\n"
 
 
-def test_three_sets_ship_each_with_eleven_classes_and_a_source_on_every_row() -> None:
-    assert shipped_sets() == (
-        "clapp-hornberger1978",
-        "clapp-hornberger1978-arithmetic",
-        "rawls1982",
-    )
-    for name in shipped_sets():
+def test_four_sets_ship_each_with_a_source_on_every_row() -> None:
+    classes = {
+        "carsel-parrish1988": 12,
+        "clapp-hornberger1978": 11,
+        "clapp-hornberger1978-arithmetic": 11,
+        "rawls1982": 11,
+    }
+    assert shipped_sets() == tuple(classes)
+    for name, count in classes.items():
         rows = load_soil_set(name, Path()).rows
-        assert set(rows) == set(TEXTURES) - {"silt"}
+        assert len(rows) == count
+        assert set(rows) <= set(TEXTURES)
+        assert ("silt" in rows) == (count == 12)
         assert all(row.source for row in rows.values())
 
 
 def test_rawls1982_equals_the_printed_table() -> None:
     rows = load_soil_set("rawls1982", Path()).rows
     for printed in table("rawls1982_ranges"):
-        row = rows[printed["texture"]]
+        row = rows[printed["texture"]].profile
         assert row.air_entry_m * 100 == pytest.approx(float(printed["hb_geo_cm"]), rel=1e-12)
         assert 1 / row.b == pytest.approx(float(printed["lambda_geo"]), rel=1e-12)
         assert row.ks_mm_per_day == pytest.approx(float(printed["Ks_cm_h"]) * 240, rel=1e-12)
@@ -41,7 +45,7 @@ def test_rawls1982_geometric_means_lie_in_the_middle_of_their_ranges() -> None:
     # the printed digits.
     rows = load_soil_set("rawls1982", Path()).rows
     for printed in table("rawls1982_ranges"):
-        row = rows[printed["texture"]]
+        row = rows[printed["texture"]].profile
         entry = np.sqrt(float(printed["hb_geo_lo"]) * float(printed["hb_geo_hi"]))
         index = np.sqrt(float(printed["lambda_geo_lo"]) * float(printed["lambda_geo_hi"]))
         assert row.air_entry_m * 100 == pytest.approx(entry, rel=0.01)
@@ -53,7 +57,7 @@ def test_rawls1983_wetting_front_suction_follows_from_the_1982_pair() -> None:
     # geometric means: psi_f = (2 + 3 lambda)/(1 + 3 lambda) hb / 2; differs by up to 1.6 %.
     rows = load_soil_set("rawls1982", Path()).rows
     for printed in table("rawls1983"):
-        row = rows[printed["texture"]]
+        row = rows[printed["texture"]].profile
         index = 1 / row.b
         suction = (2 + 3 * index) / (1 + 3 * index) * row.air_entry_m * 100 / 2
         assert suction == pytest.approx(float(printed["psi_f_cm"]), rel=0.02)
@@ -63,7 +67,8 @@ def test_clapp_hornberger1978_equals_the_printed_table() -> None:
     log_mean = load_soil_set("clapp-hornberger1978", Path()).rows
     arithmetic = load_soil_set("clapp-hornberger1978-arithmetic", Path()).rows
     for printed in table("clapp_hornberger1978"):
-        one, two = log_mean[printed["texture"]], arithmetic[printed["texture"]]
+        texture = printed["texture"]
+        one, two = log_mean[texture].profile, arithmetic[texture].profile
         assert one.air_entry_m * 100 == pytest.approx(float(printed["psi_s_geo_cm"]), rel=1e-12)
         assert two.air_entry_m * 100 == pytest.approx(float(printed["psi_s_arith_cm"]), rel=1e-12)
         assert one.b == two.b == float(printed["b"])
@@ -96,8 +101,13 @@ def test_a_users_csv_works_like_a_shipped_set(tmp_path: Path) -> None:
     text = "\ufeff# my own\n" + HEAD + "silt, 20, 5, 10, my laboratory\n"
     (tmp_path / "mine.csv").write_text(text, encoding="utf-8")
     mine = load_soil_set("mine.csv", tmp_path)
-    row = soil_for(mine, "silt")
-    assert (mine.name, row.air_entry_m, row.b, row.ks_mm_per_day) == ("mine", 0.2, 5.0, 100.0)
+    row = soil_for(mine, "silt").profile
+    assert (mine.name, row.air_entry_m, row.b, row.ks_mm_per_day) == (
+        "mine",
+        0.2,
+        5.0,
+        100.0,
+    )
 
 
 @pytest.mark.parametrize(
@@ -120,13 +130,13 @@ def test_a_users_csv_works_like_a_shipped_set(tmp_path: Path) -> None:
 )
 def test_faults_name_row_column_and_value(text: str, words: str) -> None:
     with pytest.raises(InputError) as caught:
-        parse_soil_set(text.encode(), "mine", "mine.csv")
+        parse_soil_set(text.encode(), "mine", "mine.csv", None)
     assert words in str(caught.value)
 
 
 def test_every_fault_of_a_csv_comes_at_once() -> None:
     with pytest.raises(InputError) as caught:
-        parse_soil_set((HEAD + "sand,x,y,0,me\nclay,1,1,1,\n").encode(), "m", "m.csv")
+        parse_soil_set((HEAD + "sand,x,y,0,me\nclay,1,1,1,\n").encode(), "m", "m.csv", None)
     assert len(caught.value.faults) == 4
 
 
@@ -136,4 +146,53 @@ def test_names_that_are_no_set_or_file(tmp_path: Path) -> None:
     with pytest.raises(InputError, match="no such file"):
         load_soil_set("gone.csv", tmp_path)
     with pytest.raises(InputError, match="not UTF-8"):
-        parse_soil_set(b"\xff\xfe\x00", "m", "m.csv")
+        parse_soil_set(b"\xff\xfe\x00", "m", "m.csv", None)
+
+
+LAWS_OF_A_CSV = {
+    "brooks-corey": ("texture,air_entry_cm,b,ks_cm_per_day,source\nclay,37.3,7.6,1.44,me\n", 1.0),
+    "van-genuchten": (
+        "texture,alpha_per_cm,n,ks_cm_per_day,source\nclay,.036,1.56,24.96,me\n",
+        1.0,
+    ),
+    "gardner-power": ("texture,a,b,n,source\nclay,1100,565,2,me\n", 0.9),
+    "gardner-exponential": ("texture,ks_cm_per_day,alpha_per_cm,source\nclay,10,0.05,me\n", 0.5),
+}
+
+
+@pytest.mark.parametrize(
+    ("law", "expected"),
+    [
+        # By quadrature outside this project, mm/day at the depth beside the CSV.
+        ("brooks-corey", None),
+        ("van-genuchten", 0.544716),
+        # Chino clay, Gardner & Fireman (1958) Soil Science 85:244-249 (constants from memory).
+        ("gardner-power", 2.91449),
+        # Gardner (1958), E = Ks / (exp(alpha L) - 1).
+        ("gardner-exponential", 8.942548984),
+    ],
+)
+def test_a_csv_of_every_law(tmp_path: Path, law: str, expected: float | None) -> None:
+    text, depth = LAWS_OF_A_CSV[law]
+    (tmp_path / "mine.csv").write_text(text)
+    mine = load_soil_set("mine.csv", tmp_path, law)
+    assert mine.conductivity == law
+    rate = mine.rows["clay"].profile.evaporation(np.array([depth]))[0][0]
+    if expected is not None:
+        assert rate == pytest.approx(expected, rel=2e-6)
+    else:
+        same = load_soil_set("mine.csv", tmp_path, "campbell").rows["clay"].profile
+        assert rate == same.evaporation(np.array([depth]))[0][0]
+
+
+def test_a_law_without_its_columns_names_them(tmp_path: Path) -> None:
+    (tmp_path / "mine.csv").write_text(HEAD + "clay,37.3,7.6,1.44,me\n")
+    with pytest.raises(InputError) as caught:
+        load_soil_set("mine.csv", tmp_path, "van-genuchten")
+    assert "missing column alpha_per_cm, n; conductivity 'van-genuchten' needs" in str(caught.value)
+
+
+def test_a_law_that_contradicts_a_shipped_set(tmp_path: Path) -> None:
+    with pytest.raises(InputError, match="is for conductivity 'campbell', not 'van-genuchten'"):
+        load_soil_set("rawls1982", tmp_path, "van-genuchten")
+    assert load_soil_set("rawls1982", tmp_path, "brooks-corey").conductivity == "campbell"

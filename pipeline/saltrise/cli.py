@@ -168,11 +168,24 @@ def check(config: Path, workers: int | None, quiet: bool, verbose: bool) -> None
 
 @commands.command()
 @click.argument("sets", nargs=-1)
-def soils(sets: tuple[str, ...]) -> None:
+@click.option(
+    "--compare", is_flag=True, help="Show every class under every set side by side, in mm/day."
+)
+@click.option(
+    "--depth",
+    type=click.FloatRange(min=0.001, max=30.0),
+    default=1.5,
+    show_default=True,
+    help="Depth to water table [m] to compare at.",
+)
+def soils(sets: tuple[str, ...], compare: bool, depth: float) -> None:
     """List soil parameter sets (all shipped ones, or SETS by name or CSV path)."""
-    from saltrise.engine.listing import list_soils
+    from saltrise.engine.listing import compare_soils, list_soils
 
-    console.print_soils(*list_soils(sets))
+    if compare:
+        console.print_comparison(*compare_soils(sets, depth), depth)
+    else:
+        console.print_soils(*list_soils(sets))
 
 
 @commands.command()

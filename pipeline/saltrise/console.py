@@ -219,20 +219,44 @@ def _print_codes(region: Region) -> None:
         print(f"  code {code:g} = {name}: {seen.count:,} cells")
 
 
+_PARAMETERS = {
+    "air_entry_m": "air entry [m]",
+    "alpha_per_m": "alpha [1/m]",
+    "a": "a [mm/day m^n]",
+    "b": "b [-]",
+    "c": "c [m^n]",
+    "n": "n [-]",
+    "ks_mm_per_day": "Ks [mm/day]",
+}
+
+
 def print_soils(sets: list[SoilSet], depths: dict[tuple[str, str], float]) -> None:
     """Print parameter sets with values, sources and the depth for 1 mm/day [m]."""
     for soils in sets:
         print(f"{soils.name}: {soils.title} ({soils.conductivity})")
-        print(
-            f"  {'texture':<17}{'air entry [m]':>14}{'b [-]':>8}{'Ks [mm/day]':>13}"
-            f"{'1 mm/day at [m]':>17}  source"
-        )
+        names = list(vars(next(iter(soils.rows.values())).profile))
+        heads = "".join(f"{_PARAMETERS[name]:>15}" for name in names)
+        print(f"  {'texture':<17}{heads}{'1 mm/day at [m]':>17}  source")
         for row in soils.rows.values():
-            print(
-                f"  {row.texture:<17}{row.air_entry_m:>14.4g}{row.b:>8.4g}"
-                f"{row.ks_mm_per_day:>13.5g}{depths[soils.name, row.texture]:>17.3g}  {row.source}"
-            )
+            numbers = "".join(f"{vars(row.profile)[name]:>15.5g}" for name in names)
+            depth = depths[soils.name, row.texture]
+            print(f"  {row.texture:<17}{numbers}{depth:>17.3g}  {row.source}")
         print()
+
+
+def print_comparison(
+    sets: list[SoilSet], rates: dict[tuple[str, str], float], depth_m: float
+) -> None:
+    """Print the maximum evaporation [mm/day] of every class under every set side by side."""
+    print(f"Maximum steady evaporation [mm/day] over a water table at {depth_m:g} m, by set:")
+    widths = [max(len(soils.name), 9) + 2 for soils in sets]
+    heads = "".join(f"{s.name:>{w}}" for s, w in zip(sets, widths, strict=True))
+    print(f"{'texture':<17}{heads}")
+    for texture in dict.fromkeys(texture for _, texture in rates):
+        cells = [rates.get((soils.name, texture)) for soils in sets]
+        shown = ("no row" if rate is None else f"{rate:.4g}" for rate in cells)
+        row = "".join(f"{text:>{w}}" for text, w in zip(shown, widths, strict=True))
+        print(f"{texture:<17}{row}")
 
 
 def print_text(text: str) -> None:

@@ -8,7 +8,7 @@ from pathlib import Path
 import geopandas
 import numpy as np
 import rasterio
-from rasterio.transform import from_origin
+from affine import Affine
 from rasterio.windows import Window
 from shapely.geometry import Polygon
 
@@ -89,7 +89,7 @@ def _write(
     coarse = random.random((size // knots + 3, size // knots + 3)).astype(np.float32)
     profile = {"driver": "GTiff", "width": size, "height": size, "count": 1, "dtype": dtype}
     codec = {"compress": "zstd", "zstd_level": 1, "predictor": 3 if dtype == "float32" else 2}
-    place = {"crs": CRS, "transform": from_origin(WEST, NORTH, CELL, CELL), "nodata": nodata}
+    place = {"crs": CRS, "transform": Affine(CELL, 0, WEST, 0, -CELL, NORTH), "nodata": nodata}
     tiles = {"tiled": True, "blockxsize": STRIP, "blockysize": STRIP, "bigtiff": "if_safer"}
     temporary = folder / f"{name}.partial.tif"
     with rasterio.open(temporary, "w", **profile, **codec, **place, **tiles) as dataset:

@@ -5,6 +5,7 @@ cog_floor     our own reader and writer (statistics, overviews and fsync include
               replaced by a copy, no survey, no hashes, no zone sums
 plain_floor   a plain two-thread rasterio loop: read the inputs, write six layers, no overviews
 xarray_dask   the usual xarray + dask script, one write a layer
+nothing       only the imports
 """
 
 from __future__ import annotations
@@ -176,6 +177,11 @@ def xarray_dask(config: Path) -> None:
                 overview_resampling="mode" if classes else "average",
                 bigtiff="if_safer",
             )
+
+
+def nothing(_config: Path) -> None:
+    """The cost of starting."""
+    import saltrise.job  # noqa: F401
 
 
 if __name__ == "__main__":

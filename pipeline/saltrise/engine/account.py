@@ -15,7 +15,7 @@ from saltrise.engine.inputs import ROLES
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
 from saltrise.layers import LAYERS
-from saltrise.physics.soils import soil_for
+from saltrise.physics.soils import SoilRow, soil_for
 from saltrise.zone_table import region_figures
 
 CAUTIONS = (
@@ -97,9 +97,13 @@ def alignment(region: Region) -> dict[str, str]:
     return {ROLES[r]: aligned.describe() for r, aligned in region.inputs.rasters.items()}
 
 
+def _numbers(row: SoilRow) -> dict[str, Any]:
+    return {"texture": row.texture} | vars(row.profile) | {"source": row.source}
+
+
 def parameters(region: Region) -> dict[str, Any]:
     """The soil parameter values used, with their sources."""
-    rows = [asdict(soil_for(region.soils, texture)) for texture in region.textures]
+    rows = [_numbers(soil_for(region.soils, texture)) for texture in region.textures]
     return {
         "set": region.soils.name,
         "title": region.soils.title,

@@ -27,7 +27,6 @@ from saltrise.io.scheme_files import load_scheme
 from saltrise.io.soil_tables import load_soil_set
 from saltrise.io.vectors import Zones, read_zones
 from saltrise.physics.curve import build_curves
-from saltrise.physics.profile import homogeneous
 from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
 from saltrise.recipe import Recipe
 from saltrise.schemes import Scheme
@@ -146,7 +145,7 @@ def _references(settings: Settings) -> tuple[SoilSet, Scheme]:
     faults: list[str] = []
     soils = scheme = None
     try:
-        soils = load_soil_set(settings.soil.parameters, settings.base)
+        soils = load_soil_set(settings.soil.parameters, settings.base, settings.soil.conductivity)
     except InputError as error:
         faults += [settings.fault("soil.parameters", text) for text in error.faults]
     try:
@@ -236,9 +235,7 @@ def make_recipe(region: Region) -> Recipe:
     water, groundwater, climate = settings.water_table, settings.groundwater, settings.climate
     first, profiles = _profile_of_code(region)
     return Recipe(
-        curves=build_curves(
-            [homogeneous(soil_for(region.soils, name)) for name in region.textures]
-        ),
+        curves=build_curves([soil_for(region.soils, name).profile for name in region.textures]),
         first_code=first,
         profile_of_code=profiles,
         depth_factor=float(depth_in_m(1.0, water.unit)),

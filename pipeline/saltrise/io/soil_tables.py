@@ -4,18 +4,41 @@ from __future__ import annotations
 
 import csv
 import math
+from collections.abc import Mapping
 from difflib import get_close_matches
 from importlib import resources
 from pathlib import Path
+from types import MappingProxyType
 
 from saltrise.errors import InputError
 from saltrise.io.text import read_input
-from saltrise.physics.soils import CAMPBELL, TEXTURES, SoilRow, SoilSet
+from saltrise.physics.profile import (
+    Campbell,
+    GardnerExponential,
+    GardnerPower,
+    Profile,
+    VanGenuchten,
+)
+from saltrise.physics.soils import CAMPBELL, LAWS, TEXTURES, SoilRow, SoilSet
 
-COLUMNS = ("texture", "air_entry_cm", "b", "ks_cm_per_day", "source")
+_KS = ("ks_cm_per_day", (1e-6, 1e6))
 
 # Far wider than any soil: beyond these a number is in another unit or column.
-_LIMITS = {"air_entry_cm": (0.01, 10_000.0), "b": (0.5, 50.0), "ks_cm_per_day": (1e-6, 1e6)}
+_NUMBERS: Mapping[str, Mapping[str, tuple[float, float]]] = MappingProxyType(
+    {
+        "campbell": dict([("air_entry_cm", (0.01, 10_000.0)), ("b", (0.5, 50.0)), _KS]),
+        "brooks-corey": dict([("air_entry_cm", (0.01, 10_000.0)), ("b", (0.5, 50.0)), _KS]),
+        "van-genuchten": dict([("alpha_per_cm", (1e-4, 10.0)), ("n", (1.05, 10.0)), _KS]),
+        "gardner-power": {"a": (1e-12, 1e15), "b": (0.0, 1e15), "n": (1.05, 15.0)},
+        "gardner-exponential": dict([_KS, ("alpha_per_cm", (1e-4, 10.0))]),
+    }
+)
+"""Columns of numbers of each conductivity law, with the least and greatest value."""
+
+
+def columns(law: str) -> tuple[str, ...]:
+    """Columns of a CSV for a conductivity law."""
+    return ("texture", *_NUMBERS[law], "source")
 
 
 def shipped_sets() -> tuple[str, ...]:
@@ -26,7 +49,7 @@ def shipped_sets() -> tuple[str, ...]:
     )
 
 
-def load_soil_set(name_or_path: str, base: Path) -> SoilSet:
+def load_soil_set(name_or_path: str, base: Path, law: str | None = None) -> SoilSet:
     """Load a parameter set by its shipped name or from a CSV file.
 
     Parameters
@@ -35,16 +58,25 @@ def load_soil_set(name_or_path: str, base: Path) -> SoilSet:
         A name of `shipped_sets()`, or a path (relative to `base`) ending in `.csv`.
     base : Path
         Folder of the config.
+    law : str, optional
+        Conductivity law: Campbell's for a CSV unless given; a shipped set knows its own.
 
     Raises
     ------
     InputError
-        No such set or file, or every fault of its rows at once as `file:row: column: ...`.
+        No such set or file, a law that is not the shipped set's, or every fault of its rows at
+        once as `file:row: column: ...`.
     """
     names = shipped_sets()
     if name_or_path in names:
         file = resources.files("saltrise") / "data" / "soils" / f"{name_or_path}.csv"
-        return parse_soil_set(file.read_bytes(), name_or_path, f"{name_or_path}.csv")
+        shipped = parse_soil_set(file.read_bytes(), name_or_path, f"{name_or_path}.csv", None)
+        if law is not None and LAWS[law] is not LAWS[shipped.conductivity]:
+            raise InputError(
+                f"the shipped set {name_or_path!r} is for conductivity "
+                f"{shipped.conductivity!r}, not {law!r}; leave soil.conductivity out"
+            )
+        return shipped
     if not name_or_path.lower().endswith(".csv"):
         close = get_close_matches(name_or_path, names, n=1)
         hint = f"; did you mean {close[0]!r}?" if close else ""
@@ -53,13 +85,14 @@ def load_soil_set(name_or_path: str, base: Path) -> SoilSet:
             f"a .csv file of your own{hint}"
         )
     path = base / name_or_path
-    return parse_soil_set(read_input(path), path.stem, str(path))
+    return parse_soil_set(read_input(path), path.stem, str(path), law or CAMPBELL)
 
 
-def parse_soil_set(data: bytes, name: str, source: str) -> SoilSet:
+def parse_soil_set(data: bytes, name: str, source: str, law: str | None) -> SoilSet:
     """A parameter set from the bytes of a CSV.
 
-    Lines that start with `#` are comments; `# title:` in one names the set.
+    Lines that start with `#` are comments; `# title:` in one names the set, and where `law` is
+    None `# conductivity:` its law.
 
     Raises
     ------
@@ -72,47 +105,61 @@ def parse_soil_set(data: bytes, name: str, source: str) -> SoilSet:
         raise InputError(
             f"{source}: is not UTF-8 text ({error.reason}); save it as such"
         ) from error
-    title = next((line[8:].strip() for line in lines if line.startswith("# title:")), name)
+    title = _said(lines, "title") or name
+    law = law or _said(lines, "conductivity") or CAMPBELL
     numbered = [(n, line) for n, line in enumerate(lines, 1) if line.strip() and line[0] != "#"]
     if not numbered:
-        raise InputError(f"{source}: is empty; needs the columns {', '.join(COLUMNS)}")
+        raise InputError(f"{source}: is empty; needs the columns {', '.join(columns(law))}")
     records = [(n, next(csv.reader([line], skipinitialspace=True))) for n, line in numbered]
     header = [column.strip() for column in records[0][1]]
-    faults = _header_faults(header)
+    faults = _header_faults(header, law)
     if faults:
         raise InputError(*(f"{source}:{records[0][0]}: {fault}" for fault in faults))
     rows: dict[str, SoilRow] = {}
     for number, cells in records[1:]:
-        found = _row_faults(header, cells, rows)
+        found = _row_faults(header, cells, rows, law)
         faults += [f"{source}:{number}: {fault}" for fault in found]
         if not found:
-            row = _row(dict(zip(header, cells, strict=True)))
+            row = _row(dict(zip(header, cells, strict=True)), law)
             rows[row.texture] = row
     if len(records) == 1:
         faults.append(f"{source}: has no rows, needs one for each texture class in use")
     if faults:
         raise InputError(*faults)
-    return SoilSet(name, title, CAMPBELL, rows)
+    return SoilSet(name, title, law, rows)
 
 
-def _header_faults(header: list[str]) -> list[str]:
+def _said(lines: list[str], word: str) -> str:
+    head = f"# {word}:"
+    return next((line[len(head) :].strip() for line in lines if line.startswith(head)), "")
+
+
+def _header_faults(header: list[str], law: str) -> list[str]:
     if len(header) == 1 and any(mark in header[0] for mark in ";\t"):
         return ["columns must be separated by commas, not semicolons or tabs"]
     faults = []
+    wanted = columns(law)
     for column in header:
-        if column not in COLUMNS:
-            close = get_close_matches(column, COLUMNS, n=1)
+        if column not in wanted:
+            close = get_close_matches(column, wanted, n=1)
             hint = f"; did you mean {close[0]!r}?" if close else ""
-            faults.append(f"unknown column {column!r}; allowed: {', '.join(COLUMNS)}{hint}")
+            faults.append(
+                f"unknown column {column!r}; allowed for conductivity {law!r}: "
+                f"{', '.join(wanted)}{hint}"
+            )
         elif header.count(column) > 1:
             faults.append(f"column {column!r} stands there more than once")
-    missing = [column for column in COLUMNS if column not in header]
+    missing = [column for column in wanted if column not in header]
     if missing:
-        faults.append(f"missing column {', '.join(missing)}; needs {', '.join(COLUMNS)}")
+        faults.append(
+            f"missing column {', '.join(missing)}; conductivity {law!r} needs {', '.join(wanted)}"
+        )
     return faults
 
 
-def _row_faults(header: list[str], cells: list[str], rows: dict[str, SoilRow]) -> list[str]:
+def _row_faults(
+    header: list[str], cells: list[str], rows: dict[str, SoilRow], law: str
+) -> list[str]:
     if len(cells) != len(header):
         return [f"has {len(cells)} cells, the header has {len(header)}"]
     values = {column: cell.strip() for column, cell in zip(header, cells, strict=True)}
@@ -124,7 +171,7 @@ def _row_faults(header: list[str], cells: list[str], rows: dict[str, SoilRow]) -
         faults.append(f"texture: is {texture!r}, allowed: {', '.join(TEXTURES)}{hint}")
     elif texture in rows:
         faults.append(f"texture: {texture!r} has a row already")
-    for column, (low, high) in _LIMITS.items():
+    for column, (low, high) in _NUMBERS[law].items():
         fault = _number_fault(values[column], low, high)
         if fault:
             faults.append(f"{column}: {fault}")
@@ -143,11 +190,19 @@ def _number_fault(text: str, low: float, high: float) -> str:
     return ""
 
 
-def _row(values: dict[str, str]) -> SoilRow:
-    return SoilRow(
-        texture=values["texture"].strip(),
-        air_entry_m=float(values["air_entry_cm"]) / 100.0,
-        b=float(values["b"]),
-        ks_mm_per_day=float(values["ks_cm_per_day"]) * 10.0,
-        source=values["source"].strip(),
-    )
+def _row(values: dict[str, str], law: str) -> SoilRow:
+    number = {column: float(values[column]) for column in _NUMBERS[law]}
+    return SoilRow(values["texture"].strip(), _profile(law, number), values["source"].strip())
+
+
+def _profile(law: str, number: dict[str, float]) -> Profile:
+    """A row's numbers [cm, cm/day] as a profile [m, mm/day]."""
+    if law == "van-genuchten":
+        ks = number["ks_cm_per_day"] * 10.0
+        return VanGenuchten(number["alpha_per_cm"] * 100.0, number["n"], ks)
+    if law == "gardner-exponential":
+        return GardnerExponential(number["ks_cm_per_day"] * 10.0, number["alpha_per_cm"] * 100.0)
+    if law == "gardner-power":
+        scale = 100.0 ** -number["n"]
+        return GardnerPower(10.0 * number["a"] * scale, number["b"] * scale, number["n"])
+    return Campbell(number["air_entry_cm"] / 100.0, number["b"], number["ks_cm_per_day"] * 10.0)

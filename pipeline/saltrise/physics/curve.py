@@ -26,8 +26,11 @@ DEEPEST_M = 30.0
 """Deepest water table that is solved; beyond it the curve's end slope goes on."""
 
 _DEPTH_OCTAVES = (-10, 12)
-_DEPTH_BITS = 5
+_DEPTH_BITS, _STEEP_BITS = 5, 6
 _FLUX_BITS = 4
+_PLUNGE = 0.1
+_LEAST_OCTAVE = -100
+"""The flux table ends at 2^-100 (1e-30) mm/day, whatever a soil lifts from 30 m."""
 
 _MANTISSA = 52
 _ONE = np.int64(1023 << _MANTISSA)
@@ -93,7 +96,8 @@ class RiseCurves:
         Returns
         -------
         float64 array
-            Within a relative 1e-5 of exact from 0.001 to 30 m; NaN where masked or NaN.
+            Within a relative 1e-5 of exact from 0.001 to 30 m (6e-5 under the exponential law,
+            where the flux exceeds 1e-6 mm/day); NaN where masked or NaN.
         """
         flux = self.evaporation.look_up(profile, np.maximum(depth_m, SURFACE_DEPTH_M))
         flux[(profile < 0) | np.isnan(depth_m)] = np.nan
@@ -139,12 +143,14 @@ def build_curves(profiles: Sequence[Profile]) -> RiseCurves:
     """
     ends = np.array([SURFACE_DEPTH_M, DEEPEST_M])
     limits = np.array([profile.evaporation(ends)[0] for profile in profiles])
+    least = max(float(limits[:, 1].min()), 2.0**_LEAST_OCTAVE)
     octaves = (
-        int(np.floor(np.log2(limits[:, 1].min()))),
-        int(np.floor(np.log2(limits[:, 0].max()))) + 1,
+        int(np.floor(np.log2(least))),
+        max(int(np.floor(np.log2(limits[:, 0].max()))) + 1, _LEAST_OCTAVE + 1),
     )
+    bits = _STEEP_BITS if any(profile.steep for profile in profiles) else _DEPTH_BITS
     return RiseCurves(
-        _table(_DEPTH_OCTAVES, _DEPTH_BITS, [_with_end_slope(p) for p in profiles]),
+        _table(_DEPTH_OCTAVES, bits, [_with_end_slope(p) for p in profiles]),
         _table(octaves, _FLUX_BITS, [profile.depth for profile in profiles]),
         limits,
     )
@@ -158,8 +164,11 @@ def _with_end_slope(profile: Profile) -> _Solved:
 
     def evaporation(depth: Floats) -> tuple[Floats, Floats]:
         flux, slope = profile.evaporation(np.minimum(depth, DEEPEST_M))
-        power = slope[-1] * DEEPEST_M / flux[-1]
         beyond = depth > DEEPEST_M
+        if flux[-1] <= 0.0:
+            flux[beyond] = slope[beyond] = 0.0
+            return flux, slope
+        power = slope[-1] * DEEPEST_M / flux[-1]
         flux[beyond] *= (depth[beyond] / DEEPEST_M) ** power
         slope[beyond] = power * flux[beyond] / depth[beyond]
         return flux, slope
@@ -177,6 +186,9 @@ def _table(octaves: tuple[int, int], bits: int, solved: Sequence[_Solved]) -> Ta
     for solve in solved:
         value, slope = solve(nodes)
         rise, left, right = np.diff(value), slope[:-1] * width, slope[1:] * width
-        cubic = (value[:-1], left, 3 * rise - 2 * left - right, left + right - 2 * rise)
-        columns.append(np.stack(cubic))
+        cubic = np.stack((value[:-1], left, 3 * rise - 2 * left - right, left + right - 2 * rise))
+        # Where values fall away within one interval, a cubic would swing below zero.
+        plunge = value[1:] < _PLUNGE * value[:-1]
+        cubic[1, plunge], cubic[2:, plunge] = rise[plunge], 0.0
+        columns.append(cubic)
     return Table(octaves, bits, np.ascontiguousarray(np.hstack(columns)))

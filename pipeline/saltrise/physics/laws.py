@@ -215,6 +215,17 @@ def gardner_max_evaporation(depth: ArrayLike, a: ArrayLike, c: ArrayLike, n: Arr
     )
 
 
+def gardner_rise_depth(flux: ArrayLike, a: ArrayLike, c: ArrayLike, n: ArrayLike) -> Floats:
+    """Depth from which K = a / (h^n + c) lifts `flux`: the inverse of `gardner_max_evaporation`.
+
+    L = (a/E)^(1/n) (1 + E c/a)^(1/n - 1) pi / (n sin(pi/n)), which is (1) for this law [1, 4].
+    `flux` > 0; the other arguments as there.
+    """
+    rate, power = _floats(flux) / _floats(a), 1.0 / _floats(n)
+    wet = 1.0 + rate * _floats(c)
+    return _floats(rate**-power * wet ** (power - 1.0) * _sine_factor(_floats(n)))
+
+
 def exponential_max_evaporation(depth: ArrayLike, alpha: ArrayLike, ks: ArrayLike) -> Floats:
     """Maximum steady evaporation for K = Ks exp(-alpha h): E = Ks / (exp(alpha L) - 1) [1].
 

@@ -1,7 +1,7 @@
 """Profiles: all that decides the maximum evaporation of a cell except its water-table depth.
 
-A rise curve is built from anything that answers as `Profile` does. A homogeneous soil is the
-one kind there is.
+A rise curve is built from anything that answers as `Profile` does: a homogeneous soil under one
+of the conductivity laws.
 """
 
 from __future__ import annotations
@@ -12,14 +12,18 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.physics import laws
-from saltrise.physics.soils import SoilRow
+from saltrise.physics import laws, van_genuchten
 
 Floats = NDArray[np.float64]
 
 
 class Profile(Protocol):
     """A soil column solved exactly; both answers come with their slope."""
+
+    @property
+    def steep(self) -> bool:
+        """Whether evaporation falls off faster than any power of depth (needs denser nodes)."""
+        ...  # pragma: no cover
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """Maximum steady evaporation [mm/day] and its slope [mm/day/m] at depths [m] > 0."""
@@ -31,15 +35,18 @@ class Profile(Protocol):
 
 
 @dataclass(frozen=True)
-class Homogeneous:
-    """One Campbell / Brooks-Corey soil from the surface down: a `Profile`.
+class Campbell:
+    """A Campbell / Brooks-Corey soil: K = Ks up to air entry, Ks (air_entry/h)^(2 + 3/b) beyond.
 
-    `air_entry_m` [m], `b` [-] and `ks_mm_per_day` [mm/day] as in `SoilRow`.
+    `air_entry_m` [m] is the air-entry suction head, `b` [-] the retention slope (1 / lambda),
+    `ks_mm_per_day` [mm/day] the saturated conductivity.
     """
 
     air_entry_m: float
     b: float
     ks_mm_per_day: float
+
+    steep = False
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """See `Profile.evaporation`; by `laws.max_evaporation`."""
@@ -56,6 +63,67 @@ class Homogeneous:
         return self.air_entry_m, self.b, self.ks_mm_per_day
 
 
-def homogeneous(row: SoilRow) -> Homogeneous:
-    """Profile of a single texture class."""
-    return Homogeneous(row.air_entry_m, row.b, row.ks_mm_per_day)
+@dataclass(frozen=True)
+class VanGenuchten:
+    """A van Genuchten-Mualem soil: `alpha_per_m` [1/m], `n` [-], `ks_mm_per_day` [mm/day]."""
+
+    alpha_per_m: float
+    n: float
+    ks_mm_per_day: float
+
+    steep = False
+
+    def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.evaporation`; by `van_genuchten.max_evaporation`."""
+        return van_genuchten.max_evaporation(depth_m, self.alpha_per_m, self.n, self.ks_mm_per_day)
+
+    def depth(self, flux_mm_per_day: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.depth`; by `van_genuchten.rise_depth`."""
+        return van_genuchten.rise_depth(
+            flux_mm_per_day, self.alpha_per_m, self.n, self.ks_mm_per_day
+        )
+
+
+@dataclass(frozen=True)
+class GardnerPower:
+    """Gardner's K = a / (h^n + c): `a` [mm/day m^n], `c` [m^n], `n` [-] > 1."""
+
+    a: float
+    c: float
+    n: float
+
+    steep = False
+
+    def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.evaporation`; by `laws.gardner_max_evaporation`."""
+        flux = laws.gardner_max_evaporation(depth_m, self.a, self.c, self.n)
+        return flux, 1.0 / self.depth(flux)[1]
+
+    def depth(self, flux_mm_per_day: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.depth`; by `laws.gardner_rise_depth`."""
+        depth = laws.gardner_rise_depth(flux_mm_per_day, self.a, self.c, self.n)
+        wet = flux_mm_per_day * self.c / self.a
+        power = -1.0 / self.n + (1.0 / self.n - 1.0) * wet / (1.0 + wet)
+        return depth, power * depth / flux_mm_per_day
+
+
+@dataclass(frozen=True)
+class GardnerExponential:
+    """Gardner's K = Ks exp(-alpha h): `ks_mm_per_day` [mm/day], `alpha_per_m` [1/m]."""
+
+    ks_mm_per_day: float
+    alpha_per_m: float
+
+    steep = True
+
+    def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.evaporation`; by `laws.exponential_max_evaporation`."""
+        with np.errstate(over="ignore"):
+            flux = laws.exponential_max_evaporation(depth_m, self.alpha_per_m, self.ks_mm_per_day)
+        return flux, -self.alpha_per_m * flux * (1.0 + flux / self.ks_mm_per_day)
+
+    def depth(self, flux_mm_per_day: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.depth`; L = ln(1 + Ks/E) / alpha, the inverse of the same equation."""
+        ratio = self.ks_mm_per_day / flux_mm_per_day
+        depth = np.log1p(ratio) / self.alpha_per_m
+        return depth, -1.0 / (self.alpha_per_m * flux_mm_per_day * (1.0 + 1.0 / ratio))

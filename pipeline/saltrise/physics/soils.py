@@ -4,8 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from types import MappingProxyType
 
 from saltrise.errors import InputError
+from saltrise.physics.profile import (
+    Campbell,
+    GardnerExponential,
+    GardnerPower,
+    Profile,
+    VanGenuchten,
+)
 
 TEXTURES: tuple[str, ...] = (
     "sand",
@@ -27,21 +35,26 @@ NOT_SOIL = "not soil"
 """Class of raster codes that are no soil (water, rock, built-up): such cells are masked."""
 
 CAMPBELL = "campbell"
-"""Name of the conductivity law K = Ks (air_entry / h)^(2 + 3/b), Ks below air entry."""
+"""The law taken where none is named."""
+
+LAWS: Mapping[str, type[Profile]] = MappingProxyType(
+    {
+        CAMPBELL: Campbell,
+        "brooks-corey": Campbell,
+        "van-genuchten": VanGenuchten,
+        "gardner-power": GardnerPower,
+        "gardner-exponential": GardnerExponential,
+    }
+)
+"""Conductivity laws by name. Campbell's and Brooks and Corey's are one law, with b = 1/lambda."""
 
 
 @dataclass(frozen=True)
 class SoilRow:
-    """Campbell / Brooks-Corey parameters of one texture class.
-
-    `air_entry_m` [m] is the air-entry suction head, `b` [-] the retention slope (1 / lambda),
-    `ks_mm_per_day` [mm/day] the saturated conductivity, `source` where the numbers are from.
-    """
+    """One texture class of a set: its homogeneous profile, and where the numbers are from."""
 
     texture: str
-    air_entry_m: float
-    b: float
-    ks_mm_per_day: float
+    profile: Profile
     source: str
 
 

@@ -94,10 +94,14 @@ class WaterTable(_Table):
 
 
 class SoilTable(_Table):
-    """`[soil]`: texture codes, their classes, and the parameter set."""
+    """`[soil]`: texture codes, their classes, the parameter set, the law of an own CSV."""
 
     texture: Raster
     parameters: Text = "rawls1982"
+    conductivity: (
+        Literal["campbell", "brooks-corey", "van-genuchten", "gardner-power", "gardner-exponential"]
+        | None
+    ) = None
     classes: Mapping[int, str]
     nodata: Number | None = None
 
