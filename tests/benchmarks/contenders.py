@@ -4,7 +4,7 @@ saltrise      the whole job
 cog_floor     our own reader and writer (statistics, overviews and fsync included), physics
               replaced by a copy, no survey, no hashes, no zone sums
 plain_floor   a plain two-thread rasterio loop: read the inputs, write six layers, no overviews
-xarray_dask   the usual xarray + dask script, one write a layer
+xarray_dask   the usual xarray + dask script, one write a layer, then GDAL's COG driver
 nothing       only the imports
 """
 
@@ -129,6 +129,7 @@ def plain_floor(config: Path) -> None:
 def xarray_dask(config: Path) -> None:
     """The usual script: open lazily, map a function over chunks, write a raster a layer."""
     import dask
+    import rasterio.shutil
     import rioxarray
     import xarray as xr
 
@@ -166,17 +167,30 @@ def xarray_dask(config: Path) -> None:
                 output_dtypes=[np.uint8 if classes else np.float32],
             )
             made.rio.write_nodata(0 if classes else np.nan, inplace=True)
+            plain = target / f"{name}.plain.tif"
             made.rio.to_raster(
+                plain,
+                tiled=True,
+                blockxsize=512,
+                blockysize=512,
+                compress="zstd",
+                zstd_level=1,
+                predictor=2 if classes else 3,
+                lock=threading.Lock(),
+                bigtiff="if_safer",
+            )
+            rasterio.shutil.copy(
+                plain,
                 target / f"{name}.tif",
                 driver="COG",
                 compress="zstd",
                 level=1,
                 predictor="yes",
-                blocksize=512,
-                lock=threading.Lock(),
                 overview_resampling="mode" if classes else "average",
                 bigtiff="if_safer",
+                num_threads=2,
             )
+            plain.unlink()
 
 
 def nothing(_config: Path) -> None:

@@ -41,10 +41,19 @@ def keep_memory() -> None:
     glibc gives each back to the system and takes it anew, zeroed, for every block: a tenth of
     the run. Other C libraries are left as they are.
     """
-    tune = getattr(ctypes.CDLL(None), "mallopt", None) if os.name == "posix" else None
-    if tune is not None:
-        tune(_MMAP_THRESHOLD, _KEPT_BYTES)
-        tune(_TRIM_THRESHOLD, 32 * _KEPT_BYTES)
+    _call_libc("mallopt", _MMAP_THRESHOLD, _KEPT_BYTES)
+    _call_libc("mallopt", _TRIM_THRESHOLD, 32 * _KEPT_BYTES)
+
+
+def release_memory() -> None:
+    """Give back to the system what `keep_memory` kept."""
+    _call_libc("malloc_trim", 0)
+
+
+def _call_libc(name: str, *arguments: int) -> None:
+    call = getattr(ctypes.CDLL(None), name, None) if os.name == "posix" else None
+    if call is not None:
+        call(*arguments)
 
 
 def on_threads(
@@ -89,6 +98,7 @@ def run_tiles(
     if scheduler == "threads":
         keep_memory()
         on_threads(lambda index: run_tile(plan, index), indices, workers, done)
+        release_memory()
         return
     durable.write_pickle(plan.work / PLAN, plan)
     tasks = [(str(plan.work), plan.run, index) for index in indices]
