@@ -50,8 +50,7 @@ def partial_of(cover: BlockCover, areas: np.ndarray, values: ZoneValues) -> Zone
     sums, area = BlockSums(cover, UNIT), areas.ravel()
     for part in np.array_split(np.arange(area.size), 3):
         if part.size:
-            strip = ZoneValues(*(array[part] for array in vars(values).values()))
-            sums.add(int(part[0]), area[part], strip)
+            sums.add(int(part[0]), area[part], values.part(part))
     return sums.partial()
 
 

@@ -126,11 +126,32 @@ def print_summary(result: Result) -> None:
     print(f"  gross salt rise {load:,.0f} t/year on {assessed:,.0f} ha{mean}")
     _print_worst(record)
     _print_masked(counts)
-    print(f"Soil parameters: {record['parameters']['set']}. The choice of set matters: see README.")
+    _print_sets(record)
     for text in record["warnings"]:
         print(f"Warning: {text}")
     print("Screening level, upper estimate for bare soil; verify with field sampling.")
     print(f"Written to {result.folder}")
+
+
+_DECIDES, _MATTERS = 3.0, 1.3
+"""Highest over lowest total from which the choice of a parameter set is called that."""
+
+
+def _print_sets(record: dict[str, Any]) -> None:
+    used, loads = record["parameters"]["set"], record.get("salt_load_by_set_t_per_year")
+    if not loads:
+        print(f"Soil parameters: {used}. Another set can change the answer tenfold: see README.")
+        return
+    print(f"Soil parameters: {used}. Salt rise by set:")
+    for name, load in loads.items():
+        print(f"  {name:<32}{load:>16,.0f} t/year")
+    low, high = min(loads.values()), max(loads.values())
+    if low > 0:
+        factor = high / low
+        grave = (
+            "decides the answer" if factor > 3 else "matters" if factor > 1.3 else "matters little"
+        )
+        print(f"  the choice of set {grave} here: highest over lowest is {factor:.3g}")
 
 
 def _class_keys(region: dict[str, Any]) -> list[str]:
@@ -191,7 +212,8 @@ def print_survey(region: Region, doubts: list[str], estimate: Estimate, output: 
         print(f"  {role}: {value:g} everywhere")
     print(f"  every input has a value in {region.found.complete:,} cells")
     _print_codes(region)
-    print(f"Soil profiles: {len(region.textures)} of set {region.soils.name}")
+    names = ", ".join(soils.name for soils in region.sets)
+    print(f"Soil profiles: {len(region.textures)} of {names}")
     if region.zones is not None:
         print(f"Zones: {len(region.zones.ids)}")
     print(

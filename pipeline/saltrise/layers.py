@@ -31,6 +31,8 @@ class Layer:
     nodata: float
     overview: Literal["mean", "most frequent"]
     cf_name: str | None = None
+    needs: Literal["", "several sets"] = ""
+    """What a config must give for the layer to exist; nothing for most."""
 
     @property
     def continuous(self) -> bool:
@@ -68,5 +70,29 @@ LAYERS: dict[str, Layer] = {
             CLASS_NODATA,
             "most frequent",
         ),
+        Layer(
+            "salt_load_lowest_set",
+            "t ha-1 year-1",
+            "lowest gross yearly salt rise among the soil parameter sets",
+            "float32",
+            NODATA,
+            "mean",
+            needs="several sets",
+        ),
+        Layer(
+            "salt_load_highest_set",
+            "t ha-1 year-1",
+            "highest gross yearly salt rise among the soil parameter sets",
+            "float32",
+            NODATA,
+            "mean",
+            needs="several sets",
+        ),
     )
 }
+
+BASIC = tuple(name for name, layer in LAYERS.items() if not layer.needs)
+"""Layers of any run."""
+
+SEVERAL_SETS = tuple(name for name, layer in LAYERS.items() if layer.needs == "several sets")
+"""Layers of a run with a list of soil parameter sets."""

@@ -34,6 +34,8 @@ class Recipe:
     ----------
     curves : RiseCurves
         Rise curves of the region's profiles.
+    other_curves : tuple of RiseCurves
+        Those of the same profiles under other parameter sets, for comparison.
     first_code : int
         Texture code of the first entry of `profile_of_code`.
     profile_of_code : int array
@@ -51,6 +53,7 @@ class Recipe:
     """
 
     curves: RiseCurves
+    other_curves: tuple[RiseCurves, ...]
     first_code: int
     profile_of_code: NDArray[np.int32]
     depth_factor: float
@@ -67,7 +70,8 @@ class CellResult:
     """Answer of an array of cells before rounding.
 
     `values` holds the continuous layers by name; where not `valid` their content is finite but
-    means nothing. `counts` are numbers of cells.
+    means nothing. `counts` are numbers of cells; `other_loads` are salt loads [t/ha/year] under
+    the recipe's other parameter sets.
     """
 
     values: dict[str, Array]
@@ -75,6 +79,7 @@ class CellResult:
     valid: NDArray[np.bool_]
     depth: Array
     counts: dict[str, int]
+    other_loads: tuple[Array, ...]
 
     def zone_values(self) -> ZoneValues:
         """The cells as the zone sums take them."""
@@ -85,6 +90,7 @@ class CellResult:
             critical_depth=self.values["critical_depth"].ravel(),
             depth_margin=self.values["depth_margin"].ravel(),
             hazard_class=self.hazard_class.ravel(),
+            other_loads=tuple(load.ravel() for load in self.other_loads),
         )
 
 
@@ -134,6 +140,11 @@ def compute_cells(
         gone = ~valid
         profile[gone], depth[gone], tds[gone], demand[gone] = 0, 1.0, 0.0, 0.0
     values = _layers(recipe, profile, depth, tds, demand)
+    others = tuple(_load(curves, profile, depth, tds, demand)[2] for curves in recipe.other_curves)
+    if others:
+        loads = (values["salt_load"], *others)
+        values["salt_load_lowest_set"] = np.minimum.reduce(loads)
+        values["salt_load_highest_set"] = np.maximum.reduce(loads)
     classes = recipe.scheme.classify(values[recipe.scheme.layer])
     surface = at_surface(depth)
     limited = valid & ~surface & (values["max_evaporation"] >= demand)
@@ -142,7 +153,7 @@ def compute_cells(
     counts["at_surface"] = int(np.count_nonzero(valid & surface))
     counts["assessed"] = int(np.count_nonzero(valid)) - counts["at_surface"]
     counts["demand_limited"] = int(np.count_nonzero(limited))
-    return CellResult(values, classes, valid, depth, counts)
+    return CellResult(values, classes, valid, depth, counts, others)
 
 
 def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:
@@ -182,16 +193,24 @@ def _masked(
     return valid, counts
 
 
+def _load(
+    curves: RiseCurves, profile: NDArray[np.int32], depth: Array, tds: Array, demand: Array
+) -> tuple[Array, Array, Array]:
+    """Maximum evaporation [mm/day], evaporation [mm/year] and salt load [t/ha/year]."""
+    maximum = curves.max_evaporation(profile, depth)
+    evaporation = groundwater_evaporation(maximum, demand, depth) * DAYS_PER_YEAR
+    return maximum, evaporation, salt_load(evaporation, tds)
+
+
 def _layers(
     recipe: Recipe, profile: NDArray[np.int32], depth: Array, tds: Array, demand: Array
 ) -> dict[str, Array]:
-    maximum = recipe.curves.max_evaporation(profile, depth)
-    evaporation = groundwater_evaporation(maximum, demand, depth) * DAYS_PER_YEAR
+    maximum, evaporation, load = _load(recipe.curves, profile, depth, tds, demand)
     critical = critical_depth(recipe.curves, profile, demand, tds, recipe.target_load)
     return {
         "max_evaporation": maximum,
         "evaporation": evaporation,
-        "salt_load": salt_load(evaporation, tds),
+        "salt_load": load,
         "critical_depth": critical,
         "depth_margin": depth - critical,
     }

@@ -48,7 +48,8 @@ class ZoneValues:
     """Values before rounding of a run of a block's cells, flat, in row-major order.
 
     `depth_m` [m], `evaporation_mm_per_year`, `salt_load` [t/ha/year], `critical_depth` and
-    `depth_margin` [m]. Where `hazard_class` is 0 the others are finite but mean nothing.
+    `depth_margin` [m], `other_loads` [t/ha/year] under other parameter sets. Where
+    `hazard_class` is 0 the others are finite but mean nothing.
     """
 
     depth_m: Floats
@@ -57,6 +58,15 @@ class ZoneValues:
     critical_depth: Floats
     depth_margin: Floats
     hazard_class: NDArray[np.uint8]
+    other_loads: tuple[Floats, ...] = ()
+
+    def part(self, cells: slice | Whole) -> ZoneValues:
+        """Some of the cells."""
+        arrays = {name: array[cells] for name, array in vars(self).items() if name != _OTHERS}
+        return ZoneValues(**arrays, other_loads=tuple(load[cells] for load in self.other_loads))
+
+
+_OTHERS = "other_loads"
 
 
 @dataclass(frozen=True)
@@ -93,8 +103,13 @@ class ZoneTotals:
         """One of `SUMS`."""
         return float(self._row(zone)[_CODES + SUMS.index(name)])
 
+    def other_loads(self, zone: int) -> list[float]:
+        """Salt loads of assessed cells under the other parameter sets, times m2."""
+        return [float(load) for load in self._row(zone)[_COLUMNS:]]
+
     def _row(self, zone: int) -> Floats:
-        return self.sums.get(zone, np.zeros(_COLUMNS))
+        width = next((len(row) for row in self.sums.values()), _COLUMNS)
+        return self.sums.get(zone, np.zeros(width))
 
 
 class BlockSums:
@@ -105,11 +120,11 @@ class BlockSums:
     region is all slots together. What zones cover in part is weighed apart.
     """
 
-    def __init__(self, cover: BlockCover, unit_m2: float) -> None:
+    def __init__(self, cover: BlockCover, unit_m2: float, others: int = 0) -> None:
         self._cover, self._unit = cover, unit_m2
         slots = len(cover.zones) + 1
-        self._whole = np.zeros((slots, _COLUMNS))
-        self._part = np.zeros((slots, _COLUMNS))
+        self._whole = np.zeros((slots, _COLUMNS + others))
+        self._part = np.zeros((slots, _COLUMNS + others))
         self._whole_bins = [_Bins(slots) for _ in QUANTITIES]
         self._part_bins = [_Bins(slots) for _ in QUANTITIES]
 
@@ -151,7 +166,7 @@ class BlockSums:
         if low == high:
             return
         here, slot = cover.cell[low:high] - first, cover.slot[low:high]
-        cells = _Cells.of(ZoneValues(*(array[here] for array in vars(values).values())))
+        cells = _Cells.of(values.part(here))
         weight = area_m2[here] * cover.fraction[low:high]
         part = self._part
         for column, weighed in enumerate(cells.weighed(weight * cells.assessed, weight)):
@@ -204,6 +219,7 @@ class _Cells:
     surface: NDArray[np.bool_]
     summed: tuple[Floats, ...]
     load: Floats
+    others: tuple[Floats, ...]
     quantities: tuple[Floats, ...]
 
     @classmethod
@@ -226,14 +242,20 @@ class _Cells:
                 values.depth_margin,
             ),
             values.salt_load,
+            values.other_loads,
             (values.salt_load, values.critical_depth),
         )
 
     def weighed(self, dry: Floats, area: Floats) -> Iterator[Floats]:
-        """Values of `SUMS`, in its order, each times its weight [m2]."""
+        """Values of `SUMS`, in its order, and other loads, each times its weight [m2]."""
         for values in self.summed:
             yield dry * values
-        yield area * self.surface * self.load if self.surface.any() else np.zeros_like(area)
+        yield self._at_surface(area)
+        for values in self.others:
+            yield dry * values
+
+    def _at_surface(self, area: Floats) -> Floats:
+        return area * self.surface * self.load if self.surface.any() else np.zeros_like(area)
 
 
 class _Bins:

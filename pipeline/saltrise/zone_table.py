@@ -71,6 +71,7 @@ def zone_table(
         }
         rows.append(place | {k: v for k, v in figures.items() if k not in place})
     _rank(rows, RANK_COLUMNS[rank_by])
+    rows = [row | set_figures(totals, zone) for zone, row in enumerate(rows)]
     return {column: [row[column] for row in rows] for column in rows[0]} if rows else {}
 
 
@@ -87,7 +88,23 @@ def _rank(rows: list[Row], column: str) -> None:
 
 def region_figures(totals: ZoneTotals) -> Row:
     """The figures of the whole region."""
-    return zone_figures(totals, REGION)
+    return zone_figures(totals, REGION) | set_figures(totals, REGION)
+
+
+def set_loads(totals: ZoneTotals, zone: int) -> list[float]:
+    """Salt load of a zone [t/year] under each parameter set, the first being the one in use."""
+    return [load / _HA for load in (totals.sum_of(zone, "salt_load"), *totals.other_loads(zone))]
+
+
+def set_figures(totals: ZoneTotals, zone: int) -> Row:
+    """Lowest and highest total among the parameter sets; nothing where there is but one."""
+    loads = set_loads(totals, zone)
+    if len(loads) == 1:
+        return {}
+    return {
+        "salt_load_lowest_set_t_per_year": min(loads),
+        "salt_load_highest_set_t_per_year": max(loads),
+    }
 
 
 def zone_figures(totals: ZoneTotals, zone: int) -> Row:

@@ -15,8 +15,9 @@ from saltrise.engine.inputs import ROLES
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
 from saltrise.layers import LAYERS
-from saltrise.physics.soils import SoilRow, soil_for
-from saltrise.zone_table import region_figures
+from saltrise.physics.soils import SoilRow, SoilSet, soil_for
+from saltrise.zonal import REGION
+from saltrise.zone_table import region_figures, set_loads
 
 CAUTIONS = (
     "Screening level: shows where hazard is likely, not what a field holds; verify with field "
@@ -45,7 +46,7 @@ def layer_tags(region: Region, date: datetime) -> dict[str, str]:
         "TIFFTAG_SOFTWARE": f"saltrise {version('saltrise')}",
         "TIFFTAG_DATETIME": date.strftime("%Y:%m:%d %H:%M:%S"),
         "TITLE": settings.title,
-        "SOIL_PARAMETERS": region.soils.name,
+        "SOIL_PARAMETERS": region.sets[0].name,
         "TARGET_LOAD": f"{settings.hazard.target_load!r} t ha-1 year-1",
         "DAYS_PER_YEAR": "365",
         "PRECISION": settings.output.precision,
@@ -76,7 +77,8 @@ def run_record(
             "width": grid.width,
             "height": grid.height,
         },
-        "parameters": parameters(region),
+        "parameters": parameters(region, region.sets[0]),
+        **_several_sets(region, totals),
         "hazard_scheme": asdict(region.scheme),
         "counts_cells": totals.counts,
         "region": region_figures(totals.zones),
@@ -84,7 +86,7 @@ def run_record(
         "statistics": {name: asdict(found) for name, found in totals.statistics.items()},
         "layers": {
             name: {"unit": LAYERS[name].unit, "meaning": LAYERS[name].meaning}
-            for name in region.settings.output.layers
+            for name in region.settings.layers
         },
         "warnings": [*region.warnings, *doubts],
         "use_limits": list(CAUTIONS),
@@ -101,12 +103,23 @@ def _numbers(row: SoilRow) -> dict[str, Any]:
     return {"texture": row.texture} | vars(row.profile) | {"source": row.source}
 
 
-def parameters(region: Region) -> dict[str, Any]:
-    """The soil parameter values used, with their sources."""
-    rows = [_numbers(soil_for(region.soils, texture)) for texture in region.textures]
+def _several_sets(region: Region, totals: Totals) -> dict[str, Any]:
+    """What the choice of soil parameter set does to the region's total; nothing for one set."""
+    if len(region.sets) == 1:
+        return {}
+    names = [soils.name for soils in region.sets]
+    loads = dict(zip(names, set_loads(totals.zones, REGION), strict=True))
     return {
-        "set": region.soils.name,
-        "title": region.soils.title,
-        "conductivity": region.soils.conductivity,
-        "classes": rows,
+        "other_parameters": [parameters(region, soils) for soils in region.sets[1:]],
+        "salt_load_by_set_t_per_year": loads,
+    }
+
+
+def parameters(region: Region, soils: SoilSet) -> dict[str, Any]:
+    """The parameter values of a set that are used, with their sources."""
+    return {
+        "set": soils.name,
+        "title": soils.title,
+        "conductivity": soils.conductivity,
+        "classes": [_numbers(soil_for(soils, texture)) for texture in region.textures],
     }

@@ -97,7 +97,7 @@ def _tables(opened: Opened) -> list[Path]:
         paths.append(settings.zones_file)
         if settings.zones_file.suffix.lower() == ".shp":
             paths += [settings.zones_file.with_suffix(suffix) for suffix in _SIDECARS]
-    for name, suffix in ((settings.soil.parameters, ".csv"), (settings.hazard.scheme, ".toml")):
-        if name.lower().endswith(suffix):
-            paths.append(settings.base / name)
+    own = [name for name in settings.soil.sets if name.lower().endswith(".csv")]
+    own += [settings.hazard.scheme] if settings.hazard.scheme.endswith(".toml") else []
+    paths += [settings.base / name for name in own]
     return [path for path in paths if path.is_file()]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import partial
@@ -53,7 +54,7 @@ class Region:
     settings: Settings
     inputs: Inputs
     found: BlockScan
-    soils: SoilSet
+    sets: tuple[SoilSet, ...]
     textures: tuple[str, ...]
     scheme: Scheme
     zones: Zones | None
@@ -66,7 +67,7 @@ class Opened:
 
     settings: Settings
     inputs: Inputs
-    soils: SoilSet
+    sets: tuple[SoilSet, ...]
     scheme: Scheme
     zones: Zones | None
     zone_faults: tuple[str, ...]
@@ -88,7 +89,7 @@ def open_region(settings: Settings, block: int) -> Opened:
         Every fault of config references and raster headers.
     """
     require_working_libraries()
-    soils, scheme = _references(settings)
+    sets, scheme = _references(settings)
     inputs = open_inputs(settings, block)
     zones: Zones | None = None
     faults: tuple[str, ...] = ()
@@ -97,7 +98,7 @@ def open_region(settings: Settings, block: int) -> Opened:
             zones = read_zones(settings, inputs.grid)
         except InputError as error:
             faults = error.faults
-    return Opened(settings, inputs, soils, scheme, zones, faults)
+    return Opened(settings, inputs, sets, scheme, zones, faults)
 
 
 def survey_region(
@@ -131,30 +132,44 @@ def survey_region(
     textures = _textures(settings, inputs, found)
     faults = [*opened.zone_faults, *findings.faults(settings, inputs, found)]
     if not faults:
-        faults += _soil_faults(settings, opened.soils, textures)
+        faults += _soil_faults(settings, opened.sets, textures)
     if faults:
         raise InputError(*faults)
     zones = opened.zones
-    warnings = [*settings.warnings, *inputs.warnings, *clashes, *(zones.warnings if zones else ())]
+    warnings = [*settings.warnings, *inputs.warnings, *clashes, *_clay(textures)]
+    warnings += zones.warnings if zones else ()
     return Region(
-        settings, inputs, found, opened.soils, textures, opened.scheme, zones, tuple(warnings)
+        settings, inputs, found, opened.sets, textures, opened.scheme, zones, tuple(warnings)
     )
 
 
-def _references(settings: Settings) -> tuple[SoilSet, Scheme]:
+def _clay(textures: tuple[str, ...]) -> list[str]:
+    clays = [name for name in textures if name in ("sandy clay", "silty clay", "clay")]
+    if not clays:
+        return []
+    return [
+        f"soil: {', '.join(clays)}: parameters are of structureless soil; structured and swelling "
+        "clays can lie far below them (McIntyre 1982: in wet clay cores rise beyond 0.3 m was "
+        "very slow)"
+    ]
+
+
+def _references(settings: Settings) -> tuple[tuple[SoilSet, ...], Scheme]:
     faults: list[str] = []
-    soils = scheme = None
-    try:
-        soils = load_soil_set(settings.soil.parameters, settings.base, settings.soil.conductivity)
-    except InputError as error:
-        faults += [settings.fault("soil.parameters", text) for text in error.faults]
+    sets: list[SoilSet] = []
+    scheme = None
+    for name in settings.soil.sets:
+        try:
+            sets.append(load_soil_set(name, settings.base, settings.soil.conductivity))
+        except InputError as error:
+            faults += [settings.fault("soil.parameters", text) for text in error.faults]
     try:
         scheme = load_scheme(settings.hazard.scheme, settings.base)
     except InputError as error:
         faults += [settings.fault("hazard.scheme", text) for text in error.faults]
-    if soils is None or scheme is None:
+    if faults or scheme is None:
         raise InputError(*faults)
-    return soils, scheme
+    return tuple(sets), scheme
 
 
 def _scan(
@@ -185,13 +200,15 @@ def _textures(settings: Settings, inputs: Inputs, found: BlockScan) -> tuple[str
     return tuple(sorted(occurring))
 
 
-def _soil_faults(settings: Settings, soils: SoilSet, textures: tuple[str, ...]) -> list[str]:
+def _soil_faults(
+    settings: Settings, sets: tuple[SoilSet, ...], textures: tuple[str, ...]
+) -> list[str]:
     faults = []
     if not textures:
         faults.append(
             settings.fault("soil.classes", f'every cell of the region is mapped to "{NOT_SOIL}"')
         )
-    for texture in textures:
+    for soils, texture in itertools.product(sets, textures):
         try:
             soil_for(soils, texture)
         except InputError as error:
@@ -213,7 +230,7 @@ def make_plan(region: Region, work: Path, run: str) -> Plan:
         recipe=make_recipe(region),
         zones=shapes,
         unit_m2=nominal * 2.0**-16,
-        layers=tuple(settings.output.layers),
+        layers=settings.layers,
         compression=settings.output.compression,
         assembly=settings.output.assembly,
         rounded=settings.output.precision == "rounded",
@@ -234,8 +251,13 @@ def make_recipe(region: Region) -> Recipe:
     settings = region.settings
     water, groundwater, climate = settings.water_table, settings.groundwater, settings.climate
     first, profiles = _profile_of_code(region)
+    curves = [
+        build_curves([soil_for(soils, name).profile for name in region.textures])
+        for soils in region.sets
+    ]
     return Recipe(
-        curves=build_curves([soil_for(region.soils, name).profile for name in region.textures]),
+        curves=curves[0],
+        other_curves=tuple(curves[1:]),
         first_code=first,
         profile_of_code=profiles,
         depth_factor=float(depth_in_m(1.0, water.unit)),

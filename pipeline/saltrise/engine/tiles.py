@@ -120,7 +120,8 @@ def _add_block(
 ) -> None:
     """Compute a block by strips of rows, so that its numbers stay in the processor's cache."""
     areas = block_areas(plan.grid, block)
-    sums = BlockSums(block_cover(plan.zones, block), plan.unit_m2)
+    others = len(plan.recipe.other_curves)
+    sums = BlockSums(block_cover(plan.zones, block), plan.unit_m2, others)
     top, left = block.row - window.row, block.col - window.col
     step = max(1, _STRIP_CELLS // block.width)
     for first in range(0, block.height, step):

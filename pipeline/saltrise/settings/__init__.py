@@ -12,6 +12,7 @@ from typing import Any
 from pydantic import ValidationError
 
 from saltrise.errors import InputError
+from saltrise.layers import SEVERAL_SETS
 from saltrise.settings.faults import model_faults
 from saltrise.settings.lines import Key, key_lines
 from saltrise.settings.model import (
@@ -107,6 +108,13 @@ class Settings:
         )
 
     @property
+    def layers(self) -> tuple[str, ...]:
+        """Layers to write; a list of parameter sets adds its own unless layers are chosen."""
+        chosen = tuple(self.output.layers)
+        added = "layers" not in self.output.model_fields_set and len(self.soil.sets) > 1
+        return chosen + SEVERAL_SETS if added else chosen
+
+    @property
     def output_folder(self) -> Path:
         """Folder of the finished run."""
         return Path(os.path.normpath(self.base / self.output.folder))
@@ -165,6 +173,7 @@ class Settings:
         """The config with all defaults, paths as given, without `[run]`; JSON-ready."""
         content = self.tables.model_dump(mode="json", exclude={"run"}, exclude_none=True)
         content["title"] = self.title
+        content["output"]["layers"] = list(self.layers)
         return content
 
 

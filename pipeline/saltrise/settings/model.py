@@ -10,7 +10,7 @@ from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PlainSerializer, ValidationInfo
 
-from saltrise.layers import LAYERS
+from saltrise.layers import BASIC
 from saltrise.units import TDS_PER_EC
 
 Number = Annotated[float, Field(allow_inf_nan=False)]
@@ -97,13 +97,19 @@ class SoilTable(_Table):
     """`[soil]`: texture codes, their classes, the parameter set, the law of an own CSV."""
 
     texture: Raster
-    parameters: Text = "rawls1982"
+    parameters: Text | Annotated[list[Text], Field(min_length=1)] = "rawls1982"
     conductivity: (
         Literal["campbell", "brooks-corey", "van-genuchten", "gardner-power", "gardner-exponential"]
         | None
     ) = None
     classes: Mapping[int, str]
     nodata: Number | None = None
+
+    @property
+    def sets(self) -> tuple[str, ...]:
+        """Parameter sets by name or path; the first gives the layers."""
+        given = self.parameters
+        return (given,) if isinstance(given, str) else tuple(given)
 
 
 class GroundwaterTable(_Table):
@@ -146,7 +152,7 @@ class OutputTable(_Table):
     """`[output]`: folder, layers, precision and codec of the rasters."""
 
     folder: Text
-    layers: Annotated[list[str], Field(min_length=1)] = Field(default_factory=lambda: list(LAYERS))
+    layers: Annotated[list[str], Field(min_length=1)] = Field(default_factory=lambda: list(BASIC))
     precision: Literal["rounded", "full"] = "rounded"
     compression: Literal["zstd", "deflate"] = "zstd"
     assembly: Literal["copy", "gdal"] = "copy"

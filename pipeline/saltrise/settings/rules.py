@@ -8,7 +8,7 @@ from difflib import get_close_matches
 from pathlib import Path
 from typing import Any, TypeGuard
 
-from saltrise.layers import LAYERS
+from saltrise.layers import LAYERS, SEVERAL_SETS
 from saltrise.physics.soils import NOT_SOIL, TEXTURES
 from saltrise.units import is_conductivity
 
@@ -27,6 +27,7 @@ def rule_faults(raw: dict[str, Any], base: Path) -> list[Fault]:
         *_salinity(table.get("groundwater", {})),
         *_not_negative(table.get("climate", {}), "climate", "potential_evaporation"),
         *_output(table.get("output", {}), base),
+        *_sets(table.get("soil", {}), table.get("output", {})),
         *_scheduler(table.get("run", {})),
     ]
 
@@ -145,6 +146,20 @@ def _output(table: dict[str, Any], base: Path) -> list[Fault]:
         twice = sorted({str(n) for n in layers if layers.count(n) > 1})
         if twice:
             faults.append((("output", "layers"), f"names {', '.join(twice)} more than once"))
+    return faults
+
+
+def _sets(soil: dict[str, Any], output: dict[str, Any]) -> list[Fault]:
+    given, layers = soil.get("parameters"), output.get("layers")
+    sets = given if isinstance(given, list) else [given]
+    faults: list[Fault] = []
+    twice = sorted({str(name) for name in sets if sets.count(name) > 1})
+    if twice:
+        faults.append((("soil", "parameters"), f"names {', '.join(twice)} more than once"))
+    alone = [name for name in SEVERAL_SETS if isinstance(layers, list) and name in layers]
+    if alone and len(sets) < 2:
+        text = f"holds {alone[0]!r}, which needs a list of sets in soil.parameters"
+        faults.append((("output", "layers"), text))
     return faults
 
 
