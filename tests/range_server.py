@@ -66,6 +66,8 @@ class Handler(BaseHTTPRequestHandler):
 
 
 if __name__ == "__main__":
+    # GDAL opens several connections at once; a short queue would refuse some.
+    ThreadingHTTPServer.request_queue_size = 128
     server = ThreadingHTTPServer(("127.0.0.1", 0), Handler)
     sys.stdout.write(f"{server.server_port}\n")
     sys.stdout.flush()

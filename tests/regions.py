@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+import re
 from pathlib import Path
 from typing import Any
 
@@ -72,7 +73,10 @@ def write_config(folder: Path, tables: dict[str, dict[str, Any]], name: str = "r
             lines.insert(0, f"{table} = {json.dumps(content)}")
             continue
         lines.append(f"[{table}]")
-        lines += [f"{k} = {json.dumps(v)}" for k, v in content.items() if v is not None]
+        for key, value in content.items():
+            bare = key if re.fullmatch(r"[\w-]+", key) else json.dumps(key)
+            if value is not None:
+                lines.append(f"{bare} = {json.dumps(value)}")
     path = folder / f"{name}.toml"
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
     return path

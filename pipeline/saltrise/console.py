@@ -237,7 +237,7 @@ def print_files(region: Region) -> None:
 
 def _print_codes(region: Region) -> None:
     for code, seen in sorted(region.found.codes.items()):
-        name = region.settings.soil.classes.get(int(code), "?")
+        name = region.settings.soil.codes.get(int(code), "?")
         print(f"  code {code:g} = {name}: {seen.count:,} cells")
 
 

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, groundwater_evaporation
 from saltrise.physics.salt import critical_depth, salt_load
+from saltrise.physics.texture import fractions_in_percent, texture_class
 from saltrise.schemes import SURFACE_CLASS, Scheme
 from saltrise.units import DAYS_PER_YEAR
 from saltrise.zonal import ZoneValues
@@ -50,6 +51,8 @@ class Recipe:
         Breaks of the hazard classes.
     constants : dict
         Inputs given as numbers, by role, in the config's units.
+    fraction_divisor : float
+        From the unit of sand, clay and silt to %.
     """
 
     curves: RiseCurves
@@ -63,6 +66,7 @@ class Recipe:
     target_load: float
     scheme: Scheme
     constants: dict[str, float]
+    fraction_divisor: float = 1.0
 
 
 @dataclass(frozen=True)
@@ -106,8 +110,9 @@ def compute_cells(
     recipe : Recipe
         Parameters of the region.
     inputs : dict of float arrays, each of `shape`
-        Raster inputs by role (`depth`, or `ground` and `elevation`; `texture`; `salinity`;
-        `potential_evaporation`) in the config's units, NaN where there is no value.
+        Raster inputs by role (`depth`, or `ground` and `elevation`; `texture`, or `sand`, `clay`
+        and perhaps `silt`; `salinity`; `potential_evaporation`) in the config's units, NaN where
+        there is no value.
     shape : (int, int)
         Rows and columns.
 
@@ -119,14 +124,14 @@ def compute_cells(
     Raises
     ------
     UnmappedCodeError
-        A texture code has no profile: the input changed since the survey.
+        A texture code has no profile, or fractions do not add up.
     """
     given: dict[str, Array] = {role: values.astype(np.float64) for role, values in inputs.items()}
     given |= {role: np.full(shape, value) for role, value in recipe.constants.items()}
     depth = _depth(recipe, given)
     tds = given["salinity"] * recipe.tds_factor
     demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
-    profile, no_texture = _profiles(recipe, given["texture"])
+    profile, no_texture = _profiles(recipe, _texture(recipe, given))
     missing = {
         "no_depth": ~np.isfinite(depth),
         "no_texture": no_texture,
@@ -160,6 +165,18 @@ def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:
     if "depth" in given:
         return given["depth"] * recipe.depth_factor
     return (given["ground"] - given["elevation"]) * recipe.depth_factor
+
+
+def _texture(recipe: Recipe, given: dict[str, Array]) -> Array:
+    """Texture codes: as given, or the number of the class that the fractions make."""
+    if "texture" in given:
+        return given["texture"]
+    sand, clay, wrong = fractions_in_percent(
+        given["sand"], given["clay"], given.get("silt"), recipe.fraction_divisor
+    )
+    if wrong.any():
+        raise UnmappedCodeError("sand, clay and silt do not add up")
+    return texture_class(sand, clay)
 
 
 def _profiles(recipe: Recipe, texture: Array) -> tuple[NDArray[np.int32], NDArray[np.bool_]]:

@@ -45,7 +45,31 @@ def faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
             f"{settings.source}: no cell of the region has a value in every input, so nothing can "
             "be computed; check the extents and nodata of the inputs against each other"
         )
-    return lines + _code_faults(settings, inputs, found.codes)
+    return (
+        lines
+        + _fraction_faults(settings, inputs, found)
+        + _code_faults(settings, inputs, found.codes)
+    )
+
+
+def _fraction_faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
+    wrong = found.wrong_fractions
+    if wrong is None:
+        return []
+    role = next(role for role in ("sand", "clay", "silt") if role in inputs.rasters)
+    rule = (
+        "sand, clay and silt must add up to 100 % within 2 %"
+        if settings.soil.silt is not None
+        else "sand and clay must not exceed 100 % together"
+    )
+    return [
+        settings.fault(
+            "soil.sand",
+            f"fractions that cannot be in {wrong.count} cells (first at "
+            f"{_place(inputs, role, wrong)}): {rule} and none may be negative; check soil.unit "
+            f"({settings.soil.unit}) and nodata",
+        )
+    ]
 
 
 def _all_nodata(inputs: Inputs, role: str) -> str:
@@ -57,7 +81,7 @@ def _all_nodata(inputs: Inputs, role: str) -> str:
 
 
 def _code_faults(settings: Settings, inputs: Inputs, codes: dict[float, Sighting]) -> list[str]:
-    known = settings.soil.classes or {}
+    known = settings.soil.codes
     unknown = {code: seen for code, seen in sorted(codes.items()) if code not in known}
     lines = [
         f"{f'{code:g}' if code == int(code) else repr(code)} ({seen.count} cells, first at "

@@ -20,10 +20,16 @@ ROLES = {
     "elevation": "water_table.elevation",
     "ground": "water_table.ground",
     "texture": "soil.texture",
+    "sand": "soil.sand",
+    "clay": "soil.clay",
+    "silt": "soil.silt",
     "salinity": "groundwater.salinity",
     "potential_evaporation": "climate.potential_evaporation",
 }
 """What an input stands for, and the config key that names it."""
+
+SOIL_ROLES = ("texture", "sand", "clay", "silt")
+"""Inputs that decide the texture class."""
 
 _SAME_UNIT = {
     "m": {"m", "metre", "meter", "metres", "meters"},
@@ -35,6 +41,8 @@ _SAME_UNIT = {
     "mg/L": {"mg/l", "mg l-1", "ppm", "g/m3", "g m-3"},
     "g/L": {"g/l", "g l-1", "kg/m3", "kg m-3"},
     "mm/year": {"mm/year", "mm year-1", "mm/a", "mm a-1", "mm/yr", "mm yr-1"},
+    "%": {"%", "percent", "pct", "g/100g"},
+    "g/kg": {"g/kg", "g kg-1", "per mille"},
     "mm/day": {"mm/day", "mm day-1", "mm/d", "mm d-1"},
 }
 
@@ -51,6 +59,8 @@ class Inputs:
     rasters: dict[str, Aligned]
     constants: dict[str, float]
     warnings: tuple[str, ...]
+    fraction_divisor: float = 1.0
+    """From the unit of sand, clay and silt to %."""
 
     def mosaics(self) -> dict[str, Mosaic]:
         """The input behind each raster role."""
@@ -97,7 +107,8 @@ def open_inputs(settings: Settings, block: int = 512) -> Inputs:
             ]
     if faults:
         raise InputError(*faults)
-    return Inputs(grid, rasters, constants, tuple(_warnings(settings, mosaics)))
+    divisor = 10.0 if settings.soil.unit == "g/kg" else 1.0
+    return Inputs(grid, rasters, constants, tuple(_warnings(settings, mosaics)), divisor)
 
 
 def _given(settings: Settings) -> dict[str, tuple[RasterInput, float | None, str | None]]:
@@ -109,6 +120,9 @@ def _given(settings: Settings) -> dict[str, tuple[RasterInput, float | None, str
         "elevation": (table.elevation, table.nodata, table.unit),
         "ground": (table.ground, table.nodata, table.unit),
         "texture": (soil.texture, soil.nodata, None),
+        "sand": (soil.sand, soil.nodata, soil.unit),
+        "clay": (soil.clay, soil.nodata, soil.unit),
+        "silt": (soil.silt, soil.nodata, soil.unit),
         "salinity": (groundwater.salinity, groundwater.nodata, groundwater.unit),
         "potential_evaporation": (
             climate.potential_evaporation,

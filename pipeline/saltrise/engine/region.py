@@ -15,7 +15,7 @@ from rasterio.errors import RasterioError
 
 from saltrise.coverage import ZoneShapes, prepare_zones
 from saltrise.engine import findings
-from saltrise.engine.inputs import ROLES, Inputs, open_inputs
+from saltrise.engine.inputs import ROLES, SOIL_ROLES, Inputs, open_inputs
 from saltrise.engine.plan import Plan
 from saltrise.engine.schedule import on_threads
 from saltrise.engine.survey import BlockScan, first_look, scan
@@ -29,6 +29,7 @@ from saltrise.io.soil_tables import load_soil_set
 from saltrise.io.vectors import Zones, read_zones
 from saltrise.physics.curve import build_curves
 from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
+from saltrise.physics.texture import fractions_in_percent, texture_class
 from saltrise.recipe import Recipe
 from saltrise.schemes import Scheme
 from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
@@ -187,17 +188,32 @@ def _scan(
     if whole:
         return scan(inputs, settings.run.tile, each)
     look = first_look(inputs)
-    if "texture" not in inputs.rasters:
+    soil = [role for role in SOIL_ROLES if role in inputs.rasters]
+    if not soil:
         return look
-    codes = scan(inputs, settings.run.tile, each, roles=("texture",))
-    return replace(look, codes=codes.codes)
+    found = scan(inputs, settings.run.tile, each, roles=soil)
+    return replace(look, codes=found.codes, wrong_fractions=found.wrong_fractions)
 
 
 def _textures(settings: Settings, inputs: Inputs, found: BlockScan) -> tuple[str, ...]:
-    codes = set(found.codes) | {inputs.constants.get("texture", np.nan)}
-    classes = settings.soil.classes
+    codes = set(found.codes) | _constant_codes(inputs)
+    classes = settings.soil.codes
     occurring = {name for code, name in classes.items() if code in codes and name != NOT_SOIL}
     return tuple(sorted(occurring))
+
+
+def _constant_codes(inputs: Inputs) -> set[float]:
+    """The texture code that numbers in the config give, if they do."""
+    given = inputs.constants
+    if "texture" in given:
+        return {given["texture"]}
+    if not {"sand", "clay"} <= given.keys() or "silt" in inputs.rasters:
+        return set()
+    parts = {role: np.array([given[role]]) for role in ("sand", "clay", "silt") if role in given}
+    sand, clay, _ = fractions_in_percent(
+        parts["sand"], parts["clay"], parts.get("silt"), inputs.fraction_divisor
+    )
+    return {float(texture_class(sand, clay)[0])}
 
 
 def _soil_faults(
@@ -267,11 +283,12 @@ def make_recipe(region: Region) -> Recipe:
         target_load=settings.hazard.target_load,
         scheme=region.scheme,
         constants=region.inputs.constants,
+        fraction_divisor=region.inputs.fraction_divisor,
     )
 
 
 def _profile_of_code(region: Region) -> tuple[int, NDArray[np.int32]]:
-    classes = region.settings.soil.classes
+    classes = region.settings.soil.codes
     first, last = min(classes), max(classes)
     if last - first > _CODE_SPAN:
         raise InputError(

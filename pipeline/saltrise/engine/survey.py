@@ -19,6 +19,7 @@ from saltrise.engine.inputs import Inputs
 from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.align import BlockReader, Floats
+from saltrise.physics.texture import fractions_in_percent, texture_class
 
 Each = Callable[[Callable[[Window], "BlockScan"], Iterable[Window]], Iterable["BlockScan"]]
 """Applies a function to windows, in any order and on any threads."""
@@ -65,13 +66,16 @@ class BlockScan:
     codes: dict[float, Sighting]
     complete: int
     """Cells where every input has a value."""
+    wrong_fractions: Sighting | None = None
+    """Cells whose sand, clay and silt cannot be."""
 
     def __add__(self, other: BlockScan) -> BlockScan:
         ranges = add_ranges(self.ranges, other.ranges)
         codes = dict(self.codes)
         for code, seen in other.codes.items():
             codes[code] = codes[code] + seen if code in codes else seen
-        return BlockScan(ranges, codes, self.complete + other.complete)
+        wrong = _both(self.wrong_fractions, other.wrong_fractions)
+        return BlockScan(ranges, codes, self.complete + other.complete, wrong)
 
 
 def add_ranges(one: dict[str, Range], other: dict[str, Range]) -> dict[str, Range]:
@@ -160,7 +164,7 @@ def _scan_window(inputs: Inputs, readers: dict[str, BlockReader], window: Window
     for block in inputs.grid.blocks(window):
         check_stop()
         values = {role: reader.read(block) for role, reader in readers.items()}
-        total = total + _scan_block(values, inputs.constants, block)
+        total = total + _scan_block(values, inputs.constants, inputs.fraction_divisor, block)
     return total
 
 
@@ -178,14 +182,31 @@ def block_ranges(
     return {role: _range(read, block) for role, read in values.items()}
 
 
-def _scan_block(values: dict[str, Floats], constants: dict[str, float], block: Window) -> BlockScan:
+def _scan_block(
+    values: dict[str, Floats], constants: dict[str, float], divisor: float, block: Window
+) -> BlockScan:
     complete = np.ones((block.height, block.width), dtype=bool)
     for read in values.values():
         complete &= np.isfinite(read)
+    wrong = None
+    texture = values.get("texture")
+    if "sand" in values or "clay" in values or "silt" in values:
+        given = {
+            role: values[role].astype(np.float64)
+            if role in values
+            else np.full((block.height, block.width), constants[role])
+            for role in ("sand", "clay", "silt")
+            if role in values or role in constants
+        }
+        sand, clay, bad = fractions_in_percent(
+            given["sand"], given["clay"], given.get("silt"), divisor
+        )
+        wrong = _sighting(bad, block) if bad.any() else None
+        texture = texture_class(np.where(bad, np.nan, sand), clay)
     codes = {}
-    if "texture" in values and np.isfinite(values["texture"]).any():
-        codes = _codes(values["texture"], block)
-    return BlockScan(block_ranges(values, constants, block), codes, int(complete.sum()))
+    if texture is not None and np.isfinite(texture).any():
+        codes = _codes(texture, block)
+    return BlockScan(block_ranges(values, constants, block), codes, int(complete.sum()), wrong)
 
 
 def _range(values: Floats, block: Window) -> Range:

@@ -9,6 +9,10 @@ from saltrise.errors import InputError
 # GDAL's default cache is 5 % of all memory for each process; it is read at first use.
 os.environ.setdefault("GDAL_CACHEMAX", "256")
 
+# Read late, the offsets of a TIFF's blocks can fail to arrive (a server that stumbles, a torn file)
+# without an error: GDAL then takes the blocks for empty and fills them with nodata.
+os.environ.setdefault("GTIFF_USE_DEFER_STRILE_LOADING", "NO")
+
 # A server that stumbles is asked again before a run gives up.
 os.environ.setdefault("GDAL_HTTP_MAX_RETRY", "5")
 os.environ.setdefault("GDAL_HTTP_RETRY_DELAY", "0.5")

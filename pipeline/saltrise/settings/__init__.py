@@ -270,7 +270,7 @@ def _whole_codes(raw: dict[str, Any]) -> dict[str, Any]:
     if not isinstance(soil, dict) or not isinstance(soil.get("classes"), dict):
         return raw
     classes = {
-        int(code) if str(code).lstrip("-").isdecimal() else 0: str(name)
+        int(code) if str(code).lstrip("-").isdecimal() else str(code): str(name)
         for code, name in soil["classes"].items()
     }
     return raw | {"soil": soil | {"classes": classes}}

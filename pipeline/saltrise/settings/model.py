@@ -11,6 +11,7 @@ from typing import Annotated, Any, Literal
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PlainSerializer, ValidationInfo
 
 from saltrise.layers import BASIC
+from saltrise.physics.soils import TEXTURES
 from saltrise.units import TDS_PER_EC
 
 Number = Annotated[float, Field(allow_inf_nan=False)]
@@ -94,16 +95,33 @@ class WaterTable(_Table):
 
 
 class SoilTable(_Table):
-    """`[soil]`: texture codes, their classes, the parameter set, the law of an own CSV."""
+    """`[soil]`: texture codes and their classes, or fractions in `unit`; the parameter sets."""
 
-    texture: Raster
+    texture: Raster | None = None
+    sand: Raster | None = None
+    clay: Raster | None = None
+    silt: Raster | None = None
+    unit: Literal["%", "g/kg"] | None = None
+    method: Literal["classes"] = "classes"
     parameters: Text | Annotated[list[Text], Field(min_length=1)] = "rawls1982"
     conductivity: (
         Literal["campbell", "brooks-corey", "van-genuchten", "gardner-power", "gardner-exponential"]
         | None
     ) = None
-    classes: Mapping[int, str]
+    classes: Mapping[int | str, str] = Field(default_factory=dict)
     nodata: Number | None = None
+
+    @property
+    def from_fractions(self) -> bool:
+        """Whether texture comes from sand and clay rather than from codes."""
+        return self.texture is None
+
+    @property
+    def codes(self) -> Mapping[int, str]:
+        """Texture class (or "not soil") by code; with fractions by the class's own number."""
+        if not self.from_fractions:
+            return {code: name for code, name in self.classes.items() if isinstance(code, int)}
+        return {code: self.classes.get(name, name) for code, name in enumerate(TEXTURES)}
 
     @property
     def sets(self) -> tuple[str, ...]:

@@ -23,6 +23,7 @@ def rule_faults(raw: dict[str, Any], base: Path) -> list[Fault]:
     return [
         *_water(table.get("water_table", {})),
         *_grid(table.get("grid"), table.get("water_table", {})),
+        *_soil(raw.get("soil")),
         *_classes(table.get("soil", {})),
         *_salinity(table.get("groundwater", {})),
         *_not_negative(table.get("climate", {}), "climate", "potential_evaporation"),
@@ -91,6 +92,32 @@ def _grid(table: dict[str, Any] | None, water: dict[str, Any]) -> list[Fault]:
     return faults
 
 
+_FRACTIONS = ("sand", "clay", "silt", "unit", "method")
+
+
+def _soil(table: Any) -> list[Fault]:
+    """Texture codes with their classes, or fractions with their unit; not a mixture."""
+    if not isinstance(table, dict):
+        return []
+    given = [name for name in _FRACTIONS if name in table]
+    if "texture" in table:
+        faults: list[Fault] = [
+            (("soil", name), "goes with sand and clay, not with texture; give one or the other")
+            for name in given
+        ]
+        if "classes" not in table:
+            faults.append((("soil", "classes"), "missing; map each texture code to a class"))
+        return faults
+    if not given:
+        text = "missing; give texture and classes, or sand, clay and unit"
+        return [(("soil", "texture"), text)]
+    return [
+        (("soil", name), "missing; soil from fractions needs sand, clay and unit (% or g/kg)")
+        for name in ("sand", "clay", "unit")
+        if name not in table
+    ]
+
+
 def _classes(table: dict[str, Any]) -> list[Fault]:
     classes = table.get("classes")
     if not isinstance(classes, dict):
@@ -99,13 +126,18 @@ def _classes(table: dict[str, Any]) -> list[Fault]:
     faults: list[Fault] = []
     for code, name in classes.items():
         key = ("soil", "classes", str(code))
-        if not re.fullmatch(r"-?\d+", str(code)):
+        if "texture" not in table and "sand" in table:
+            if code not in TEXTURES:
+                text = f"the key is {code!r}, must be a texture class: {', '.join(TEXTURES)}"
+                faults.append((key, text))
+        elif not re.fullmatch(r"-?\d+", str(code)):
             faults.append((key, f"the key is {code!r}, must be a whole number of the raster"))
         if name not in allowed:
             close = get_close_matches(str(name), allowed, n=1)
             hint = f"; did you mean {close[0]!r}?" if close else ""
             faults.append((key, f"is {name!r}, allowed: {', '.join(allowed)}{hint}"))
-    if not faults and not any(name != NOT_SOIL for name in classes.values()):
+    codes = "texture" in table
+    if codes and not faults and not any(name != NOT_SOIL for name in classes.values()):
         faults.append((("soil", "classes"), "maps no value to a soil; name at least one class"))
     return faults
 
