@@ -2,5 +2,3 @@
 
 # First of all: GDAL reads its settings from the environment once.
 from saltrise.io import gdal as gdal
-
-# Before any raster is opened, in whatever process: GDAL's settings are part of reading right.
