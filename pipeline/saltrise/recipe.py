@@ -44,7 +44,7 @@ class Recipe:
     depth_factor, tds_factor, evaporation_factor : float
         From the config's units to m, g/L and mm/day.
     coefficient : float
-        Potential evaporation to evaporative demand [-].
+        Potential evaporation to evaporative demand [-], mulch taken off.
     target_load : float
         Target load [t/ha/year].
     scheme : Scheme

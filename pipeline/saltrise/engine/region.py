@@ -279,7 +279,7 @@ def make_recipe(region: Region) -> Recipe:
         depth_factor=float(depth_in_m(1.0, water.unit)),
         tds_factor=float(tds_in_g_per_l(1.0, groundwater.unit, groundwater.tds_per_ec)),
         evaporation_factor=float(evaporation_in_mm_per_day(1.0, climate.unit)),
-        coefficient=climate.coefficient,
+        coefficient=climate.coefficient * (1.0 - settings.surface.mulch),
         target_load=settings.hazard.target_load,
         scheme=region.scheme,
         constants=region.inputs.constants,

@@ -24,6 +24,7 @@ from saltrise.settings.model import (
     RasterInput,
     RunTable,
     SoilTable,
+    SurfaceTable,
     Tables,
     WaterTable,
     ZonesTable,
@@ -75,6 +76,11 @@ class Settings:
     def climate(self) -> ClimateTable:
         """Table `[climate]`."""
         return self.tables.climate
+
+    @property
+    def surface(self) -> SurfaceTable:
+        """Table `[surface]`."""
+        return self.tables.surface
 
     @property
     def hazard(self) -> HazardTable:

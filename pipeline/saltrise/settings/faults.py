@@ -33,6 +33,7 @@ _NAMES = {
 _BOUNDS = {
     "greater_than": "greater than {gt:g}",
     "greater_than_equal": "{ge:g} or more",
+    "less_than_equal": "{le:g} or less",
     "multiple_of": "a multiple of {multiple_of:g}",
     "finite_number": "finite",
     "too_short": "a list of at least {min_length}",

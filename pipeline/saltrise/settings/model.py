@@ -149,6 +149,12 @@ class ClimateTable(_Table):
     nodata: Number | None = None
 
 
+class SurfaceTable(_Table):
+    """`[surface]`: `mulch`, the fraction of the evaporative demand kept off the bare soil [-]."""
+
+    mulch: Annotated[float, Field(ge=0, le=1, allow_inf_nan=False)] = 0.0
+
+
 class HazardTable(_Table):
     """`[hazard]`: class scheme; `target_load` [t/ha/year]; what ranks zones."""
 
@@ -193,6 +199,7 @@ class Tables(_Table):
     soil: SoilTable
     groundwater: GroundwaterTable
     climate: ClimateTable
+    surface: SurfaceTable = SurfaceTable()
     hazard: HazardTable = HazardTable()
     zones: ZonesTable | None = None
     output: OutputTable
@@ -206,6 +213,7 @@ TABLES: Mapping[str, type[_Table]] = MappingProxyType(
         "soil": SoilTable,
         "groundwater": GroundwaterTable,
         "climate": ClimateTable,
+        "surface": SurfaceTable,
         "hazard": HazardTable,
         "zones": ZonesTable,
         "output": OutputTable,
