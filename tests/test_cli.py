@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 import signal
 import subprocess
@@ -185,6 +186,29 @@ def test_a_signal_ends_the_run_soon_and_says_how_to_go_on(tmp_path, sent, code, 
     assert "run the same command again" in errors
     assert "Traceback" not in errors
     assert not (tmp_path / "out").exists()
+
+
+def test_the_log_tells_stages_steps_and_the_end(region: Path, tmp_path: Path) -> None:
+    log = tmp_path / "run.jsonl"
+    done = call("run", str(region), "--force", "-q", "--log", str(log))
+    assert done.returncode == 0
+    lines = [json.loads(line) for line in log.read_text().splitlines()]
+    assert all(line["time"].endswith("+00:00") for line in lines)
+    stages = [line["stage"] for line in lines if line["event"] == "stage"]
+    assert stages == ["fingerprints", "survey", "tiles", "layers"]
+    tiles = [line for line in lines if line["event"] == "step" and line["stage"] == "tiles"]
+    assert tiles[-1]["done"] == tiles[-1]["total"] == len(tiles)
+    assert tiles[-1]["cells_per_second"] > 0
+    assert lines[-1]["event"] == "end"
+    assert lines[-1]["exit_code"] == 0
+    # A second run goes on in the same file and tells why it failed.
+    assert call("run", str(region), "-q", "--log", str(log)).returncode == 2
+    last = json.loads(log.read_text().splitlines()[-1])
+    assert last["exit_code"] == 2
+    assert "holds a finished run" in last["message"]
+    nowhere = call("run", str(region), "--log", str(tmp_path / "no" / "x.jsonl"))
+    assert nowhere.returncode == 2
+    assert "cannot be written" in nowhere.stderr
 
 
 def test_numbers_of_workers_override_the_config(region: Path) -> None:

@@ -290,10 +290,11 @@ def test_a_killed_worker_process_costs_only_its_tile(region, again: Path) -> Non
 
 
 @pytest.mark.parametrize(("sent", "code"), [(signal.SIGINT, 130), (signal.SIGTERM, 143)])
-def test_a_signal_between_tiles_is_resumable(region, again: Path, sent, code) -> None:
+@pytest.mark.parametrize("when", ["survey.pickle", "000003.json", "evaporation.tif", "zones.csv"])
+def test_a_signal_is_resumable(region, again: Path, sent, code, when: str) -> None:
     setup = (
         "def tell(name):\n"
-        "    if name == '000003.json':\n"
+        f"    if name == {when!r}:\n"
         f"        os.kill(os.getpid(), {int(sent)})\n"
         "durable.observers.append(tell)\n"
     )

@@ -11,6 +11,7 @@ from saltrise.engine.coarse import coarse_levels
 from saltrise.engine.merge import Statistics
 from saltrise.engine.plan import Plan
 from saltrise.engine.records import Record, section, section_path, tile_file
+from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.blocks import Level, template, write_assembled
 from saltrise.io.cog import virtual_layer, write_cog
@@ -65,7 +66,7 @@ def assemble(
         return
     base = template(grid, layer, plan.compression, dataset_tags, band_tags, colours)
     stored = [_stored_level(plan, records, name, k) for k in range(plan.tile_levels() + 1)]
-    write_assembled(target, base, stored + coarse_levels(plan, records, layer))
+    write_assembled(target, base, stored + coarse_levels(plan, records, layer), check_stop)
 
 
 def _stored_level(plan: Plan, records: list[Record], name: str, level: int) -> Level:

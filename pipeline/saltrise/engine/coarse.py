@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from saltrise.engine.plan import Plan
 from saltrise.engine.records import Record, section, section_path
+from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.blocks import Level, block_places
 from saltrise.io.durable import append
@@ -33,6 +34,7 @@ def coarse_levels(plan: Plan, records: list[Record], layer: Layer) -> list[Level
         return []
     spools = [_Spool(plan, layer, level, *size) for level, size in enumerate(sizes) if level > held]
     for strip in _held_strips(plan, records, layer, held, sizes[held]):
+        check_stop()
         spools[0].take(strip, spools[1:])
     spools[0].close(spools[1:])
     return [spool.level() for spool in spools]

@@ -10,6 +10,7 @@ from typing import Any
 from saltrise.engine.inputs import ROLES
 from saltrise.engine.region import Opened
 from saltrise.engine.schedule import on_threads
+from saltrise.engine.stop import check_stop
 from saltrise.io.fingerprint import Fingerprint, fingerprint, stamp
 from saltrise.io.sources import is_remote
 from saltrise.io.vrt import Rect
@@ -66,7 +67,7 @@ def take_prints(opened: Opened, done: Callable[[int, int], None]) -> Prints:
 
     stamps = {file.path: stamp(file.path) for file in files}
     prints = on_threads(
-        lambda file: fingerprint(file.path, file.needed, file.share),
+        lambda file: fingerprint(file.path, file.needed, file.share, check_stop),
         files,
         opened.settings.workers,
         heard,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import struct
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import BinaryIO
@@ -100,7 +100,12 @@ def template(
     return entries
 
 
-def write_assembled(path: Path, base: dict[int, tiff.Entry], levels: Sequence[Level]) -> None:
+def write_assembled(
+    path: Path,
+    base: dict[int, tiff.Entry],
+    levels: Sequence[Level],
+    tick: Callable[[], None] = lambda: None,
+) -> None:
     """Write a Cloud-Optimized GeoTIFF from blocks that lie in other files.
 
     Parameters
@@ -111,6 +116,8 @@ def write_assembled(path: Path, base: dict[int, tiff.Entry], levels: Sequence[Le
         From `template`.
     levels : sequence of Level
         Full resolution first, then overviews, finest first.
+    tick : callable
+        Called between blocks; what it raises ends the writing.
 
     Raises
     ------
@@ -129,7 +136,7 @@ def write_assembled(path: Path, base: dict[int, tiff.Entry], levels: Sequence[Le
         offsets[k] = ends - framed + _LEADER.size
         start = int(ends[-1])
     head = tiff.write_head(_directories(base, levels, offsets, big), _GHOST, big=big)
-    durable.write_whole(path, _parts(head, levels))
+    durable.write_whole(path, _parts(head, levels, tick))
 
 
 def _directories(
@@ -153,10 +160,11 @@ def _directories(
     return directories
 
 
-def _parts(head: bytes, levels: Sequence[Level]) -> Iterator[bytes]:
+def _parts(head: bytes, levels: Sequence[Level], tick: Callable[[], None]) -> Iterator[bytes]:
     yield head
     for level in reversed(levels):
         for block in read_blocks(level):
+            tick()
             yield _LEADER.pack(len(block)) + block + block[-4:]
 
 

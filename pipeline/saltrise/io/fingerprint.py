@@ -6,6 +6,7 @@ import hashlib
 import json
 import urllib.error
 import urllib.request
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -24,6 +25,7 @@ _HUGE = 1_000_000_000
 """Bytes from which on a file that is mostly not read is not hashed as a whole."""
 
 _TIMEOUT_S = 20
+_PART_BYTES = 1 << 20
 
 
 @dataclass(frozen=True)
@@ -35,7 +37,12 @@ class Fingerprint:
     covers: str
 
 
-def fingerprint(path: str, needed: Rect | None = None, share: float = 1.0) -> Fingerprint:
+def fingerprint(
+    path: str,
+    needed: Rect | None = None,
+    share: float = 1.0,
+    tick: Callable[[], None] = lambda: None,
+) -> Fingerprint:
     """Fingerprint of an input.
 
     Parameters
@@ -46,6 +53,8 @@ def fingerprint(path: str, needed: Rect | None = None, share: float = 1.0) -> Fi
         Column, row, width and height of the cells that are read, for a raster.
     share : float
         Part of the raster's cells that `needed` holds.
+    tick : callable
+        Called between parts; what it raises ends the reading.
 
     Returns
     -------
@@ -59,19 +68,22 @@ def fingerprint(path: str, needed: Rect | None = None, share: float = 1.0) -> Fi
         The file cannot be read.
     """
     if needed is not None and is_remote(path):
-        return _of_blocks(path, _remote_size(path), needed)
+        return _of_blocks(path, _remote_size(path), needed, tick)
     try:
         size = Path(path).stat().st_size
         if needed is not None and size > _HUGE and share < 0.5:
-            return _of_blocks(path, size, needed)
+            return _of_blocks(path, size, needed, tick)
         with Path(path).open("rb") as file:
-            digest = hashlib.file_digest(file, "sha256")
+            digest = hashlib.sha256()
+            while part := file.read(_PART_BYTES):
+                tick()
+                digest.update(part)
             return Fingerprint(file.tell(), digest.hexdigest(), WHOLE)
     except OSError as error:
         raise BrokenInputError(f"{path}: cannot be read: {error.strerror or error}") from error
 
 
-def _of_blocks(path: str, size: int, needed: Rect) -> Fingerprint:
+def _of_blocks(path: str, size: int, needed: Rect, tick: Callable[[], None]) -> Fingerprint:
     digest = hashlib.sha256(f"{size}\n".encode())
     try:
         with rasterio.open(path) as dataset:
@@ -92,6 +104,7 @@ def _of_blocks(path: str, size: int, needed: Rect) -> Fingerprint:
             bottom = min(-(-(row + height) // high) * high, dataset.height)
             for y in range(top, bottom, high):
                 for x in range(left, right, wide):
+                    tick()
                     window = RasterWindow(x, y, min(wide, right - x), min(high, bottom - y))
                     digest.update(dataset.read(1, window=window).tobytes())
     except RasterioError as error:
