@@ -10,11 +10,11 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely.geometry import box
 
+from saltrise.block_sums import BlockSums
 from saltrise.coverage import BlockCover, block_cover, prepare_zones
 from saltrise.grid import Grid, Window, cell_areas
 from saltrise.zonal import (
     REGION,
-    BlockSums,
     ZonePartial,
     ZoneTotals,
     ZoneValues,

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.zonal import QUANTITIES, REGION, ZoneTotals
+from saltrise.zonal import BIN_SHIFT, QUANTITIES, REGION, ZoneTotals
 
 Row = dict[str, Any]
 
@@ -165,5 +165,5 @@ def histogram_percentile(
 def _middle(bin_: np.int64) -> float:
     if bin_ == 0:
         return 0.0
-    edges: NDArray[np.float64] = (np.array([bin_, bin_ + 1]) << np.int64(44)).view(np.float64)
+    edges: NDArray[np.float64] = (np.array([bin_, bin_ + 1]) << BIN_SHIFT).view(np.float64)
     return float(edges.mean())

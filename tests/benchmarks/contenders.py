@@ -52,7 +52,7 @@ def cog_floor(config: Path) -> None:
         roles = {"demand": "potential_evaporation"}
         values = {n: inputs[roles.get(r, r)].astype(np.float64) for n, r in LAYERS[:-1]}
         codes = np.nan_to_num(inputs["texture"]).astype(np.uint8)
-        return CellResult(values, codes, valid, inputs["depth"], {"cells": valid.size})
+        return CellResult(values, codes, valid, inputs["depth"], {"cells": valid.size}, ())
 
     class Unsummed:
         """Stands for both areas and sums, and does nothing."""

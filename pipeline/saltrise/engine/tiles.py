@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.block_sums import BlockSums
 from saltrise.coverage import block_cover
 from saltrise.engine.findings import NEVER_NEGATIVE
 from saltrise.engine.inputs import ROLES
@@ -23,7 +24,7 @@ from saltrise.io.encode import encode, store
 from saltrise.layers import LAYERS
 from saltrise.pyramid import Stored, halve
 from saltrise.recipe import CellResult, UnmappedCodeError, compute_cells
-from saltrise.zonal import BlockSums, ZonePartial, pack
+from saltrise.zonal import ZonePartial, pack
 
 Array = NDArray[np.float64]
 StoredLayers = dict[str, NDArray[np.float32] | NDArray[np.uint8]]
