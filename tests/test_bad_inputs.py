@@ -234,8 +234,9 @@ def test_output_that_is_a_file_or_cannot_be_made(tmp_path: Path) -> None:
 
 
 def test_grids_that_cannot_be(tmp_path: Path) -> None:
-    config = regions.small_region(tmp_path, grid={"crs": "EPSG:999999", "resolution": 30})
-    assert "no coordinate reference system" in refused(config)
+    for crs in ("EPSG:999999", "EPSG:nothing", "mars"):
+        config = regions.small_region(tmp_path, grid={"crs": crs, "resolution": 30})
+        assert "no coordinate reference system" in refused(config)
     config = regions.small_region(tmp_path, grid={"like": "gone.tif"})
     assert "grid.like: no such file" in refused(config)
 

@@ -135,7 +135,7 @@ def test_the_template_is_a_config(tmp_path: Path) -> None:
 
 def test_version_and_help() -> None:
     assert call("--version").stdout.startswith("saltrise 0.")
-    for command in ("run", "check", "soils", "template"):
+    for command in ("run", "check", "explain", "soils", "template"):
         assert command in call("--help").stdout
         assert call(command, "--help").returncode == 0
 

@@ -167,6 +167,38 @@ def check(config: Path, workers: int | None, quiet: bool, verbose: bool) -> None
 
 
 @commands.command()
+@_config
+@click.option("--at", type=float, nargs=2, metavar="X Y", help="The point to explain.")
+@click.option(
+    "--points",
+    type=click.Path(path_type=Path),
+    help="A CSV with columns x and y, to explain each of its points.",
+)
+@click.option("--crs", help="CRS of the points, such as EPSG:4326; the grid's own unless given.")
+@click.option("--json", "as_json", is_flag=True, help="One JSON object a point.")
+def explain(
+    config: Path,
+    at: tuple[float, float] | None,
+    points: Path | None,
+    crs: str | None,
+    as_json: bool,
+) -> None:
+    """Show one cell's whole calculation with units and sources."""
+    from saltrise.explain import Explainer, describe
+    from saltrise.io.tables import read_points
+
+    if (at is None) == (points is None):
+        raise click.UsageError("give either --at X Y or --points FILE")
+    region = Explainer(config)
+    for x, y in read_points(points) if points else [at] if at else []:
+        answer = region.at(x, y, crs)
+        if as_json:
+            console.print_json(answer)
+        else:
+            console.print_text(describe(answer))
+
+
+@commands.command()
 @click.argument("sets", nargs=-1)
 @click.option(
     "--compare", is_flag=True, help="Show every class under every set side by side, in mm/day."

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import sys
 import time
 from typing import TYPE_CHECKING, Any, TextIO
@@ -279,6 +280,11 @@ def print_comparison(
         shown = ("no row" if rate is None else f"{rate:.4g}" for rate in cells)
         row = "".join(f"{text:>{w}}" for text, w in zip(shown, widths, strict=True))
         print(f"{texture:<17}{row}")
+
+
+def print_json(content: dict[str, Any]) -> None:
+    """Print one JSON object on a line of its own."""
+    print(json.dumps(content, ensure_ascii=False, allow_nan=False))
 
 
 def print_text(text: str) -> None:

@@ -3,14 +3,18 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
+
+import numpy as np
 
 from saltrise.errors import InputError
 from saltrise.grid import Grid
 from saltrise.io.align import Aligned, align, extent
 from saltrise.io.mosaic import Mosaic, open_mosaic
 from saltrise.io.regrid import bounds_in, crs_text
+from saltrise.physics.texture import fractions_in_percent, texture_class
 
 if TYPE_CHECKING:
     from saltrise.settings import RasterInput, Settings
@@ -61,6 +65,28 @@ class Inputs:
     warnings: tuple[str, ...]
     fraction_divisor: float = 1.0
     """From the unit of sand, clay and silt to %."""
+
+    def texture_number(self, values: Mapping[str, float]) -> int | None:
+        """Number of the texture class that one cell's fractions make; None without a value.
+
+        Raises
+        ------
+        InputError
+            The fractions cannot be.
+        """
+        parts = {r: np.array([values[r]]) for r in ("sand", "clay", "silt") if r in values}
+        if not all(np.isfinite(part[0]) for part in parts.values()):
+            return None
+        sand, clay, wrong = fractions_in_percent(
+            parts["sand"], parts["clay"], parts.get("silt"), self.fraction_divisor
+        )
+        if wrong[0]:
+            raise InputError(f"sand, clay and silt do not add up: {dict(values)}")
+        return int(texture_class(sand, clay)[0])
+
+    def unit_of(self, settings: Settings, role: str) -> str:
+        """Unit of an input as the config declares it; empty for codes."""
+        return _given(settings)[role][2] or ""
 
     def mosaics(self) -> dict[str, Mosaic]:
         """The input behind each raster role."""

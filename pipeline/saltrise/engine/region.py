@@ -29,7 +29,6 @@ from saltrise.io.soil_tables import load_soil_set
 from saltrise.io.vectors import Zones, read_zones
 from saltrise.physics.curve import build_curves
 from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
-from saltrise.physics.texture import fractions_in_percent, texture_class
 from saltrise.recipe import Recipe
 from saltrise.schemes import Scheme
 from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
@@ -209,11 +208,8 @@ def _constant_codes(inputs: Inputs) -> set[float]:
         return {given["texture"]}
     if not {"sand", "clay"} <= given.keys() or "silt" in inputs.rasters:
         return set()
-    parts = {role: np.array([given[role]]) for role in ("sand", "clay", "silt") if role in given}
-    sand, clay, _ = fractions_in_percent(
-        parts["sand"], parts["clay"], parts.get("silt"), inputs.fraction_divisor
-    )
-    return {float(texture_class(sand, clay)[0])}
+    number = inputs.texture_number(given)
+    return set() if number is None else {float(number)}
 
 
 def _soil_faults(

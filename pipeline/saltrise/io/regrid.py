@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import math
+
 from rasterio.crs import CRS
 from rasterio.errors import CRSError, RasterioError
-from rasterio.warp import transform_bounds
+from rasterio.warp import transform, transform_bounds
 
 from saltrise.errors import InputError
 from saltrise.io.mosaic import same_crs
@@ -20,7 +22,7 @@ def crs_text(name: str) -> str:
     """
     try:
         return str(CRS.from_user_input(name).to_wkt())
-    except CRSError as error:
+    except (CRSError, ValueError) as error:
         raise InputError(
             f"{name!r} is no coordinate reference system; give one such as 'EPSG:32740' ({error})"
         ) from error
@@ -46,3 +48,20 @@ def bounds_in(
     except RasterioError as error:
         raise InputError(f"the extent {bounds} has no place in the grid's CRS: {error}") from error
     return seen[0], seen[1], seen[2], seen[3]
+
+
+def point_in(source_wkt: str, target_wkt: str, x: float, y: float) -> tuple[float, float]:
+    """A point in another CRS, x before y (longitude before latitude).
+
+    Raises
+    ------
+    InputError
+        The point does not exist in the target CRS.
+    """
+    try:
+        xs, ys = transform(CRS.from_wkt(source_wkt), CRS.from_wkt(target_wkt), [x], [y])
+    except RasterioError as error:
+        raise InputError(f"the point {x}, {y} has no place in the grid's CRS: {error}") from error
+    if not (math.isfinite(xs[0]) and math.isfinite(ys[0])):
+        raise InputError(f"the point {x}, {y} has no place in the grid's CRS")
+    return xs[0], ys[0]

@@ -7,6 +7,7 @@ import io
 from pathlib import Path
 from typing import Any
 
+from saltrise.errors import InputError
 from saltrise.io import durable
 
 _FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
@@ -36,3 +37,30 @@ def _cell(value: Any) -> str:
     if isinstance(value, str):
         return f"'{value}" if value.startswith(_FORMULA_STARTS) else value
     return repr(value)
+
+
+def read_points(path: Path) -> list[tuple[float, float]]:
+    """Points of a CSV with columns `x` and `y`; others are ignored.
+
+    Raises
+    ------
+    InputError
+        The file is unreadable, lacks a column or holds what is no number; names the line.
+    """
+    try:
+        text = path.read_text("utf-8-sig")
+    except (OSError, UnicodeDecodeError) as error:
+        raise InputError(f"{path}: cannot be read: {error}") from error
+    rows = csv.DictReader(io.StringIO(text))
+    missing = [name for name in ("x", "y") if name not in (rows.fieldnames or ())]
+    if missing:
+        raise InputError(f"{path}:1: missing column {', '.join(missing)}; needs x and y")
+    points, faults = [], []
+    for row in rows:
+        try:
+            points.append((float(row["x"]), float(row["y"])))
+        except (TypeError, ValueError):
+            faults.append(f"{path}:{rows.line_num}: x {row['x']!r}, y {row['y']!r}: no numbers")
+    if faults:
+        raise InputError(*faults)
+    return points
