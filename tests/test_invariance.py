@@ -11,7 +11,7 @@ import pytest
 import rasterio
 from hypothesis import HealthCheck, Phase, given, settings
 from hypothesis import strategies as st
-from shapely.geometry import Polygon
+from shapely.geometry import Polygon, box
 
 import regions
 import saltrise
@@ -60,7 +60,9 @@ def stars(random: np.random.Generator, size: float) -> dict[str, Polygon]:
         x = regions.WEST + random.uniform(0, size) + radius * np.cos(angle)
         y = regions.NORTH - random.uniform(0, size) + radius * np.sin(angle)
         zones[f"z{k}"] = Polygon(zip(x, y, strict=True))
-    return zones
+    # One that surely meets the region, however narrow that is.
+    corner = (regions.WEST + 100, regions.NORTH - 400)
+    return zones | {"corner": box(*corner, corner[0] + 210, corner[1] + 310)}
 
 
 @settings(
