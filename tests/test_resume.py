@@ -14,6 +14,8 @@ from filelock import FileLock
 import regions
 import runs
 from runs import hashes, make_region, run_small, stopped_run
+from saltrise import job
+from saltrise.engine import identity
 from saltrise.errors import InputError, RunError
 from saltrise.io import durable
 
@@ -202,6 +204,22 @@ def test_a_changed_input_or_tile_is_refused_and_force_starts_over(again: Path) -
         run_small(again, tile=48)
     result = run_small(again, force=True)
     assert not result.layer("salt_load")[0].mask.all()
+
+
+def test_other_code_or_other_libraries_are_refused(
+    again: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    stopped_run(again, 8)
+    with monkeypatch.context() as patch:
+        patch.setattr(job, "code_print", lambda: "other")
+        with pytest.raises(InputError, match=r"run code: was '[0-9a-f]{16}', is 'other'"):
+            run_small(again)
+    with monkeypatch.context() as patch:
+        patch.setattr(job, "versions", lambda: job_versions | {"numpy": "1.2.3"})
+        job_versions = identity.versions()
+        with pytest.raises(InputError, match=r"version of numpy: was .*, is '1\.2\.3'"):
+            run_small(again)
+    run_small(again)
 
 
 def test_workers_and_scheduler_may_change_on_the_way(region, again: Path) -> None:

@@ -38,6 +38,7 @@ from saltrise.errors import (
     UnusableInputError,
 )
 from saltrise.io import durable
+from saltrise.io.fingerprint import code_print
 from saltrise.io.tables import write_zones_csv
 from saltrise.io.vectors import write_zones_gpkg
 from saltrise.result import Result
@@ -107,7 +108,11 @@ def run(
         check_target(workdir, force=force)
         opened = open_region(settings, block)
         prints = _prints(opened, ears)
-        cut = {"tile": settings.run.tile, "block": block}
+        cut: dict[str, int | str] = {
+            "tile": settings.run.tile,
+            "block": block,
+            "code": code_print(),
+        }
         entries = prints.entries(settings.shown)
         identity = identify(settings.resolved(), entries, versions(), cut)
         beginning = begin(workdir, identity, run_date(), force=force)

@@ -21,7 +21,7 @@ def identify(
     config: Mapping[str, Any],
     inputs: list[dict[str, Any]],
     versions: Mapping[str, str],
-    cut: Mapping[str, int],
+    cut: Mapping[str, int | str],
 ) -> dict[str, Any]:
     """Identity of a run.
 
@@ -34,7 +34,8 @@ def identify(
     versions : mapping
         Software that decides the numbers.
     cut : mapping
-        Edge of tile and block [cells]: records of one cut are no use to another.
+        Edge of tile and block [cells], and the hash of this program's code: records of one are no
+        use to another.
     """
     return {"config": config, "inputs": inputs, "versions": versions, "cut": cut}
 

@@ -24,6 +24,7 @@ from saltrise.engine.stop import ask_stop, clear_stop
 from saltrise.engine.tiles import run_tile
 from saltrise.errors import InputError, RunError, SaltriseError
 from saltrise.io import durable
+from saltrise.io.fingerprint import code_print
 from saltrise.io.sources import is_remote
 
 T = TypeVar("T")
@@ -233,7 +234,7 @@ def _require_fit(client: Any, plan: Plan) -> None:
         }
     )
     try:
-        answers = client.run(_probe, str(probe), token, files, versions())
+        answers = client.run(_probe, str(probe), token, files, _software())
     except Exception as error:
         # Whatever a foreign worker raises, it cannot take the run; mostly the package is missing.
         raise InputError(
@@ -249,9 +250,13 @@ def _require_fit(client: Any, plan: Plan) -> None:
         raise InputError(*faults)
 
 
+def _software() -> dict[str, str]:
+    return versions() | {"saltrise's code": code_print()}
+
+
 def _probe(probe: str, token: str, files: list[str], here: dict[str, str]) -> str:
     """What is wrong with this worker, or nothing."""
-    there = versions()
+    there = _software()
     other = [f"{name} {there.get(name)} (here {here[name]})" for name in here]
     other = [text for name, text in zip(here, other, strict=True) if there.get(name) != here[name]]
     if other:

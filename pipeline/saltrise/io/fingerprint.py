@@ -6,8 +6,11 @@ import hashlib
 import json
 import urllib.error
 import urllib.request
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from functools import cache
+from importlib import resources
+from importlib.resources.abc import Traversable
 from pathlib import Path
 
 import rasterio
@@ -116,6 +119,25 @@ def _of_blocks(path: str, size: int, needed: Rect, tick: Callable[[], None]) -> 
 def _remote_size(path: str) -> int:
     head = _head(path)
     return int(head.get("Content-Length", 0)) if head else 0
+
+
+@cache
+def code_print() -> str:
+    """Short hash of this package's own source and data: a version number alone may lie."""
+    root = resources.files("saltrise")
+    digest = hashlib.sha256()
+    for name, content in sorted(_sources(root, "")):
+        digest.update(name.encode() + b"\0" + content)
+    return digest.hexdigest()[:16]
+
+
+def _sources(folder: Traversable, prefix: str) -> Iterator[tuple[str, bytes]]:
+    for entry in folder.iterdir():
+        name = f"{prefix}/{entry.name}"
+        if entry.is_dir() and entry.name != "__pycache__":
+            yield from _sources(entry, name)
+        elif entry.name.endswith((".py", ".csv", ".toml")):
+            yield name, entry.read_bytes()
 
 
 def stamp(path: str) -> tuple[str, ...]:
