@@ -23,19 +23,7 @@ from saltrise.result import Result
 ROOT = Path(__file__).parents[1]
 TILES = ROOT / "sample_tiles"
 HEIGHT, WIDTH = 1000, 1300
-TEXTURE = {
-    1: "sand",
-    2: "loamy sand",
-    3: "sandy loam",
-    4: "loam",
-    5: "silt loam",
-    6: "sandy clay loam",
-    7: "clay loam",
-    8: "silty clay loam",
-    9: "sandy clay",
-    10: "silty clay",
-    11: "clay",
-}
+TEXTURE = read_settings(ROOT / "config" / "velith.toml").soil.codes
 
 
 def pasted(name: str) -> np.ndarray:

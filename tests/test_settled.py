@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 
 import regions
-from runs import make_region, run_small
+from runs import make_region, run_small, small_tiles
+from saltrise import job
 from saltrise.engine import survey
 from saltrise.errors import InputError
 
@@ -40,12 +41,14 @@ def test_a_raster_torn_at_its_end(tmp_path: Path) -> None:
     assert not (tmp_path / "out.unfinished").exists()
 
 
-def test_ranges_of_tiles_and_of_a_survey_are_the_same(tmp_path: Path) -> None:
+def test_a_run_warns_of_the_same_ranges_as_a_whole_survey(tmp_path: Path) -> None:
     config = make_region(tmp_path)
     values = regions.fields((70, 80), np.random.default_rng(5))
     values["depth"][50, 60] = -30.0
     regions.write_raster(tmp_path / "depth.tif", values["depth"], nodata=-9999)
     result = run_small(config)
+    region = job.survey(small_tiles(config), job.Silent(), block=16)
+    assert result.record["warnings"] == [*region.warnings, *job.doubts(region)]
     assert any("water stands up to 30 m above ground" in w for w in result.record["warnings"])
 
 

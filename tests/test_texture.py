@@ -122,6 +122,11 @@ def test_numbers_as_fractions(tmp_path: Path) -> None:
     assert [row["texture"] for row in result.record["parameters"]["classes"]] == ["loam"]
 
 
+def test_numbers_that_cannot_be_fractions_name_the_line(tmp_path: Path) -> None:
+    with pytest.raises(InputError, match=r"region\.toml:\d+: soil\.sand: fractions that cannot be"):
+        saltrise.run(fraction_region(tmp_path, sand=82, clay=38))
+
+
 def test_fractions_that_cannot_be_are_counted_and_located(tmp_path: Path) -> None:
     config = fraction_region(tmp_path, sand=10)
     clay = np.full((40, 50), 20, np.int16)

@@ -149,10 +149,9 @@ def _print_sets(record: dict[str, Any]) -> None:
     low, high = min(loads.values()), max(loads.values())
     if low > 0:
         factor = high / low
-        grave = (
-            "decides the answer" if factor > 3 else "matters" if factor > 1.3 else "matters little"
-        )
-        print(f"  the choice of set {grave} here: highest over lowest is {factor:.3g}")
+        words = "decides the answer" if factor > _DECIDES else "matters"
+        words = words if factor > _MATTERS else "matters little"
+        print(f"  the choice of set {words} here: highest over lowest is {factor:.3g}")
 
 
 def _class_keys(region: dict[str, Any]) -> list[str]:

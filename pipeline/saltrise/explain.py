@@ -13,15 +13,15 @@ from saltrise.engine.inputs import ROLES
 from saltrise.engine.region import Opened, Region, make_recipe, open_region
 from saltrise.engine.survey import BlockScan
 from saltrise.errors import InputError
-from saltrise.grid import Window
 from saltrise.io.align import BlockReader
 from saltrise.io.encode import store
 from saltrise.io.regrid import crs_text, point_in
 from saltrise.layers import LAYERS
+from saltrise.physics.curve import SURFACE_DEPTH_M
 from saltrise.physics.laws import closed_form_evaporation, gardner_limiting_rate
 from saltrise.physics.profile import Campbell, GardnerPower, Profile
 from saltrise.physics.soils import NOT_SOIL, SoilRow, soil_for
-from saltrise.recipe import CellResult, Recipe, compute_cells
+from saltrise.recipe import CellResult, compute_cells, converted
 from saltrise.settings import Settings
 from saltrise.units import DAYS_PER_YEAR
 
@@ -86,13 +86,9 @@ class Explainer:
 
     def _values(self, row: int, col: int) -> dict[str, float]:
         """Inputs of a cell, read by its whole block, as a run reads them."""
-        grid = self._opened.inputs.grid
-        top, left = row // grid.block * grid.block, col // grid.block * grid.block
-        block = Window(
-            top, left, min(grid.block, grid.height - top), min(grid.block, grid.width - left)
-        )
+        block = self._opened.inputs.grid.block_at(row, col)
         read = {
-            role: float(reader.read(block)[row - top, col - left])
+            role: float(reader.read(block)[row - block.row, col - block.col])
             for role, reader in self._readers.items()
         }
         return self._opened.inputs.constants | read
@@ -124,7 +120,7 @@ class Explainer:
         recipe = make_recipe(region)
         cell = {role: np.array([[value]]) for role, value in values.items()}
         result = compute_cells(recipe, cell, (1, 1))
-        depth_m, tds, demand = _converted(recipe, values)
+        depth_m, tds, demand = (float(v[0, 0]) for v in converted(recipe, cell))
         return {
             "texture": texture,
             "parameter_set": region.sets[0].name,
@@ -135,7 +131,8 @@ class Explainer:
             "demand_mm_per_day": demand,
             "target_load_t_per_ha_per_year": self._settings.hazard.target_load,
             **_exact(row, depth_m),
-            **_limit(result, demand),
+            "limited_by": _limit(result),
+            "days_per_year": DAYS_PER_YEAR,
             **self._stored(result),
             "hazard_class_name": region.scheme.names[int(result.hazard_class[0, 0]) - 1],
             "hazard_scheme": region.scheme.title,
@@ -173,16 +170,9 @@ class Explainer:
         return layers | {"hazard_class": int(result.hazard_class[0, 0])}
 
 
-def _converted(recipe: Recipe, values: dict[str, float]) -> tuple[float, float, float]:
-    """Depth [m], TDS [g/L] and evaporative demand [mm/day] of a cell."""
-    depth = values["depth"] if "depth" in values else values["ground"] - values["elevation"]
-    demand = values["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
-    return depth * recipe.depth_factor, values["salinity"] * recipe.tds_factor, demand
-
-
 def _exact(row: SoilRow, depth_m: float) -> Answer:
     """Maximum evaporation by the full equation without a curve, and by the closed form."""
-    at = max(depth_m, 0.001)
+    at = max(depth_m, SURFACE_DEPTH_M)
     exact = float(row.profile.evaporation(np.array([at]))[0][0])
     closed = _closed_form(row.profile, at)
     return {
@@ -203,14 +193,11 @@ def _closed_form(profile: Profile, depth_m: float) -> float | None:
     return None
 
 
-def _limit(result: CellResult, demand: float) -> Answer:
+def _limit(result: CellResult) -> str:
     """What holds evaporation: water at the surface, the demand or the soil."""
-    most = float(result.values["max_evaporation"][0, 0])
     if result.counts["at_surface"]:
-        limit = "water at surface: the demand evaporates"
-    else:
-        limit = "evaporative demand" if most >= demand else "soil"
-    return {"limited_by": limit, "days_per_year": DAYS_PER_YEAR}
+        return "water at surface: the demand evaporates"
+    return "evaporative demand" if result.counts["demand_limited"] else "soil"
 
 
 def describe(answer: Answer) -> str:

@@ -59,6 +59,11 @@ class Grid:
         inside = window or Window(0, 0, self.height, self.width)
         return self._cut(inside, self.block)
 
+    def block_at(self, row: int, col: int) -> Window:
+        """The block that holds a cell."""
+        top, left = row // self.block * self.block, col // self.block * self.block
+        return next(self._cut(Window(top, left, self.block, self.block), self.block))
+
     def tiles(self, edge: int) -> Iterator[Window]:
         """Tiles of `edge` cells (a multiple of the block), row by row."""
         return self._cut(Window(0, 0, self.height, self.width), edge)

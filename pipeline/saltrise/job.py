@@ -118,7 +118,7 @@ def run(
         beginning = begin(workdir, identity, run_date(), force=force)
         if not beginning.whole:
             try:
-                _work(workdir, opened, prints, beginning, digest(identity), ears)
+                _work(workdir, opened, prints, beginning, identity, ears)
             except InputError:
                 if not beginning.resumed:
                     # What has to change makes another run of it; nothing here is of use to that.
@@ -135,20 +135,19 @@ def _work(
     opened: Opened,
     prints: Prints,
     beginning: Beginning,
-    name: str,
+    identity: dict[str, Any],
     ears: Listener,
 ) -> None:
     """From an opened region to a whole unfinished folder, run.json included."""
     region = _surveyed(workdir, opened, ears)
-    plan = make_plan(region, workdir.work, name)
+    plan = make_plan(region, workdir.work, digest(identity))
     _tiles(plan, region.settings, ears)
     records = [read_record(plan.work, index) for index in range(len(plan.tiles()))]
     totals = merge(plan.work, records, plan.layers)
     _assemble(plan, region, records, totals, beginning.date, workdir, ears)
     worst = _zones(region, totals, beginning.date, workdir)
     _require_unchanged(prints)
-    entries = prints.entries(region.settings.shown)
-    record = run_record(region, totals, entries, beginning.date, worst)
+    record = run_record(region, totals, identity["inputs"], beginning.date, worst)
     durable.write_json(workdir.unfinished / FINISHED, record)
 
 

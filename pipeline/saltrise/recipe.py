@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, groundwater_evaporation
 from saltrise.physics.salt import critical_depth, salt_load
-from saltrise.physics.texture import fractions_in_percent, texture_class
+from saltrise.physics.texture import class_of_fractions
 from saltrise.schemes import SURFACE_CLASS, Scheme
 from saltrise.units import DAYS_PER_YEAR
 from saltrise.zonal import ZoneValues
@@ -128,9 +128,7 @@ def compute_cells(
     """
     given: dict[str, Array] = {role: values.astype(np.float64) for role, values in inputs.items()}
     given |= {role: np.full(shape, value) for role, value in recipe.constants.items()}
-    depth = _depth(recipe, given)
-    tds = given["salinity"] * recipe.tds_factor
-    demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
+    depth, tds, demand = converted(recipe, given)
     profile, no_texture = _profiles(recipe, _texture(recipe, given))
     missing = {
         "no_depth": ~np.isfinite(depth),
@@ -161,22 +159,21 @@ def compute_cells(
     return CellResult(values, classes, valid, depth, counts, others)
 
 
-def _depth(recipe: Recipe, given: dict[str, Array]) -> Array:
-    if "depth" in given:
-        return given["depth"] * recipe.depth_factor
-    return (given["ground"] - given["elevation"]) * recipe.depth_factor
+def converted(recipe: Recipe, given: Mapping[str, Array]) -> tuple[Array, Array, Array]:
+    """Depth [m], TDS [g/L] and evaporative demand [mm/day] from inputs in the config's units."""
+    depth = given["depth"] if "depth" in given else given["ground"] - given["elevation"]
+    demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
+    return depth * recipe.depth_factor, given["salinity"] * recipe.tds_factor, demand
 
 
 def _texture(recipe: Recipe, given: dict[str, Array]) -> Array:
     """Texture codes: as given, or the number of the class that the fractions make."""
     if "texture" in given:
         return given["texture"]
-    sand, clay, wrong = fractions_in_percent(
-        given["sand"], given["clay"], given.get("silt"), recipe.fraction_divisor
-    )
+    classes, wrong = class_of_fractions(given, recipe.fraction_divisor)
     if wrong.any():
         raise UnmappedCodeError("sand, clay and silt do not add up")
-    return texture_class(sand, clay)
+    return classes
 
 
 def _profiles(recipe: Recipe, texture: Array) -> tuple[NDArray[np.int32], NDArray[np.bool_]]:

@@ -12,21 +12,11 @@ from affine import Affine
 from rasterio.windows import Window
 from shapely.geometry import Polygon
 
+from saltrise.physics.soils import TEXTURES
+
 CRS, WEST, NORTH, CELL = "EPSG:32740", 500_000.0, 6_000_000.0, 30.0
 STRIP = 512
-TEXTURES = (
-    "sand",
-    "loamy sand",
-    "sandy loam",
-    "loam",
-    "silt loam",
-    "sandy clay loam",
-    "clay loam",
-    "silty clay loam",
-    "sandy clay",
-    "silty clay",
-    "clay",
-)
+CLASSES = tuple(name for name in TEXTURES if name != "silt")
 
 # Name, least, greatest, cells between knots, type, nodata.
 RASTERS = (
@@ -48,7 +38,7 @@ def make_region(folder: Path, size: int, zones: int = 0) -> Path:
     if zones:
         _write_zones(folder / f"zones{zones}.gpkg", size, zones)
         table = f'[zones]\nfile = "zones{zones}.gpkg"\n'
-    classes = "\n".join(f'{k} = "{name}"' for k, name in enumerate(TEXTURES, start=1))
+    classes = "\n".join(f'{k} = "{name}"' for k, name in enumerate(CLASSES, start=1))
     config.write_text(
         f"""title = "Benchmark (invented)"
 [water_table]
@@ -102,7 +92,7 @@ def _write(
             values = strip[:, left] * (1 - right_share) + strip[:, left + 1] * right_share
             values = low + (high - low) * values
             if dtype == "uint8":
-                values = np.clip(np.floor(values), 1, len(TEXTURES))
+                values = np.clip(np.floor(values), 1, len(CLASSES))
             else:
                 values = np.round(values + random.normal(0, 0.01, values.shape), 3)
             values[coarse[above + 1][:, left + 1] > 0.97] = nodata

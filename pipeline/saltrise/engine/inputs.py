@@ -14,7 +14,7 @@ from saltrise.grid import Grid
 from saltrise.io.align import Aligned, align, extent
 from saltrise.io.mosaic import Mosaic, open_mosaic
 from saltrise.io.regrid import bounds_in, crs_text
-from saltrise.physics.texture import fractions_in_percent, texture_class
+from saltrise.physics.texture import class_of_fractions
 
 if TYPE_CHECKING:
     from saltrise.settings import RasterInput, Settings
@@ -77,12 +77,11 @@ class Inputs:
         parts = {r: np.array([values[r]]) for r in ("sand", "clay", "silt") if r in values}
         if not all(np.isfinite(part[0]) for part in parts.values()):
             return None
-        sand, clay, wrong = fractions_in_percent(
-            parts["sand"], parts["clay"], parts.get("silt"), self.fraction_divisor
-        )
+        classes, wrong = class_of_fractions(parts, self.fraction_divisor)
         if wrong[0]:
-            raise InputError(f"sand, clay and silt do not add up: {dict(values)}")
-        return int(texture_class(sand, clay)[0])
+            given = ", ".join(f"{role} {part[0]:g}" for role, part in parts.items())
+            raise InputError(f"fractions that cannot be: {given}; check soil.unit")
+        return int(classes[0])
 
     def unit_of(self, settings: Settings, role: str) -> str:
         """Unit of an input as the config declares it; empty for codes."""

@@ -20,7 +20,7 @@ from saltrise.engine.plan import Plan
 from saltrise.engine.schedule import on_threads
 from saltrise.engine.survey import BlockScan, first_look, scan
 from saltrise.errors import InputError, RunError
-from saltrise.grid import Window, cell_areas
+from saltrise.grid import cell_areas
 from saltrise.io.align import BlockReader
 from saltrise.io.gdal import require_working_libraries
 from saltrise.io.overlaps import disagreements
@@ -195,20 +195,23 @@ def _scan(
 
 
 def _textures(settings: Settings, inputs: Inputs, found: BlockScan) -> tuple[str, ...]:
-    codes = set(found.codes) | _constant_codes(inputs)
+    codes = set(found.codes) | _constant_codes(settings, inputs)
     classes = settings.soil.codes
     occurring = {name for code, name in classes.items() if code in codes and name != NOT_SOIL}
     return tuple(sorted(occurring))
 
 
-def _constant_codes(inputs: Inputs) -> set[float]:
+def _constant_codes(settings: Settings, inputs: Inputs) -> set[float]:
     """The texture code that numbers in the config give, if they do."""
     given = inputs.constants
     if "texture" in given:
         return {given["texture"]}
     if not {"sand", "clay"} <= given.keys() or "silt" in inputs.rasters:
         return set()
-    number = inputs.texture_number(given)
+    try:
+        number = inputs.texture_number(given)
+    except InputError as error:
+        raise InputError(settings.fault("soil.sand", str(error))) from error
     return set() if number is None else {float(number)}
 
 
@@ -231,7 +234,7 @@ def _soil_faults(
 def make_plan(region: Region, work: Path, run: str) -> Plan:
     """Settle everything the tiles need: in the folder `work`, for the run of that name."""
     settings, grid = region.settings, region.inputs.grid
-    middle = next(iter(grid.blocks(Window(*_middle_block(region), 1, 1))))
+    middle = grid.block_at(grid.height // 2, grid.width // 2)
     nominal = float(cell_areas(grid, middle).flat[0])
     shapes: ZoneShapes = prepare_zones(region.zones.grid_geometries if region.zones else [], grid)
     return Plan(
@@ -247,14 +250,6 @@ def make_plan(region: Region, work: Path, run: str) -> Plan:
         assembly=settings.output.assembly,
         rounded=settings.output.precision == "rounded",
         tile=settings.run.tile,
-    )
-
-
-def _middle_block(region: Region) -> tuple[int, int]:
-    grid = region.inputs.grid
-    return (
-        grid.height // 2 // grid.block * grid.block,
-        grid.width // 2 // grid.block * grid.block,
     )
 
 

@@ -19,7 +19,7 @@ from saltrise.engine.inputs import Inputs
 from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.align import BlockReader, Floats
-from saltrise.physics.texture import fractions_in_percent, texture_class
+from saltrise.physics.texture import class_of_fractions
 
 Each = Callable[[Callable[[Window], "BlockScan"], Iterable[Window]], Iterable["BlockScan"]]
 """Applies a function to windows, in any order and on any threads."""
@@ -191,18 +191,15 @@ def _scan_block(
     wrong = None
     texture = values.get("texture")
     if "sand" in values or "clay" in values or "silt" in values:
-        given = {
+        given: dict[str, NDArray[np.float64]] = {
             role: values[role].astype(np.float64)
             if role in values
             else np.full((block.height, block.width), constants[role])
             for role in ("sand", "clay", "silt")
             if role in values or role in constants
         }
-        sand, clay, bad = fractions_in_percent(
-            given["sand"], given["clay"], given.get("silt"), divisor
-        )
+        texture, bad = class_of_fractions(given, divisor)
         wrong = _sighting(bad, block) if bad.any() else None
-        texture = texture_class(np.where(bad, np.nan, sand), clay)
     codes = {}
     if texture is not None and np.isfinite(texture).any():
         codes = _codes(texture, block)

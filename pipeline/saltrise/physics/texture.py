@@ -8,6 +8,8 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -90,6 +92,33 @@ def fractions_in_percent(
         total = sand + clay + silt
         wrong |= (silt < 0) | (np.abs(np.round(total - 100, _DIGITS)) > _SUM_TOLERANCE)
         return sand * 100 / total, clay * 100 / total, wrong
+
+
+def class_of_fractions(
+    given: Mapping[str, Floats], divisor: float
+) -> tuple[Floats, NDArray[np.bool_]]:
+    """Texture class of each cell from its fractions, and where these cannot be.
+
+    Parameters
+    ----------
+    given : mapping of float64 arrays
+        `sand`, `clay` and perhaps `silt`, in % times `divisor`; other keys are ignored.
+    divisor : float
+        1 for %, 10 for g/kg.
+
+    Returns
+    -------
+    classes : float64 array
+        Numbers in `TEXTURES`; NaN where a fraction is, or where they cannot be.
+    wrong : bool array
+        Cells whose fractions cannot be.
+    """
+    sand, clay, wrong = fractions_in_percent(
+        given["sand"], given["clay"], given.get("silt"), divisor
+    )
+    if wrong.any():
+        sand = np.where(wrong, np.nan, sand)
+    return texture_class(sand, clay), wrong
 
 
 _SUM_TOLERANCE = 2.0
