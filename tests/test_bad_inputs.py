@@ -103,6 +103,11 @@ def test_unmapped_codes_with_counts_and_first_positions(tmp_path: Path) -> None:
     assert "texture.tif, pixel column 6, row 5" in text
 
 
+def test_a_number_for_texture_that_is_not_mapped(tmp_path: Path) -> None:
+    config = regions.small_region(tmp_path, soil={"texture": 99})
+    assert "soil.texture: the code 99 is not mapped in [soil.classes]" in refused(config)
+
+
 def test_codes_that_are_no_whole_numbers(tmp_path: Path) -> None:
     config = regions.small_region(tmp_path)
     regions.write_raster(tmp_path / "texture.tif", np.full((40, 50), 2.5, np.float32))

@@ -82,6 +82,10 @@ def _all_nodata(inputs: Inputs, role: str) -> str:
 
 def _code_faults(settings: Settings, inputs: Inputs, codes: dict[float, Sighting]) -> list[str]:
     known = settings.soil.codes
+    constant = inputs.constants.get("texture")
+    if constant is not None and constant not in known:
+        text = f"the code {constant:g} is not mapped in [soil.classes]; map it to a texture class"
+        return [settings.fault("soil.texture", text)]
     unknown = {code: seen for code, seen in sorted(codes.items()) if code not in known}
     lines = [
         f"{f'{code:g}' if code == int(code) else repr(code)} ({seen.count} cells, first at "
