@@ -1,20 +1,21 @@
 """Rise curves: maximum steady evaporation against depth, and back, as tables.
 
-A profile is solved exactly at the nodes of its table, value and slope; between nodes a cubic
-(Hermite) serves. Nodes lie at 2^k (1 + j/m), so octave and node are the exponent and top mantissa
-bits of the number looked up: a cell costs a look-up and + - x, no exp, log or power, and comes
-out with the same bits on every processor.
+A profile is solved exactly at the nodes of its table, value and slope; see `table` for what a
+cell costs, and `pieces` for columns whose curve is made of several.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.physics.column import Column
+from saltrise.physics.pieces import Piece, marched
 from saltrise.physics.profile import Profile
+from saltrise.physics.table import Solved, Table, nodes_of, tabulate
 
 Floats = NDArray[np.float64]
 Indices = NDArray[np.int32]
@@ -25,52 +26,49 @@ SURFACE_DEPTH_M = 0.001
 DEEPEST_M = 30.0
 """Deepest water table that is solved; beyond it the curve's end slope goes on."""
 
-_DEPTH_OCTAVES = (-10, 12)
+_DEPTH_OCTAVES, _COLUMN_OCTAVES = (-10, 12), (-10, 6)
 _DEPTH_BITS, _STEEP_BITS = 5, 6
-_FLUX_BITS = 4
-_PLUNGE = 0.1
+_FLUX_BITS, _COLUMN_FLUX_BITS = 4, 5
 _LEAST_OCTAVE = -100
 """The flux table ends at 2^-100 (1e-30) mm/day, whatever a soil lifts from 30 m."""
 
-_MANTISSA = 52
-_ONE = np.int64(1023 << _MANTISSA)
+_COLUMN_SPAN, _COLUMN_LEAST = 12, -50
+"""Octaves of flux below what each soil alone lifts from 30 m that columns are marched at; a flux
+of 2^-50 (1e-15) mm/day counts as none where a finite suction ends the curve."""
 
 
 @dataclass(frozen=True)
-class Table:
-    """Cubics of all profiles over the same nodes.
+class Pieces:
+    """How rows make up the curves of columns: arrays of (profiles x most pieces of any).
 
-    `coefficients` is (4, profiles x intervals), constant first, in the interval's own position
-    from 0 to 1; numbers from 2^`octaves[0]` to below 2^`octaves[1]`, 2^`bits` intervals an octave.
+    See `pieces.Piece`; pieces that a profile lacks start nowhere.
     """
 
-    octaves: tuple[int, int]
-    bits: int
-    coefficients: Floats
+    count: int
+    start_m: Floats
+    flux: Floats
+    shift_m: Floats
+    sign: Floats
+    evaporation: Indices
+    depth: Indices
 
-    @property
-    def intervals(self) -> int:
-        """Intervals of one profile."""
-        return (self.octaves[1] - self.octaves[0]) << self.bits
+    def at_depth(self, profile: Indices, depth_m: Floats) -> tuple[Indices, Floats]:
+        """Row of the evaporation table and argument for cells."""
+        place = profile * np.int32(self.count)
+        first = place
+        for k in range(1, self.count):
+            place = place + (depth_m >= self.start_m.take(first + k))
+        argument = depth_m * self.sign.take(place)
+        argument += self.shift_m.take(place)
+        return self.evaporation.take(place), argument
 
-    def look_up(self, profile: Indices, value: Floats) -> Floats:
-        """Interpolate; numbers beyond the table count as its ends, NaN as its low end."""
-        low, high = (2.0**octave for octave in self.octaves)
-        inside = np.where(value > low, value, low)
-        np.minimum(inside, np.nextafter(high, 0.0), out=inside)
-        bits = inside.view(np.int64)
-        index = bits >> np.int64(_MANTISSA - self.bits)
-        index -= np.int64((self.octaves[0] + 1023) << self.bits)
-        index += np.maximum(profile, 0).astype(np.int64) * self.intervals
-        bits &= np.int64((1 << (_MANTISSA - self.bits)) - 1)
-        bits <<= np.int64(self.bits)
-        bits |= _ONE
-        inside -= 1.0
-        result: Floats = self.coefficients[3].take(index)
-        for k in (2, 1, 0):
-            result *= inside
-            result += self.coefficients[k].take(index)
-        return result
+    def at_flux(self, profile: Indices, flux: Floats) -> Indices:
+        """Row of the depth table for cells."""
+        place = profile * np.int32(self.count)
+        first = place
+        for k in range(1, self.count):
+            place = place + (flux < self.flux.take(first + k))
+        return self.depth.take(place)
 
 
 @dataclass(frozen=True)
@@ -81,6 +79,8 @@ class RiseCurves:
     depth: Table
     limits: Floats
     """Flux [mm/day] at `SURFACE_DEPTH_M` and at `DEEPEST_M`, a row a profile."""
+    pieces: Pieces | None = None
+    """How rows make up curves; without, row and profile are the same."""
 
     def max_evaporation(self, profile: Indices, depth_m: Floats) -> Floats:
         """Maximum steady evaporation [mm/day] of cells.
@@ -99,7 +99,10 @@ class RiseCurves:
             Within a relative 1e-5 of exact from 0.001 to 30 m (6e-5 under the exponential law,
             where the flux exceeds 1e-6 mm/day); NaN where masked or NaN.
         """
-        flux = self.evaporation.look_up(profile, np.maximum(depth_m, SURFACE_DEPTH_M))
+        row, depth = np.maximum(profile, 0), np.maximum(depth_m, SURFACE_DEPTH_M)
+        if self.pieces is not None:
+            row, depth = self.pieces.at_depth(row, depth)
+        flux = self.evaporation.look_up(row, depth)
         flux[(profile < 0) | np.isnan(depth_m)] = np.nan
         return flux
 
@@ -119,8 +122,10 @@ class RiseCurves:
             Within a relative 1e-5 of exact; 0.001 for more than the profile lifts from there, 30
             for less than it lifts from 30 m; NaN where masked or NaN.
         """
-        depth = self.depth.look_up(profile, flux_mm_per_day)
-        most, least = (self.limits[:, k].take(np.maximum(profile, 0)) for k in (0, 1))
+        known = np.maximum(profile, 0)
+        row = known if self.pieces is None else self.pieces.at_flux(known, flux_mm_per_day)
+        depth = self.depth.look_up(row, flux_mm_per_day)
+        most, least = (self.limits[:, k].take(known) for k in (0, 1))
         depth[flux_mm_per_day <= least] = DEEPEST_M
         depth[flux_mm_per_day >= most] = SURFACE_DEPTH_M
         np.clip(depth, SURFACE_DEPTH_M, DEEPEST_M, out=depth)
@@ -128,67 +133,106 @@ class RiseCurves:
         return depth
 
 
-def build_curves(profiles: Sequence[Profile]) -> RiseCurves:
+def build_curves(profiles: Sequence[Profile | Column]) -> RiseCurves:
     """Solve profiles at the nodes of their tables.
 
     Parameters
     ----------
-    profiles : sequence of Profile
-        At least one.
+    profiles : sequence of Profile or Column
+        At least one; all of one kind.
 
     Raises
     ------
     ArithmeticError
         A profile cannot be solved.
     """
-    ends = np.array([SURFACE_DEPTH_M, DEEPEST_M])
-    limits = np.array([profile.evaporation(ends)[0] for profile in profiles])
-    least = max(float(limits[:, 1].min()), 2.0**_LEAST_OCTAVE)
-    octaves = (
-        int(np.floor(np.log2(least))),
-        max(int(np.floor(np.log2(limits[:, 0].max()))) + 1, _LEAST_OCTAVE + 1),
-    )
-    bits = _STEEP_BITS if any(profile.steep for profile in profiles) else _DEPTH_BITS
+    columns = [profile for profile in profiles if isinstance(profile, Column)]
+    if columns:
+        return _column_curves(columns)
+    soils = [profile for profile in profiles if not isinstance(profile, Column)]
+    limits = _limits(soils)
+    octaves = _flux_octaves(limits)
+    bits = _STEEP_BITS if any(soil.steep for soil in soils) else _DEPTH_BITS
     return RiseCurves(
-        _table(_DEPTH_OCTAVES, bits, [_with_end_slope(p) for p in profiles]),
-        _table(octaves, _FLUX_BITS, [profile.depth for profile in profiles]),
+        tabulate(_DEPTH_OCTAVES, bits, [_with_end_slope(soil.evaporation) for soil in soils]),
+        tabulate(octaves, _FLUX_BITS, [soil.depth for soil in soils]),
         limits,
     )
 
 
-_Solved = Callable[[Floats], tuple[Floats, Floats]]
+def _limits(soils: Sequence[Profile]) -> Floats:
+    ends = np.array([SURFACE_DEPTH_M, DEEPEST_M])
+    return np.array([soil.evaporation(ends)[0] for soil in soils])
 
 
-def _with_end_slope(profile: Profile) -> _Solved:
-    """A profile's evaporation, going on beyond `DEEPEST_M` as the power law of its slope there."""
+def _flux_octaves(limits: Floats) -> tuple[int, int]:
+    least = max(float(limits[:, 1].min()), 2.0**_LEAST_OCTAVE)
+    most = int(np.floor(np.log2(limits[:, 0].max()))) + 1
+    return int(np.floor(np.log2(least))), max(most, _LEAST_OCTAVE + 1)
+
+
+def _column_curves(columns: Sequence[Column]) -> RiseCurves:
+    """Curves of layered columns and of those with a finite suction at the top."""
+    soils = list(dict.fromkeys(soil for column in columns for soil in column.layers))
+    low, high = _flux_octaves(_limits(soils))
+    low -= _COLUMN_SPAN
+    if any(column.suction_m < DEEPEST_M for column in columns):
+        low = min(low, _COLUMN_LEAST)
+    octaves = (max(low, _LEAST_OCTAVE), high + 2)
+    made = marched(columns, nodes_of(octaves, _COLUMN_FLUX_BITS), DEEPEST_M)
+    rows = {piece.key: piece for pieces in made for piece in pieces}
+    number = {key: row for row, key in enumerate(rows)}
+    evaporation = [_with_end_slope(p.evaporation, p.shift_m, p.sign) for p in rows.values()]
+    table = tabulate(_COLUMN_OCTAVES, _STEEP_BITS, evaporation)
+    return RiseCurves(
+        table,
+        tabulate(octaves, _COLUMN_FLUX_BITS, [piece.depth for piece in rows.values()]),
+        np.array([[_flux(pieces, SURFACE_DEPTH_M), _flux(pieces, DEEPEST_M)] for pieces in made]),
+        _arranged(made, number),
+    )
+
+
+def _flux(pieces: list[Piece], depth_m: float) -> float:
+    """Flux of a column at a depth, exactly as its last piece that reaches there has it."""
+    piece = [piece for piece in pieces if piece.start_m <= depth_m][-1]
+    at = piece.shift_m + piece.sign * depth_m
+    return float(piece.evaporation(np.array([at]))[0][0])
+
+
+def _arranged(made: list[list[Piece]], number: dict[object, int]) -> Pieces:
+    count = max(len(pieces) for pieces in made)
+
+    def spread(values: list[list[float]], missing: float) -> Floats:
+        return np.array([row + [missing] * (count - len(row)) for row in values]).ravel()
+
+    rows = spread([[float(number[p.key]) for p in pieces] for pieces in made], 0.0)
+    return Pieces(
+        count,
+        spread([[p.start_m for p in pieces] for pieces in made], np.inf),
+        spread([[p.flux for p in pieces] for pieces in made], -np.inf),
+        spread([[p.shift_m for p in pieces] for pieces in made], 0.0),
+        spread([[p.sign for p in pieces] for pieces in made], 1.0),
+        rows.astype(np.int32),
+        rows.astype(np.int32),
+    )
+
+
+def _with_end_slope(solved: Solved, shift_m: float = 0.0, sign: float = 1.0) -> Solved:
+    """Evaporation that goes on beyond `DEEPEST_M` as the power law of its slope there."""
+    if sign < 0.0:
+        return solved
+    deepest = shift_m + DEEPEST_M
 
     def evaporation(depth: Floats) -> tuple[Floats, Floats]:
-        flux, slope = profile.evaporation(np.minimum(depth, DEEPEST_M))
-        beyond = depth > DEEPEST_M
+        flux, slope = solved(np.minimum(depth, deepest))
+        beyond = depth > deepest
         if flux[-1] <= 0.0:
             flux[beyond] = slope[beyond] = 0.0
             return flux, slope
         power = slope[-1] * DEEPEST_M / flux[-1]
-        flux[beyond] *= (depth[beyond] / DEEPEST_M) ** power
-        slope[beyond] = power * flux[beyond] / depth[beyond]
+        far = depth[beyond] - shift_m
+        flux[beyond] *= (far / DEEPEST_M) ** power
+        slope[beyond] = power * flux[beyond] / far
         return flux, slope
 
     return evaporation
-
-
-def _table(octaves: tuple[int, int], bits: int, solved: Sequence[_Solved]) -> Table:
-    per_octave = 1 << bits
-    steps = np.arange((octaves[1] - octaves[0]) * per_octave + 1)
-    octave, step = np.divmod(steps, per_octave)
-    nodes = np.ldexp(1.0 + step / per_octave, octave + octaves[0])
-    width = np.diff(nodes)
-    columns = []
-    for solve in solved:
-        value, slope = solve(nodes)
-        rise, left, right = np.diff(value), slope[:-1] * width, slope[1:] * width
-        cubic = np.stack((value[:-1], left, 3 * rise - 2 * left - right, left + right - 2 * rise))
-        # Where values fall away within one interval, a cubic would swing below zero.
-        plunge = value[1:] < _PLUNGE * value[:-1]
-        cubic[1, plunge], cubic[2:, plunge] = rise[plunge], 0.0
-        columns.append(cubic)
-    return Table(octaves, bits, np.ascontiguousarray(np.hstack(columns)))

@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from saltrise.physics import laws, van_genuchten
+from saltrise.physics.heights import ExponentialHeights, Heights, QuadratureHeights
 
 Floats = NDArray[np.float64]
 
@@ -23,6 +24,10 @@ class Profile(Protocol):
     @property
     def steep(self) -> bool:
         """Whether evaporation falls off faster than any power of depth (needs denser nodes)."""
+        ...  # pragma: no cover
+
+    def heights(self, flux_mm_per_day: Floats) -> Heights:
+        """Heights of suctions above the water table under fluxes [mm/day] > 0."""
         ...  # pragma: no cover
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
@@ -47,6 +52,19 @@ class Campbell:
     ks_mm_per_day: float
 
     steep = False
+
+    @property
+    def anchor_m(self) -> float:
+        """See `heights.Conductor`."""
+        return self.air_entry_m
+
+    def conductivity(self, suction_m: Floats) -> Floats:
+        """See `heights.Conductor`; by `laws.conductivity`."""
+        return laws.conductivity(suction_m, *self._parameters)
+
+    def heights(self, flux_mm_per_day: Floats) -> Heights:
+        """See `Profile.heights`."""
+        return QuadratureHeights(self, flux_mm_per_day)
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """See `Profile.evaporation`; by `laws.max_evaporation`."""
@@ -73,6 +91,20 @@ class VanGenuchten:
 
     steep = False
 
+    @property
+    def anchor_m(self) -> float:
+        """See `heights.Conductor`."""
+        return 1.0 / self.alpha_per_m
+
+    def conductivity(self, suction_m: Floats) -> Floats:
+        """See `heights.Conductor`; by `van_genuchten.relative_conductivity`."""
+        relative = van_genuchten.relative_conductivity(suction_m, self.alpha_per_m, self.n)
+        return self.ks_mm_per_day * relative
+
+    def heights(self, flux_mm_per_day: Floats) -> Heights:
+        """See `Profile.heights`."""
+        return QuadratureHeights(self, flux_mm_per_day)
+
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """See `Profile.evaporation`; by `van_genuchten.max_evaporation`."""
         return van_genuchten.max_evaporation(depth_m, self.alpha_per_m, self.n, self.ks_mm_per_day)
@@ -93,6 +125,20 @@ class GardnerPower:
     n: float
 
     steep = False
+
+    @property
+    def anchor_m(self) -> float:
+        """See `heights.Conductor`."""
+        return self.c ** (1.0 / self.n) if self.c > 0.0 else 1.0
+
+    def conductivity(self, suction_m: Floats) -> Floats:
+        """See `heights.Conductor`."""
+        with np.errstate(over="ignore"):
+            return self.a / (suction_m**self.n + self.c)
+
+    def heights(self, flux_mm_per_day: Floats) -> Heights:
+        """See `Profile.heights`."""
+        return QuadratureHeights(self, flux_mm_per_day)
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """See `Profile.evaporation`; by `laws.gardner_max_evaporation`."""
@@ -115,6 +161,10 @@ class GardnerExponential:
     alpha_per_m: float
 
     steep = True
+
+    def heights(self, flux_mm_per_day: Floats) -> Heights:
+        """See `Profile.heights`."""
+        return ExponentialHeights(self.ks_mm_per_day, self.alpha_per_m, flux_mm_per_day)
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """See `Profile.evaporation`; by `laws.exponential_max_evaporation`."""

@@ -1,0 +1,136 @@
+"""Layered soil columns, and columns whose top stops at a finite suction.
+
+The column is marched down from its top at a fixed flux: suction is continuous from layer to layer
+(Willis 1960, Soil Science Society of America Proceedings 24:239-242, in concept), so the depth
+that lifts a flux is explicit whatever the layers are. The order of layers matters, and a layered
+column can lift more or less than either of its soils alone.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from saltrise.physics.heights import Heights
+from saltrise.physics.profile import Profile
+
+Floats = NDArray[np.float64]
+
+_LEAST_OCTAVE, _GREATEST_OCTAVE = -100, 60
+_NEWTON_LIMIT, _NEWTON_STEP, _ROUNDING = 60, 1e-11, 1e-14
+
+
+@dataclass(frozen=True)
+class Column:
+    """Soils from the top down to the water table, wherever it stands.
+
+    `bottoms_m` [m below the column's top] end every layer but the last. `suction_m` [m] is the
+    suction at the top: infinite for a bare surface that dries without limit.
+    """
+
+    layers: tuple[Profile, ...]
+    bottoms_m: tuple[float, ...] = ()
+    suction_m: float = math.inf
+
+    def __post_init__(self) -> None:
+        edges = (0.0, *self.bottoms_m)
+        if len(edges) != len(self.layers) or any(np.diff(edges) <= 0) or self.suction_m <= 0:
+            raise ValueError(f"a column needs one bottom less than layers, increasing: {self}")
+
+    @property
+    def steep(self) -> bool:
+        """See `Profile.steep`."""
+        return any(soil.steep for soil in self.layers)
+
+    def depth(self, flux_mm_per_day: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.depth`; by marching down."""
+        flux = np.atleast_1d(np.asarray(flux_mm_per_day, dtype=np.float64))
+        march = from_top(flux, self.suction_m)
+        depth, slope = np.full(flux.shape, np.nan), np.full(flux.shape, np.nan)
+        for soil, bottom in zip(self.layers, (*self.bottoms_m, math.inf), strict=True):
+            heights = soil.heights(flux)
+            found, tilt = water_table(heights, march)
+            here = np.isnan(depth) & (found <= bottom)
+            depth[here], slope[here] = found[here], tilt[here]
+            if here.all() or bottom == math.inf:
+                break
+            march = through(heights, march, bottom)
+        return depth, slope
+
+    def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
+        """See `Profile.evaporation`; Newton's method on log flux, bracketed.
+
+        Nothing rises where the water table lies deeper than the suction at the top reaches.
+
+        Raises
+        ------
+        ArithmeticError
+            Newton's method did not settle.
+        """
+        wanted = np.atleast_1d(np.asarray(depth_m, dtype=np.float64))
+        grid = np.ldexp(1.0, np.arange(_LEAST_OCTAVE, _GREATEST_OCTAVE))
+        known = self.depth(grid)[0]
+        lifts = wanted < self.suction_m
+        target = np.where(lifts, wanted, known[grid.size // 2])
+        place = np.clip(np.searchsorted(-known, -target), 1, grid.size - 1)
+        low, high = np.log(grid[place - 1]), np.log(grid[place])
+        log = (low + high) / 2
+        for _ in range(_NEWTON_LIMIT):
+            found, slope = self.depth(np.exp(log))
+            deeper = found > target
+            low, high = np.where(deeper, log, low), np.where(deeper, high, log)
+            moved = log - (found - target) / (np.exp(log) * slope)
+            # The slope jumps at interfaces: a step out of the bracket is halved instead.
+            moved = np.where((moved >= low) & (moved <= high), moved, (low + high) / 2)
+            settled = np.abs(moved - log) < _NEWTON_STEP
+            settled |= np.abs(found - target) < _ROUNDING * target
+            log = moved
+            if settled.all():
+                break
+        else:
+            raise ArithmeticError(
+                f"layered column: no flux found for depth {target[~settled][0]!r} m of {self}"
+            )
+        flux = np.exp(log)
+        return np.where(lifts, flux, 0.0), np.where(lifts, 1.0 / slope, 0.0)
+
+
+@dataclass(frozen=True)
+class March:
+    """Where a march stands: top of the next layer [m], suction there [m] and its slope."""
+
+    top_m: float
+    suction_m: Floats
+    slope: Floats
+
+
+def from_top(flux_mm_per_day: Floats, suction_m: float) -> March:
+    """The top of a column that dries to a suction [m], infinite where it has no limit."""
+    return March(0.0, np.full(flux_mm_per_day.shape, suction_m), np.zeros(flux_mm_per_day.shape))
+
+
+def through(heights: Heights, march: March, bottom_m: float) -> March:
+    """March through one layer down to its bottom [m below the column's top].
+
+    From F(top) - F(bottom) = thickness, the slope of suction against flux follows by implicit
+    differentiation.
+    """
+    suction = heights.below(march.suction_m, bottom_m - march.top_m)
+    slope = _carried(heights, march) - heights.at(suction)[1]
+    return March(bottom_m, suction, slope / heights.share(suction))
+
+
+def water_table(heights: Heights, march: March) -> tuple[Floats, Floats]:
+    """Depth [m] of the water table if the layer went on, and its slope against flux."""
+    return march.top_m + heights.at(march.suction_m)[0], _carried(heights, march)
+
+
+def _carried(heights: Heights, march: March) -> Floats:
+    """Slope of F(h(E); E) at the top of a layer."""
+    own = heights.at(march.suction_m)[1]
+    finite = np.isfinite(march.suction_m)
+    moved = np.where(finite, march.suction_m, 1.0)
+    return own + np.where(finite, heights.share(moved) * march.slope, 0.0)
