@@ -17,7 +17,8 @@ import reference
 import regions
 import saltrise
 from saltrise.errors import InputError
-from saltrise.explain import Explainer, describe
+from saltrise.explain import Explainer
+from saltrise.explain_text import describe
 
 LAYERS = ("max_evaporation", "evaporation", "salt_load", "critical_depth", "depth_margin")
 

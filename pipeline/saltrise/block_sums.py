@@ -36,11 +36,11 @@ class BlockSums:
     region is all slots together. What zones cover in part is weighed apart.
     """
 
-    def __init__(self, cover: BlockCover, unit_m2: float, others: int = 0) -> None:
+    def __init__(self, cover: BlockCover, unit_m2: float, extras: int = 0) -> None:
         self._cover, self._unit = cover, unit_m2
         slots = len(cover.zones) + 1
-        self._whole = np.zeros((slots, COLUMNS + others))
-        self._part = np.zeros((slots, COLUMNS + others))
+        self._whole = np.zeros((slots, COLUMNS + extras))
+        self._part = np.zeros((slots, COLUMNS + extras))
         self._whole_bins = [_Bins(slots) for _ in QUANTITIES]
         self._part_bins = [_Bins(slots) for _ in QUANTITIES]
 
@@ -135,7 +135,7 @@ class _Cells:
     surface: NDArray[np.bool_]
     summed: tuple[Floats, ...]
     load: Floats
-    others: tuple[Floats, ...]
+    extras: tuple[Floats, ...]
     quantities: tuple[Floats, ...]
 
     @classmethod
@@ -158,16 +158,16 @@ class _Cells:
                 values.depth_margin,
             ),
             values.salt_load,
-            values.other_loads,
+            values.extras,
             (values.salt_load, values.critical_depth),
         )
 
     def weighed(self, dry: Floats, area: Floats) -> Iterator[Floats]:
-        """Values of `SUMS`, in its order, and other loads, each times its weight [m2]."""
+        """Values of `SUMS`, in its order, and extras, each times its weight [m2]."""
         for values in self.summed:
             yield dry * values
         yield self._at_surface(area)
-        for values in self.others:
+        for values in self.extras:
             yield dry * values
 
     def _at_surface(self, area: Floats) -> Floats:

@@ -184,7 +184,8 @@ def explain(
     as_json: bool,
 ) -> None:
     """Show one cell's whole calculation with units and sources."""
-    from saltrise.explain import Explainer, describe
+    from saltrise.explain import Explainer
+    from saltrise.explain_text import describe
     from saltrise.io.tables import read_points
 
     if (at is None) == (points is None):

@@ -21,7 +21,8 @@ _MASK_REASONS = {
     "no_texture": "no texture",
     "not_soil": "mapped to not soil",
     "no_salinity": "no groundwater salinity",
-    "no_potential_evaporation": "no potential evaporation",
+    "no_potential_evaporation": "no potential evaporation, rain or irrigation",
+    "no_root_depth": "no depth of the root zone",
 }
 
 
@@ -213,7 +214,10 @@ def print_survey(region: Region, doubts: list[str], estimate: Estimate, output: 
     print(f"  every input has a value in {region.found.complete:,} cells")
     _print_codes(region)
     names = ", ".join(soils.name for soils in region.sets)
-    print(f"Soil profiles: {len(region.textures)} of {names}")
+    if region.settings.soil.method == "classes":
+        print(f"Soil profiles: {len(region.soils.stacks)} of {names}")
+    else:
+        print(f"Soil from fractions, cell by cell: {region.settings.soil.method}")
     if region.zones is not None:
         print(f"Zones: {len(region.zones.ids)}")
     print(
@@ -236,9 +240,10 @@ def print_files(region: Region) -> None:
 
 
 def _print_codes(region: Region) -> None:
-    for code, seen in sorted(region.found.codes.items()):
+    for (end, code), seen in sorted(region.found.codes.items()):
         name = region.settings.soil.codes.get(int(code), "?")
-        print(f"  code {code:g} = {name}: {seen.count:,} cells")
+        layer = f"layer {region.inputs.layers.index(end) + 1}: " if end else ""
+        print(f"  {layer}code {code:g} = {name}: {seen.count:,} cells")
 
 
 _PARAMETERS = {

@@ -2,30 +2,34 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from saltrise.engine.config import read_settings
-from saltrise.engine.inputs import ROLES
+from saltrise.engine.inputs import key_of
 from saltrise.engine.region import Opened, Region, make_recipe, open_region
-from saltrise.engine.survey import BlockScan
+from saltrise.engine.soils import occurring, profile_of
+from saltrise.engine.survey import BlockScan, Sighting
 from saltrise.errors import InputError
 from saltrise.io.align import BlockReader
 from saltrise.io.encode import store
 from saltrise.io.regrid import crs_text, point_in
-from saltrise.layers import LAYERS
+from saltrise.layers import BASIC
+from saltrise.physics.column import Column
 from saltrise.physics.curve import SURFACE_DEPTH_M
 from saltrise.physics.laws import closed_form_evaporation, gardner_limiting_rate
 from saltrise.physics.profile import Campbell, GardnerPower, Profile
-from saltrise.physics.soils import NOT_SOIL, SoilRow, soil_for
-from saltrise.recipe import CellResult, compute_cells, converted
+from saltrise.physics.soils import NOT_SOIL, TEXTURES, soil_for
+from saltrise.physics.stacks import stack_keys
+from saltrise.recipe import CellResult, Recipe, compute_cells, converted
 from saltrise.settings import Settings
-from saltrise.units import DAYS_PER_YEAR
 
 Answer = dict[str, Any]
+Array = NDArray[np.float64]
 
 
 class Explainer:
@@ -95,7 +99,7 @@ class Explainer:
 
     def _input(self, role: str, value: float, row: int, col: int) -> Answer:
         found: Answer = {
-            "key": ROLES[role],
+            "key": key_of(role),
             "value": value if np.isfinite(value) else None,
             "unit": self._opened.inputs.unit_of(self._settings, role),
         }
@@ -109,72 +113,126 @@ class Explainer:
         return found
 
     def _answer(self, values: dict[str, float]) -> Answer:
-        texture = self._texture(values)
-        missing = [ROLES[role] for role, value in values.items() if not np.isfinite(value)]
-        if missing or texture == NOT_SOIL:
-            reason = f"no value in {', '.join(missing)}" if missing else f'mapped to "{NOT_SOIL}"'
-            return {"texture": texture, "masked": reason}
-        assert texture is not None
-        row = soil_for(self._opened.sets[0], texture)
-        region = self._region(texture)
+        missing = [key_of(role) for role, value in values.items() if not np.isfinite(value)]
+        if missing:
+            return {"masked": f"no value in {', '.join(missing)}"}
+        names = [self._texture(values, end) for end in self._opened.inputs.layers]
+        if NOT_SOIL in names:
+            return {"texture": ", ".join(names), "masked": f'mapped to "{NOT_SOIL}"'}
+        region = self._region(names, values.get("root_depth", 0.0))
         recipe = make_recipe(region)
         cell = {role: np.array([[value]]) for role, value in values.items()}
         result = compute_cells(recipe, cell, (1, 1))
-        depth_m, tds, demand = (float(v[0, 0]) for v in converted(recipe, cell))
-        return {
-            "texture": texture,
-            "parameter_set": region.sets[0].name,
-            "conductivity": region.sets[0].conductivity,
-            "parameters": vars(row.profile) | {"source": row.source},
-            "depth_m": depth_m,
-            "tds_g_per_l": tds,
-            "demand_mm_per_day": demand,
-            "target_load_t_per_ha_per_year": self._settings.hazard.target_load,
-            **_exact(row, depth_m),
-            "limited_by": _limit(result),
-            "days_per_year": DAYS_PER_YEAR,
-            **self._stored(result),
-            "hazard_class_name": region.scheme.names[int(result.hazard_class[0, 0]) - 1],
-            "hazard_scheme": region.scheme.title,
-        }
-
-    def _texture(self, values: dict[str, float]) -> str | None:
-        """Texture class of the cell; None where the inputs that decide it have no value."""
-        codes = self._settings.soil.codes
-        if "texture" in values:
-            code = values["texture"]
-            if not np.isfinite(code):
-                return None
-            if code not in codes:
-                raise InputError(
-                    self._settings.fault("soil.classes", f"the cell's code {code:g} is not mapped")
-                )
-            return codes[int(code)]
-        number = self._opened.inputs.texture_number(values)
-        return None if number is None else codes[number]
-
-    def _region(self, texture: str) -> Region:
-        """A region in which only this class occurs; its curve has the same nodes as in a run."""
-        opened = self._opened
-        nothing = BlockScan({}, {}, 1)
-        return Region(
-            self._settings, opened.inputs, nothing, opened.sets, (texture,), opened.scheme, None, ()
+        return (
+            self._soil(region, names)
+            | self._water(region, recipe, cell)
+            | {
+                "target_load_t_per_ha_per_year": self._settings.hazard.target_load,
+                "limited_by": _limit(result),
+                "days_per_year": recipe.days,
+                **self._stored(result),
+                "hazard_class_name": region.scheme.names[int(result.hazard_class[0, 0]) - 1],
+                "hazard_scheme": region.scheme.title,
+            }
         )
+
+    def _texture(self, values: dict[str, float], end: str) -> str:
+        """Texture class of a layer of the cell."""
+        codes = self._settings.soil.codes
+        if f"texture{end}" not in values:
+            return codes[int(self._opened.inputs.texture_number(values, end))]
+        code = values[f"texture{end}"]
+        if code not in codes:
+            raise InputError(
+                self._settings.fault("soil.classes", f"the cell's code {code:g} is not mapped")
+            )
+        return codes[int(code)]
+
+    def _region(self, names: Sequence[str], root_m: float) -> Region:
+        """A region in which only this cell's soils occur; its curve has the nodes of a run's."""
+        opened, inputs = self._opened, self._opened.inputs
+        numbers = [np.array([TEXTURES.index(name)], dtype=np.int64) for name in names]
+        seen = BlockScan({}, {}, 1, {}, {(int(stack_keys(numbers)[0]), root_m): 1})
+        if not inputs.stacked:
+            code = float(next(c for c, name in self._settings.soil.codes.items() if name in names))
+            seen = BlockScan({}, {("", code): Sighting(1, 0, 0)}, 1)
+        soils = occurring(self._settings, inputs, seen)
+        return Region(self._settings, inputs, seen, opened.sets, soils, opened.scheme, None, ())
+
+    def _soil(self, region: Region, names: Sequence[str]) -> Answer:
+        soils, stack = region.sets[0], region.soils.stacks[0]
+        edges = (0.0, *self._settings.soil.bottoms)
+        rows = [soil_for(soils, name) for name in names]
+        found: Answer = {
+            "texture": ", ".join(names),
+            "parameter_set": soils.name,
+            "conductivity": soils.conductivity,
+            "parameters": vars(rows[0].profile) | {"source": rows[0].source},
+        }
+        if len(names) > 1:
+            found["soil_layers"] = [
+                {"texture": row.texture, "top_m": top, **vars(row.profile), "source": row.source}
+                for row, top in zip(rows, edges, strict=True)
+            ]
+            found["rise_through"] = list(stack.soils)
+        return found
+
+    def _water(self, region: Region, recipe: Recipe, cell: dict[str, Array]) -> Answer:
+        """Depth, salinity and demand, of the year or of each season, and what the soil lifts."""
+        root = float(cell["root_depth"][0, 0]) if "root_depth" in cell else 0.0
+        profile = profile_of(self._settings, region.sets[0], region.soils.stacks[0])
+        seasons = []
+        for season, water in zip(recipe.seasons, converted(recipe, cell), strict=True):
+            depth = float(water.depth[0, 0])
+            found: Answer = {
+                "name": season.name,
+                "days": season.days,
+                "depth_m": depth,
+                "tds_g_per_l": float(water.tds[0, 0]),
+                "demand_mm": float(water.demand[0, 0]),
+                "percolation_mm": float(water.percolation[0, 0]),
+                **_exact(profile, depth - root),
+            }
+            lifted = found["max_evaporation_exact"] * season.days
+            surface = depth <= SURFACE_DEPTH_M
+            found["evaporation_mm"] = (
+                found["demand_mm"] if surface else min(lifted, found["demand_mm"])
+            )
+            seasons.append(found)
+        if recipe.seasonal:
+            zone = {"root_depth_m": root, "root_suction_m": self._suction}
+            return {"seasons": seasons} | (zone if self._settings.root_zone else {})
+        year = seasons[0]
+        names = ("depth_m", "tds_g_per_l", *_EXACT)
+        shown = {name: year[name] for name in names}
+        shown["demand_mm_per_day"] = year["demand_mm"] / year["days"]
+        if self._settings.root_zone:
+            shown |= {"root_depth_m": root, "root_suction_m": self._suction}
+        return shown
+
+    @property
+    def _suction(self) -> float | None:
+        zone = self._settings.root_zone
+        return zone.suction if zone is not None else None
 
     def _stored(self, result: CellResult) -> Answer:
         rounded = self._settings.output.precision == "rounded"
-        layers: Answer = {}
-        for name, values in result.values.items():
-            if not LAYERS[name].needs:
-                layers[name] = float(store(values, result.valid, rounded=rounded)[0, 0])
+        layers: Answer = {
+            name: float(store(values, result.valid, rounded=rounded)[0, 0])
+            for name, values in result.values.items()
+            if name in BASIC or name in self._settings.layers
+        }
         return layers | {"hazard_class": int(result.hazard_class[0, 0])}
 
 
-def _exact(row: SoilRow, depth_m: float) -> Answer:
+_EXACT = ("max_evaporation_exact", "max_evaporation_closed_form", "closed_form_over_exact")
+
+
+def _exact(profile: Profile | Column, rise_m: float) -> Answer:
     """Maximum evaporation by the full equation without a curve, and by the closed form."""
-    at = max(depth_m, SURFACE_DEPTH_M)
-    exact = float(row.profile.evaporation(np.array([at]))[0][0])
-    closed = _closed_form(row.profile, at)
+    at = max(rise_m, SURFACE_DEPTH_M)
+    exact = float(profile.evaporation(np.array([at]))[0][0])
+    closed = _closed_form(profile, at)
     return {
         "max_evaporation_exact": exact,
         "max_evaporation_closed_form": closed,
@@ -182,8 +240,10 @@ def _exact(row: SoilRow, depth_m: float) -> Answer:
     }
 
 
-def _closed_form(profile: Profile, depth_m: float) -> float | None:
+def _closed_form(profile: Profile | Column, depth_m: float) -> float | None:
     """Deep-water limit of a law, where it has one."""
+    if isinstance(profile, Column) and len(profile.layers) == 1:
+        profile = profile.layers[0]
     if isinstance(profile, Campbell):
         return float(
             closed_form_evaporation(depth_m, profile.air_entry_m, profile.b, profile.ks_mm_per_day)
@@ -198,40 +258,3 @@ def _limit(result: CellResult) -> str:
     if result.counts["at_surface"]:
         return "water at surface: the demand evaporates"
     return "evaporative demand" if result.counts["demand_limited"] else "soil"
-
-
-def describe(answer: Answer) -> str:
-    """An answer of `Explainer.at` as lines a person checks by hand, with units and sources."""
-    lines = [f"{answer['title']}: cell in column {answer['column']}, row {answer['row']}"]
-    for found in answer["inputs"].values():
-        value = "no value" if found["value"] is None else f"{found['value']:.9g} {found['unit']}"
-        where = found["method"]
-        if "file" in found:
-            where = "{file}, pixel column {pixel_column}, row {pixel_row}".format(**found)
-        lines.append(f"  {found['key']}: {value} ({where})")
-    if "masked" in answer:
-        return "\n".join([*lines, f"No answer: {answer['masked']}"])
-    numbers = {k: v for k, v in answer["parameters"].items() if k != "source"}
-    shown = ", ".join(f"{name} {number:.6g}" for name, number in numbers.items())
-    closed = ""
-    if answer["max_evaporation_closed_form"] is not None:
-        closed = (
-            "  closed form, the deep-water limit: {max_evaporation_closed_form:.7g} mm/day, "
-            "{closed_form_over_exact:.4g} times that\n"
-        )
-    text = (
-        "Soil: {texture}, set {parameter_set}, conductivity {conductivity}\n"
-        "  {shown}; {parameters[source]}\n"
-        "Depth to water table L = {depth_m:.6g} m\n"
-        "Maximum steady evaporation E: L = integral from 0 to infinity of dh / (1 + E/K(h))\n"
-        "  full equation: {max_evaporation_exact:.7g} mm/day\n"
-        + closed
-        + "  as stored: {max_evaporation:.7g} mm/day\n"
-        "Evaporative demand {demand_mm_per_day:.6g} mm/day; evaporation is held by: {limited_by}\n"
-        "Evaporation {evaporation:.7g} mm/year, the lesser times {days_per_year:g} days\n"
-        "Salt load {salt_load:.7g} t/ha/year = mm/year x {tds_g_per_l:.6g} g/L / 100\n"
-        "Critical depth {critical_depth:.6g} m for a target load of "
-        "{target_load_t_per_ha_per_year:g} t/ha/year; depth margin {depth_margin:.6g} m\n"
-        "Hazard class {hazard_class}: {hazard_class_name} ({hazard_scheme})"
-    )
-    return "\n".join([*lines, text.format(shown=shown, **answer)])

@@ -92,6 +92,10 @@ class Grid:
         row = (a * (y - f) - d * (x - c)) / det
         return math.floor(row), math.floor(col)
 
+    def place(self) -> str:
+        """Transform and size in full."""
+        return f"{self.transform} {self.width} x {self.height}"
+
     def describe(self) -> str:
         """Size, cell and CRS in one phrase."""
         a, b, _, d, e, _ = self.transform

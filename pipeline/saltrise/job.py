@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from datetime import datetime
 from pathlib import Path
 from typing import Any, Protocol
@@ -112,6 +112,7 @@ def run(
             "tile": settings.run.tile,
             "block": block,
             "code": code_print(),
+            "grid": opened.inputs.grid.place(),
         }
         entries = prints.entries(settings.shown)
         identity = identify(settings.resolved(), entries, versions(), cut)
@@ -145,9 +146,10 @@ def _work(
     records = [read_record(plan.work, index) for index in range(len(plan.tiles()))]
     totals = merge(plan.work, records, plan.layers)
     _assemble(plan, region, records, totals, beginning.date, workdir, ears)
-    worst = _zones(region, totals, beginning.date, workdir)
+    extras = plan.recipe.extra_sums
+    worst = _zones(region, totals, beginning.date, workdir, extras)
     _require_unchanged(prints)
-    record = run_record(region, totals, identity["inputs"], beginning.date, worst)
+    record = run_record(region, totals, identity["inputs"], beginning.date, worst, extras)
     durable.write_json(workdir.unfinished / FINISHED, record)
 
 
@@ -268,7 +270,7 @@ def _assemble(
 
 
 def _zones(
-    region: Region, totals: Totals, date: datetime, workdir: Workdir
+    region: Region, totals: Totals, date: datetime, workdir: Workdir, extras: Sequence[str]
 ) -> list[dict[str, Any]]:
     """Write the zone tables; return the worst zones for the record."""
     zones = region.zones
@@ -281,6 +283,7 @@ def _zones(
         zones.area_m2,
         zones.outside_m2,
         region.settings.hazard.rank_by,
+        extras,
     )
     write_zones_csv(workdir.unfinished / "zones.csv", table)
     write_zones_gpkg(workdir.unfinished / "zones.gpkg", zones, table, date)

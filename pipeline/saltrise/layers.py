@@ -6,7 +6,7 @@ and bind its values in `recipe`.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 NODATA = -9999.0
@@ -31,7 +31,7 @@ class Layer:
     nodata: float
     overview: Literal["mean", "most frequent"]
     cf_name: str | None = None
-    needs: Literal["", "several sets"] = ""
+    needs: Literal["", "several sets", "seasons", "retention"] = ""
     """What a config must give for the layer to exist; nothing for most."""
 
     @property
@@ -88,6 +88,33 @@ LAYERS: dict[str, Layer] = {
             "mean",
             needs="several sets",
         ),
+        Layer(
+            "net_demand",
+            "mm year-1",
+            "evaporative demand that rain and irrigation leave",
+            "float32",
+            NODATA,
+            "mean",
+            needs="seasons",
+        ),
+        Layer(
+            "percolation",
+            "mm year-1",
+            "rain and irrigation beyond the evaporative demand",
+            "float32",
+            NODATA,
+            "mean",
+            needs="seasons",
+        ),
+        Layer(
+            "response_time",
+            "days",
+            "water between hydrostatic and steady profile over maximum evaporation",
+            "float32",
+            NODATA,
+            "mean",
+            needs="retention",
+        ),
     )
 }
 
@@ -96,3 +123,38 @@ BASIC = tuple(name for name, layer in LAYERS.items() if not layer.needs)
 
 SEVERAL_SETS = tuple(name for name, layer in LAYERS.items() if layer.needs == "several sets")
 """Layers of a run with a list of soil parameter sets."""
+
+SEASONS = tuple(name for name, layer in LAYERS.items() if layer.needs == "seasons")
+"""Layers of a run with seasons."""
+
+PER_SEASON = {
+    "max_evaporation": "mm day-1",
+    "evaporation": "mm",
+    "salt_load": "t ha-1",
+    "net_demand": "mm",
+    "percolation": "mm",
+}
+"""Layers that a run can write for each season, with their units over the season."""
+
+
+def season_folder(name: str) -> str:
+    """Folder of a season's layers: anything but letters and digits becomes "-", at most 60."""
+    plain = "".join(letter if letter.isalnum() else "-" for letter in name)
+    return f"season-{plain[:60]}"
+
+
+def season_layer(season: str, layer: str) -> str:
+    """Name of a season's layer: its folder and the layer's own name."""
+    return f"{season_folder(season)}/{layer}"
+
+
+def layer_of(name: str) -> Layer:
+    """The catalogue's row of a layer, be it of the year or of a season (`season_layer`)."""
+    folder, _, base = name.rpartition("/")
+    if not folder:
+        return LAYERS[base]
+    season = folder.removeprefix("season-")
+    meaning = LAYERS[base].meaning.replace("yearly ", "")
+    return replace(
+        LAYERS[base], name=name, unit=PER_SEASON[base], meaning=f"{meaning}, season {season}"
+    )

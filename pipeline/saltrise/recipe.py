@@ -7,24 +7,40 @@ nowhere else.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.physics.curve import RiseCurves
-from saltrise.physics.demand import at_surface, groundwater_evaporation
-from saltrise.physics.salt import critical_depth, salt_load
-from saltrise.physics.texture import class_of_fractions
+from saltrise.layers import season_layer
+from saltrise.physics.demand import at_surface, capped
+from saltrise.physics.salt import Curves, critical_depth, effective_depth, salt_load
+from saltrise.physics.year import Part, net_demand
 from saltrise.schemes import SURFACE_CLASS, Scheme
-from saltrise.units import DAYS_PER_YEAR
+from saltrise.soil_cells import Soil
 from saltrise.zonal import ZoneValues
 
 Array = NDArray[np.float64]
 
 
-class UnmappedCodeError(ValueError):
-    """A texture code that no profile was made for."""
+@dataclass(frozen=True)
+class Season:
+    """Part of the year: where its inputs come from and how they are converted.
+
+    `demand_factor` turns potential evaporation in the config's unit into evaporative demand over
+    the season [mm]; `rain` and `irrigation` [mm] are roles, empty where not given; `depth` is
+    empty where it is ground minus elevation.
+    """
+
+    name: str
+    days: float
+    depth: str
+    salinity: str
+    potential_evaporation: str
+    demand_factor: float
+    rain: str = ""
+    irrigation: str = ""
 
 
 @dataclass(frozen=True)
@@ -33,40 +49,52 @@ class Recipe:
 
     Attributes
     ----------
-    curves : RiseCurves
-        Rise curves of the region's profiles.
-    other_curves : tuple of RiseCurves
-        Those of the same profiles under other parameter sets, for comparison.
-    first_code : int
-        Texture code of the first entry of `profile_of_code`.
-    profile_of_code : int array
-        Profile of each code from `first_code` on; -1 masks the cell, -2 is no known code.
-    depth_factor, tds_factor, evaporation_factor : float
-        From the config's units to m, g/L and mm/day.
-    coefficient : float
-        Potential evaporation to evaporative demand [-], mulch taken off.
+    curves : Curves
+        Rise curves of the region's soils.
+    other_curves : tuple of Curves
+        Those of the same soils under other parameter sets, for comparison.
+    soil : Soil
+        How soil inputs choose a curve.
+    seasons : tuple of Season
+        Parts of the year; one where the config has none.
+    depth_factor, tds_factor : float
+        From the config's units to m and g/L.
     target_load : float
         Target load [t/ha/year].
     scheme : Scheme
         Breaks of the hazard classes.
     constants : dict
         Inputs given as numbers, by role, in the config's units.
-    fraction_divisor : float
-        From the unit of sand, clay and silt to %.
+    layers : frozenset of str
+        Layers of single seasons that are wanted, and others that cost.
     """
 
-    curves: RiseCurves
-    other_curves: tuple[RiseCurves, ...]
-    first_code: int
-    profile_of_code: NDArray[np.int32]
+    curves: Curves[Any]
+    other_curves: tuple[Curves[Any], ...]
+    soil: Soil
+    seasons: tuple[Season, ...]
     depth_factor: float
     tds_factor: float
-    evaporation_factor: float
-    coefficient: float
     target_load: float
     scheme: Scheme
     constants: dict[str, float]
-    fraction_divisor: float = 1.0
+    layers: frozenset[str] = field(default_factory=frozenset)
+
+    @property
+    def days(self) -> float:
+        """Days of the year."""
+        return sum(season.days for season in self.seasons)
+
+    @property
+    def extra_sums(self) -> tuple[str, ...]:
+        """What zones sum up beside their fixed figures."""
+        waters = ("net_demand", "percolation") if self.seasonal else ()
+        return (*(f"salt_load_set_{k}" for k in range(len(self.other_curves))), *waters)
+
+    @property
+    def seasonal(self) -> bool:
+        """Whether the config gives seasons."""
+        return bool(self.seasons[0].name)
 
 
 @dataclass(frozen=True)
@@ -74,8 +102,7 @@ class CellResult:
     """Answer of an array of cells before rounding.
 
     `values` holds the continuous layers by name; where not `valid` their content is finite but
-    means nothing. `counts` are numbers of cells; `other_loads` are salt loads [t/ha/year] under
-    the recipe's other parameter sets.
+    means nothing. `counts` are numbers of cells; `extras` the values of `Recipe.extra_sums`.
     """
 
     values: dict[str, Array]
@@ -83,7 +110,7 @@ class CellResult:
     valid: NDArray[np.bool_]
     depth: Array
     counts: dict[str, int]
-    other_loads: tuple[Array, ...]
+    extras: tuple[Array, ...]
 
     def zone_values(self) -> ZoneValues:
         """The cells as the zone sums take them."""
@@ -94,8 +121,30 @@ class CellResult:
             critical_depth=self.values["critical_depth"].ravel(),
             depth_margin=self.values["depth_margin"].ravel(),
             hazard_class=self.hazard_class.ravel(),
-            other_loads=tuple(load.ravel() for load in self.other_loads),
+            extras=tuple(values.ravel() for values in self.extras),
         )
+
+
+@dataclass
+class _Water:
+    """One season's cells in the units used inside."""
+
+    depth: Array
+    tds: Array
+    demand: Array
+    percolation: Array
+
+
+@dataclass(frozen=True)
+class _Year:
+    """Sums over the seasons, and what each season brought."""
+
+    maximum: Array
+    rises: list[Array]
+    evaporation: Array
+    load: Array
+    limited: NDArray[np.bool_]
+    maxima: list[Array]
 
 
 def compute_cells(
@@ -110,9 +159,7 @@ def compute_cells(
     recipe : Recipe
         Parameters of the region.
     inputs : dict of float arrays, each of `shape`
-        Raster inputs by role (`depth`, or `ground` and `elevation`; `texture`, or `sand`, `clay`
-        and perhaps `silt`; `salinity`; `potential_evaporation`) in the config's units, NaN where
-        there is no value.
+        Raster inputs by role, in the config's units, NaN where there is no value.
     shape : (int, int)
         Rows and columns.
 
@@ -128,70 +175,82 @@ def compute_cells(
     """
     given: dict[str, Array] = {role: values.astype(np.float64) for role, values in inputs.items()}
     given |= {role: np.full(shape, value) for role, value in recipe.constants.items()}
-    depth, tds, demand = converted(recipe, given)
-    profile, no_texture = _profiles(recipe, _texture(recipe, given))
+    soil = recipe.soil.cells(given)
+    waters = converted(recipe, given)
+    root = given.get("root_depth")
     missing = {
-        "no_depth": ~np.isfinite(depth),
-        "no_texture": no_texture,
-        "not_soil": profile < 0,
-        "no_salinity": ~np.isfinite(tds),
-        "no_potential_evaporation": ~np.isfinite(demand),
+        "no_depth": _any_missing([water.depth for water in waters]),
+        "no_texture": soil.missing,
+        "not_soil": soil.not_soil,
+        "no_salinity": _any_missing([water.tds for water in waters]),
+        "no_potential_evaporation": _any_missing([water.demand for water in waters]),
     }
+    if root is not None:
+        missing["no_root_depth"] = ~np.isfinite(root)
     valid, counts = _masked(missing, shape)
+    counts |= soil.counts
+    cells = soil.cells
     if not valid.all():
         # Harmless numbers where there is no answer, so that sums may weigh them with 0.
         gone = ~valid
-        profile[gone], depth[gone], tds[gone], demand[gone] = 0, 1.0, 0.0, 0.0
-    values = _layers(recipe, profile, depth, tds, demand)
-    others = tuple(_load(curves, profile, depth, tds, demand)[2] for curves in recipe.other_curves)
+        cells = recipe.soil.harmless(cells, gone)
+        for water in waters:
+            water.depth[gone], water.tds[gone], water.demand[gone] = 1.0, 0.0, 0.0
+            water.percolation[gone] = 0.0
+        if root is not None:
+            root[gone] = 0.0
+    return _answer(recipe, cells, waters, root, valid, counts)
+
+
+def _answer(
+    recipe: Recipe,
+    cells: Any,
+    waters: list[_Water],
+    root: Array | None,
+    valid: NDArray[np.bool_],
+    counts: dict[str, int],
+) -> CellResult:
+    depth = _mean(recipe, [water.depth for water in waters])
+    year = _year(recipe, recipe.curves, cells, waters, root)
+    values = _layers(recipe, cells, waters, root, year, depth)
+    others = [_year(recipe, c, cells, waters, root).load for c in recipe.other_curves]
     if others:
         loads = (values["salt_load"], *others)
         values["salt_load_lowest_set"] = np.minimum.reduce(loads)
         values["salt_load_highest_set"] = np.maximum.reduce(loads)
     classes = recipe.scheme.classify(values[recipe.scheme.layer])
-    surface = at_surface(depth)
-    limited = valid & ~surface & (values["max_evaporation"] >= demand)
+    surface = at_surface(waters[0].depth)
+    for water in waters[1:]:
+        surface &= at_surface(water.depth)
     classes[surface] = SURFACE_CLASS
     classes[~valid] = 0
     counts["at_surface"] = int(np.count_nonzero(valid & surface))
     counts["assessed"] = int(np.count_nonzero(valid)) - counts["at_surface"]
-    counts["demand_limited"] = int(np.count_nonzero(limited))
-    return CellResult(values, classes, valid, depth, counts, others)
+    counts["demand_limited"] = int(np.count_nonzero(valid & ~surface & year.limited))
+    waters_sums = [values[name] for name in recipe.extra_sums[len(others) :]]
+    return CellResult(values, classes, valid, depth, counts, (*others, *waters_sums))
 
 
-def converted(recipe: Recipe, given: Mapping[str, Array]) -> tuple[Array, Array, Array]:
-    """Depth [m], TDS [g/L] and evaporative demand [mm/day] from inputs in the config's units."""
-    depth = given["depth"] if "depth" in given else given["ground"] - given["elevation"]
-    demand = given["potential_evaporation"] * (recipe.evaporation_factor * recipe.coefficient)
-    return depth * recipe.depth_factor, given["salinity"] * recipe.tds_factor, demand
-
-
-def _texture(recipe: Recipe, given: dict[str, Array]) -> Array:
-    """Texture codes: as given, or the number of the class that the fractions make."""
-    if "texture" in given:
-        return given["texture"]
-    classes, wrong = class_of_fractions(given, recipe.fraction_divisor)
-    if wrong.any():
-        raise UnmappedCodeError("sand, clay and silt do not add up")
-    return classes
-
-
-def _profiles(recipe: Recipe, texture: Array) -> tuple[NDArray[np.int32], NDArray[np.bool_]]:
-    """Profile of each cell, -1 where masked or without texture; and where there is no texture."""
-    missing = np.isnan(texture)
-    known = np.where(missing, recipe.first_code, texture)
-    position = known.astype(np.int64)
-    position -= recipe.first_code
-    size = recipe.profile_of_code.size
-    if position.min() < 0 or position.max() >= size:
-        raise UnmappedCodeError(f"texture code {known.min():g} or {known.max():g} is not mapped")
-    profile: NDArray[np.int32] = recipe.profile_of_code[position]
-    if profile.min() < -1:
-        raise UnmappedCodeError(
-            f"texture code {known.flat[int(np.argmin(profile))]:g} is not mapped"
+def converted(recipe: Recipe, given: Mapping[str, Array]) -> list[_Water]:
+    """Depth [m], TDS [g/L], demand and percolation [mm] of each season from the config's units."""
+    waters = []
+    for season in recipe.seasons:
+        depth = given[season.depth] if season.depth else given["ground"] - given["elevation"]
+        demand, percolation = net_demand(
+            given[season.potential_evaporation] * season.demand_factor,
+            given.get(season.rain),
+            given.get(season.irrigation),
         )
-    profile[missing] = -1
-    return profile, missing
+        tds = given[season.salinity] * recipe.tds_factor
+        waters.append(_Water(depth * recipe.depth_factor, tds, demand, percolation))
+    return waters
+
+
+def _any_missing(seasons: list[Array]) -> NDArray[np.bool_]:
+    missing = ~np.isfinite(seasons[0])
+    for values in seasons[1:]:
+        missing |= ~np.isfinite(values)
+    return missing
 
 
 def _masked(
@@ -207,24 +266,73 @@ def _masked(
     return valid, counts
 
 
-def _load(
-    curves: RiseCurves, profile: NDArray[np.int32], depth: Array, tds: Array, demand: Array
-) -> tuple[Array, Array, Array]:
-    """Maximum evaporation [mm/day], evaporation [mm/year] and salt load [t/ha/year]."""
-    maximum = curves.max_evaporation(profile, depth)
-    evaporation = groundwater_evaporation(maximum, demand, depth) * DAYS_PER_YEAR
-    return maximum, evaporation, salt_load(evaporation, tds)
+def _mean(recipe: Recipe, seasons: list[Array]) -> Array:
+    """Mean over the year, by days."""
+    if len(seasons) == 1:
+        return seasons[0]
+    total = np.zeros_like(seasons[0])
+    for season, values in zip(recipe.seasons, seasons, strict=True):
+        total += values * (season.days / recipe.days)
+    return total
+
+
+def _year(
+    recipe: Recipe, curves: Curves[Any], cells: Any, waters: list[_Water], root: Array | None
+) -> _Year:
+    maxima, rises = [], []
+    limited = np.ones(waters[0].depth.shape, dtype=bool)
+    for season, water in zip(recipe.seasons, waters, strict=True):
+        maximum = curves.max_evaporation(cells, water.depth if root is None else water.depth - root)
+        rise = capped(maximum * season.days, water.demand, water.depth)
+        limited &= rise >= water.demand
+        maxima.append(maximum)
+        rises.append(rise)
+    evaporation, load = rises[0], salt_load(rises[0], waters[0].tds)
+    for water, rise in zip(waters[1:], rises[1:], strict=True):
+        evaporation, load = evaporation + rise, load + salt_load(rise, water.tds)
+    return _Year(_mean(recipe, maxima), rises, evaporation, load, limited, maxima)
 
 
 def _layers(
-    recipe: Recipe, profile: NDArray[np.int32], depth: Array, tds: Array, demand: Array
+    recipe: Recipe,
+    cells: Any,
+    waters: list[_Water],
+    root: Array | None,
+    year: _Year,
+    depth: Array,
 ) -> dict[str, Array]:
-    maximum, evaporation, load = _load(recipe.curves, profile, depth, tds, demand)
-    critical = critical_depth(recipe.curves, profile, demand, tds, recipe.target_load)
-    return {
-        "max_evaporation": maximum,
-        "evaporation": evaporation,
-        "salt_load": load,
+    parts = [
+        Part(season.days, water.demand, water.tds)
+        for season, water in zip(recipe.seasons, waters, strict=True)
+    ]
+    critical = critical_depth(recipe.curves, cells, parts, recipe.target_load, root)
+    effective = depth
+    if len(parts) > 1:
+        effective = effective_depth(recipe.curves, cells, parts, year.rises, depth, root)
+    values = {
+        "max_evaporation": year.maximum,
+        "evaporation": year.evaporation,
+        "salt_load": year.load,
         "critical_depth": critical,
-        "depth_margin": depth - critical,
+        "depth_margin": effective - critical,
     }
+    if recipe.seasonal:
+        values["net_demand"] = np.add.reduce([water.demand for water in waters])
+        values["percolation"] = np.add.reduce([water.percolation for water in waters])
+        values |= _season_layers(recipe, waters, year)
+    return values
+
+
+def _season_layers(recipe: Recipe, waters: list[_Water], year: _Year) -> dict[str, Array]:
+    """Layers of single seasons, where they are wanted."""
+    layers: dict[str, Array] = {}
+    for k, (season, water) in enumerate(zip(recipe.seasons, waters, strict=True)):
+        found = {
+            "max_evaporation": year.maxima[k],
+            "evaporation": year.rises[k],
+            "salt_load": salt_load(year.rises[k], water.tds),
+            "net_demand": water.demand,
+            "percolation": water.percolation,
+        }
+        layers |= {season_layer(season.name, layer): values for layer, values in found.items()}
+    return {name: values for name, values in layers.items() if name in recipe.layers}

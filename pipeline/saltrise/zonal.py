@@ -36,7 +36,7 @@ CODES = CLASSES * DEPTHS * 2
 """Columns of area by hazard class, depth class and too shallow (no, yes)."""
 
 COLUMNS = CODES + len(SUMS)
-"""Columns of a row of sums; loads under other parameter sets follow."""
+"""Columns of a row of sums; extras follow."""
 
 BIN_SHIFT = np.int64(44)
 """A bin is a number's sign, exponent and eight mantissa bits: at most 0.4 % wide."""
@@ -49,7 +49,7 @@ class ZoneValues:
     """Values before rounding of a run of a block's cells, flat, in row-major order.
 
     `depth_m` [m], `evaporation_mm_per_year`, `salt_load` [t/ha/year], `critical_depth` and
-    `depth_margin` [m], `other_loads` [t/ha/year] under other parameter sets. Where
+    `depth_margin` [m], `extras` whatever else is summed. Where
     `hazard_class` is 0 the others are finite but mean nothing.
     """
 
@@ -59,15 +59,15 @@ class ZoneValues:
     critical_depth: Floats
     depth_margin: Floats
     hazard_class: NDArray[np.uint8]
-    other_loads: tuple[Floats, ...] = ()
+    extras: tuple[Floats, ...] = ()
 
     def part(self, cells: slice | Whole) -> ZoneValues:
         """Some of the cells."""
-        arrays = {name: array[cells] for name, array in vars(self).items() if name != _OTHERS}
-        return ZoneValues(**arrays, other_loads=tuple(load[cells] for load in self.other_loads))
+        arrays = {name: array[cells] for name, array in vars(self).items() if name != _EXTRAS}
+        return ZoneValues(**arrays, extras=tuple(values[cells] for values in self.extras))
 
 
-_OTHERS = "other_loads"
+_EXTRAS = "extras"
 
 
 @dataclass(frozen=True)
@@ -104,8 +104,8 @@ class ZoneTotals:
         """One of `SUMS`."""
         return float(self._row(zone)[CODES + SUMS.index(name)])
 
-    def other_loads(self, zone: int) -> list[float]:
-        """Salt loads of assessed cells under the other parameter sets, times m2."""
+    def extras(self, zone: int) -> list[float]:
+        """Sums of assessed cells of what was given as extras, times m2."""
         return [float(load) for load in self._row(zone)[COLUMNS:]]
 
     def _row(self, zone: int) -> Floats:

@@ -24,6 +24,12 @@ RANK_COLUMNS = {
     "too_shallow": "too_shallow_ha",
 }
 
+WATER_COLUMNS = {
+    "net_demand": "net_demand_mean_mm_per_year",
+    "percolation": "percolation_mean_mm_per_year",
+}
+"""Columns of what seasons add, by the sum they are the mean of."""
+
 _HA = 1e4
 
 
@@ -34,6 +40,7 @@ def zone_table(
     area_m2: Sequence[float],
     outside_m2: Sequence[float],
     rank_by: str,
+    extras: Sequence[str] = (),
 ) -> dict[str, list[Any]]:
     """The table of zones, a list a column, in the order of `ids`.
 
@@ -47,6 +54,8 @@ def zone_table(
         Area of each polygon and of its part beyond the grid, on the ellipsoid [m2].
     rank_by : str
         "mean", "total" or "too_shallow".
+    extras : sequence of str
+        Names of what the totals sum up beside the fixed figures (`Recipe.extra_sums`).
 
     Returns
     -------
@@ -71,7 +80,7 @@ def zone_table(
         }
         rows.append(place | {k: v for k, v in figures.items() if k not in place})
     _rank(rows, RANK_COLUMNS[rank_by])
-    rows = [row | set_figures(totals, zone) for zone, row in enumerate(rows)]
+    rows = [row | extra_figures(totals, zone, extras) for zone, row in enumerate(rows)]
     return {column: [row[column] for row in rows] for column in rows[0]} if rows else {}
 
 
@@ -86,25 +95,35 @@ def _rank(rows: list[Row], column: str) -> None:
         row["rank"] = place
 
 
-def region_figures(totals: ZoneTotals) -> Row:
+def region_figures(totals: ZoneTotals, extras: Sequence[str] = ()) -> Row:
     """The figures of the whole region."""
-    return zone_figures(totals, REGION) | set_figures(totals, REGION)
+    return zone_figures(totals, REGION) | extra_figures(totals, REGION, extras)
 
 
-def set_loads(totals: ZoneTotals, zone: int) -> list[float]:
+def set_loads(totals: ZoneTotals, zone: int, extras: Sequence[str]) -> list[float]:
     """Salt load of a zone [t/year] under each parameter set, the first being the one in use."""
-    return [load / _HA for load in (totals.sum_of(zone, "salt_load"), *totals.other_loads(zone))]
+    others = [
+        load
+        for name, load in zip(extras, totals.extras(zone), strict=False)
+        if name not in WATER_COLUMNS
+    ]
+    return [load / _HA for load in (totals.sum_of(zone, "salt_load"), *others)]
 
 
-def set_figures(totals: ZoneTotals, zone: int) -> Row:
-    """Lowest and highest total among the parameter sets; nothing where there is but one."""
-    loads = set_loads(totals, zone)
-    if len(loads) == 1:
-        return {}
-    return {
-        "salt_load_lowest_set_t_per_year": min(loads),
-        "salt_load_highest_set_t_per_year": max(loads),
-    }
+def extra_figures(totals: ZoneTotals, zone: int, extras: Sequence[str]) -> Row:
+    """What the config adds: lowest and highest total among parameter sets, and water means."""
+    loads = set_loads(totals, zone, extras)
+    figures: Row = {}
+    if len(loads) > 1:
+        figures = {
+            "salt_load_lowest_set_t_per_year": min(loads),
+            "salt_load_highest_set_t_per_year": max(loads),
+        }
+    assessed = float(totals.areas(zone)[1:6].sum())
+    for name, total in zip(extras, totals.extras(zone) or [0.0] * len(extras), strict=True):
+        if name in WATER_COLUMNS:
+            figures[WATER_COLUMNS[name]] = total / assessed if assessed > 0 else None
+    return figures
 
 
 def zone_figures(totals: ZoneTotals, zone: int) -> Row:

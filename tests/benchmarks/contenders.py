@@ -69,7 +69,7 @@ def cog_floor(config: Path) -> None:
 
     def unseen(inputs, *_arguments, **_options):
         seen = Range(1, 0, 1.0, 1.0, None)
-        codes = {float(k): Sighting(1, 0, 0) for k in range(1, 12)}
+        codes = {("", float(k)): Sighting(1, 0, 0) for k in range(1, 12)}
         return BlockScan(dict.fromkeys(inputs.rasters, seen), codes, 1)
 
     with (

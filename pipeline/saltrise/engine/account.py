@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import time
+from collections.abc import Sequence
 from dataclasses import asdict
 from datetime import UTC, datetime
 from importlib.metadata import version
@@ -11,10 +12,10 @@ from typing import Any
 
 from saltrise.engine import findings
 from saltrise.engine.identity import versions
-from saltrise.engine.inputs import ROLES
+from saltrise.engine.inputs import key_of
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
-from saltrise.layers import LAYERS
+from saltrise.layers import layer_of
 from saltrise.physics.soils import SoilRow, SoilSet, soil_for
 from saltrise.zonal import REGION
 from saltrise.zone_table import region_figures, set_loads
@@ -48,7 +49,7 @@ def layer_tags(region: Region, date: datetime) -> dict[str, str]:
         "TITLE": settings.title,
         "SOIL_PARAMETERS": region.sets[0].name,
         "TARGET_LOAD": f"{settings.hazard.target_load!r} t ha-1 year-1",
-        "DAYS_PER_YEAR": "365",
+        "DAYS_PER_YEAR": f"{settings.days_per_year:g}",
         "PRECISION": settings.output.precision,
         "USE_LIMITS": " ".join(CAUTIONS),
     }
@@ -60,6 +61,7 @@ def run_record(
     inputs: list[dict[str, Any]],
     date: datetime,
     worst: list[dict[str, Any]],
+    extras: Sequence[str],
 ) -> dict[str, Any]:
     """Content of run.json; equal for equal inputs, versions and date."""
     doubts = findings.warnings(region.settings, totals.ranges)
@@ -78,14 +80,14 @@ def run_record(
             "height": grid.height,
         },
         "parameters": parameters(region, region.sets[0]),
-        **_several_sets(region, totals),
+        **_several_sets(region, totals, extras),
         "hazard_scheme": asdict(region.scheme),
         "counts_cells": totals.counts,
-        "region": region_figures(totals.zones),
+        "region": region_figures(totals.zones, extras),
         "worst_zones": worst,
         "statistics": {name: asdict(found) for name, found in totals.statistics.items()},
         "layers": {
-            name: {"unit": LAYERS[name].unit, "meaning": LAYERS[name].meaning}
+            name: {"unit": layer_of(name).unit, "meaning": layer_of(name).meaning}
             for name in region.settings.layers
         },
         "warnings": [*region.warnings, *doubts],
@@ -96,19 +98,19 @@ def run_record(
 
 def alignment(region: Region) -> dict[str, str]:
     """How each raster input reached the region's grid, by config key."""
-    return {ROLES[r]: aligned.describe() for r, aligned in region.inputs.rasters.items()}
+    return {key_of(r): aligned.describe() for r, aligned in region.inputs.rasters.items()}
 
 
 def _numbers(row: SoilRow) -> dict[str, Any]:
     return {"texture": row.texture} | vars(row.profile) | {"source": row.source}
 
 
-def _several_sets(region: Region, totals: Totals) -> dict[str, Any]:
+def _several_sets(region: Region, totals: Totals, extras: Sequence[str]) -> dict[str, Any]:
     """What the choice of soil parameter set does to the region's total; nothing for one set."""
     if len(region.sets) == 1:
         return {}
     names = [soils.name for soils in region.sets]
-    loads = dict(zip(names, set_loads(totals.zones, REGION), strict=True))
+    loads = dict(zip(names, set_loads(totals.zones, REGION, extras), strict=True))
     return {
         "other_parameters": [parameters(region, soils) for soils in region.sets[1:]],
         "salt_load_by_set_t_per_year": loads,
@@ -121,5 +123,5 @@ def parameters(region: Region, soils: SoilSet) -> dict[str, Any]:
         "set": soils.name,
         "title": soils.title,
         "conductivity": soils.conductivity,
-        "classes": [_numbers(soil_for(soils, texture)) for texture in region.textures],
+        "classes": [_numbers(soil_for(soils, texture)) for texture in region.soils.textures],
     }

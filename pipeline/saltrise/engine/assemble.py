@@ -15,7 +15,7 @@ from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.blocks import Level, template, write_assembled
 from saltrise.io.cog import virtual_layer, write_cog
-from saltrise.layers import LAYERS, Layer
+from saltrise.layers import Layer, layer_of
 from saltrise.pyramid import level_sizes
 
 _Tags = dict[str, str]
@@ -55,7 +55,7 @@ def assemble(
     RunError
         The file cannot be written.
     """
-    layer, grid = LAYERS[name], plan.grid
+    layer, grid = layer_of(name), plan.grid
     colours = {} if layer.continuous else plan.recipe.scheme.rgb()
     dataset_tags = dict(tags) | _layer_tags(plan, layer)
     band_tags = _band_tags(plan, layer, statistics)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from saltrise.engine.inputs import ROLES, Inputs
+from saltrise.engine.inputs import FRACTIONS, Inputs, base_role, key_of
 from saltrise.engine.survey import BlockScan, Range, Sighting
 from saltrise.physics.soils import NOT_SOIL
 from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
@@ -12,8 +12,23 @@ from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
 if TYPE_CHECKING:
     from saltrise.settings import Settings
 
-NEVER_NEGATIVE = frozenset({"salinity", "potential_evaporation"})
-"""Inputs that cannot hold a number below zero."""
+_NEVER_NEGATIVE = frozenset(
+    {
+        "salinity",
+        "potential_evaporation",
+        "rain",
+        "irrigation",
+        "root_depth",
+        "organic_matter",
+        "bulk_density",
+    }
+)
+
+
+def never_negative(role: str) -> bool:
+    """Whether an input cannot hold a number below zero."""
+    return base_role(role) in _NEVER_NEGATIVE
+
 
 _SHOWN = 10
 
@@ -28,10 +43,10 @@ def faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
     """Every fault of the inputs' values, as `file:line: key: what, rule, what to do`."""
     lines = []
     for role, seen in found.ranges.items():
-        key = ROLES[role]
+        key = key_of(role)
         if seen.valid == 0:
             lines.append(settings.fault(key, _all_nodata(inputs, role)))
-        elif role in NEVER_NEGATIVE and seen.negative:
+        elif never_negative(role) and seen.negative:
             lines.append(
                 settings.fault(
                     key,
@@ -53,23 +68,21 @@ def faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
 
 
 def _fraction_faults(settings: Settings, inputs: Inputs, found: BlockScan) -> list[str]:
-    wrong = found.wrong_fractions
-    if wrong is None:
-        return []
-    role = next(role for role in ("sand", "clay", "silt") if role in inputs.rasters)
-    rule = (
-        "sand, clay and silt must add up to 100 % within 2 %"
-        if settings.soil.silt is not None
-        else "sand and clay must not exceed 100 % together"
-    )
-    return [
-        settings.fault(
-            "soil.sand",
-            f"fractions that cannot be in {wrong.count} cells (first at "
-            f"{_place(inputs, role, wrong)}): {rule} and none may be negative; check soil.unit "
-            f"({settings.soil.unit}) and nodata",
+    faults = []
+    for end, wrong in found.wrong_fractions.items():
+        rasters = [name + end for name in FRACTIONS if name + end in inputs.rasters]
+        where = _place(inputs, rasters[0], wrong) if rasters else "every cell"
+        rule = (
+            "sand, clay and silt must add up to 100 % within 2 %"
+            if settings.soil.parts[end].silt is not None
+            else "sand and clay must not exceed 100 % together"
         )
-    ]
+        text = (
+            f"fractions that cannot be in {wrong.count} cells (first at {where}): {rule} and none "
+            f"may be negative; check soil.unit ({settings.soil.unit}) and nodata"
+        )
+        faults.append(settings.fault(key_of(f"sand{end}"), text))
+    return faults
 
 
 def _all_nodata(inputs: Inputs, role: str) -> str:
@@ -80,25 +93,39 @@ def _all_nodata(inputs: Inputs, role: str) -> str:
     return f"{names}: band 1: every cell of the region is nodata; check nodata, extent and CRS"
 
 
-def _code_faults(settings: Settings, inputs: Inputs, codes: dict[float, Sighting]) -> list[str]:
-    known = settings.soil.codes
-    constant = inputs.constants.get("texture")
+def _code_faults(
+    settings: Settings, inputs: Inputs, codes: dict[tuple[str, float], Sighting]
+) -> list[str]:
+    faults = []
+    for end in inputs.layers:
+        found = {code: seen for (layer, code), seen in codes.items() if layer == end}
+        faults += _layer_code_faults(settings, inputs, end, found)
+    return faults
+
+
+def _layer_code_faults(
+    settings: Settings, inputs: Inputs, end: str, codes: dict[float, Sighting]
+) -> list[str]:
+    known, role = settings.soil.codes, f"texture{end}"
+    constant = inputs.constants.get(role)
     if constant is not None and constant not in known:
         text = f"the code {constant:g} is not mapped in [soil.classes]; map it to a texture class"
-        return [settings.fault("soil.texture", text)]
+        return [settings.fault(key_of(role), text)]
     unknown = {code: seen for code, seen in sorted(codes.items()) if code not in known}
     lines = [
         f"{f'{code:g}' if code == int(code) else repr(code)} ({seen.count} cells, first at "
-        f"{_place(inputs, 'texture', seen)})"
+        f"{_place(inputs, role, seen)})"
         for code, seen in list(unknown.items())[:_SHOWN]
     ]
     if not lines:
         return []
     more = f" and {len(unknown) - _SHOWN} more codes" if len(unknown) > _SHOWN else ""
+    which = f" of layer {inputs.layers.index(end) + 1}" if end else ""
     return [
         settings.fault(
             "soil.classes",
-            f"the texture raster holds {'codes that are' if len(unknown) > 1 else 'a code that is'}"
+            f"the texture raster{which} holds "
+            f"{'codes that are' if len(unknown) > 1 else 'a code that is'}"
             f" not mapped: {'; '.join(lines)}{more}; map each to a texture class, or to "
             f'"{NOT_SOIL}" to mask it',
         )
@@ -121,12 +148,12 @@ def warnings(settings: Settings, ranges: dict[str, Range]) -> list[str]:
     for role, seen in ranges.items():
         if seen.low is not None and seen.high is not None:
             lines += _doubts(settings, role, seen.low, seen.high)
-    return [f"{ROLES[role]}: {text}" for role, text in lines]
+    return [f"{key_of(role)}: {text}" for role, text in lines]
 
 
 def _doubts(settings: Settings, role: str, lowest: float, highest: float) -> list[tuple[str, str]]:
-    groundwater, climate = settings.groundwater, settings.climate
-    if role == "depth":
+    groundwater, climate, base = settings.groundwater, settings.climate, base_role(role)
+    if base == "depth":
         low, high = (float(depth_in_m(v, settings.water_table.unit)) for v in (lowest, highest))
         if low < -_WATER_ABOVE_M:
             text = (
@@ -136,11 +163,11 @@ def _doubts(settings: Settings, role: str, lowest: float, highest: float) -> lis
             return [(role, text)]
         if high > _DEEP_M:
             return [(role, f"depths reach {high:g} m; check unit and nodata")]
-    if role == "salinity":
+    if base == "salinity":
         tds = float(tds_in_g_per_l(highest, groundwater.unit, groundwater.tds_per_ec))
         if tds > _BRINE_G_PER_L:
             return [(role, f"reaches {tds:g} g/L, more than a saturated brine; check the unit")]
-    if role == "potential_evaporation":
+    if base == "potential_evaporation":
         rate = float(evaporation_in_mm_per_day(highest, climate.unit))
         if rate > _FAST_MM_PER_DAY:
             return [(role, f"reaches {rate:g} mm/day; check the unit")]

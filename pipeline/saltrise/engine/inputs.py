@@ -14,12 +14,15 @@ from saltrise.grid import Grid
 from saltrise.io.align import Aligned, align, extent
 from saltrise.io.mosaic import Mosaic, open_mosaic
 from saltrise.io.regrid import bounds_in, crs_text
+from saltrise.physics.stacks import ClassCodes
 from saltrise.physics.texture import class_of_fractions
+from saltrise.settings.model import at_layer
+from saltrise.soil_cells import fractions
 
 if TYPE_CHECKING:
     from saltrise.settings import RasterInput, Settings
 
-ROLES = {
+_KEYS = {
     "depth": "water_table.depth",
     "elevation": "water_table.elevation",
     "ground": "water_table.ground",
@@ -27,13 +30,36 @@ ROLES = {
     "sand": "soil.sand",
     "clay": "soil.clay",
     "silt": "soil.silt",
+    "organic_matter": "soil.organic_matter",
+    "bulk_density": "soil.bulk_density",
+    "root_depth": "root_zone.depth",
     "salinity": "groundwater.salinity",
     "potential_evaporation": "climate.potential_evaporation",
 }
-"""What an input stands for, and the config key that names it."""
 
-SOIL_ROLES = ("texture", "sand", "clay", "silt")
-"""Inputs that decide the texture class."""
+_OF_LAYERS = ("texture", "sand", "clay", "silt")
+_OF_SEASONS = ("depth", "salinity", "potential_evaporation", "rain", "irrigation")
+
+FRACTIONS = ("sand", "clay", "silt")
+
+
+def base_role(role: str) -> str:
+    """What an input is, without the soil layer or season it belongs to ("depth@0": "depth")."""
+    return role.partition("@")[0]
+
+
+def key_of(role: str) -> str:
+    """The config key that names an input, as `Settings.fault` takes it."""
+    base, _, number = role.partition("@")
+    if not number:
+        return _KEYS[base]
+    return f"soil.layer.{number}.{base}" if base in _OF_LAYERS else f"season.{number}.{base}"
+
+
+def is_soil(role: str) -> bool:
+    """Whether an input decides the texture class of a cell."""
+    return base_role(role) in _OF_LAYERS
+
 
 _SAME_UNIT = {
     "m": {"m", "metre", "meter", "metres", "meters"},
@@ -48,6 +74,8 @@ _SAME_UNIT = {
     "%": {"%", "percent", "pct", "g/100g"},
     "g/kg": {"g/kg", "g kg-1", "per mille"},
     "mm/day": {"mm/day", "mm day-1", "mm/d", "mm d-1"},
+    "mm": {"mm", "millimetre", "millimeter", "kg m-2", "l m-2"},
+    "g/cm3": {"g/cm3", "g cm-3", "mg m-3", "mg/m3", "kg/dm3"},
 }
 
 
@@ -55,33 +83,46 @@ _SAME_UNIT = {
 class Inputs:
     """A region's inputs on its grid.
 
-    `rasters` and `constants` share the keys of `ROLES`; each role that the config gives is in
-    exactly one of them, in the config's own unit.
+    `rasters` and `constants` are by role; each role that the config gives and the run needs is in
+    exactly one of them, in the config's own unit. `layers` are the endings of the roles of soil
+    layers, from the top down; `codes` what texture codes mean.
     """
 
     grid: Grid
     rasters: dict[str, Aligned]
     constants: dict[str, float]
     warnings: tuple[str, ...]
+    layers: tuple[str, ...]
+    codes: ClassCodes
     fraction_divisor: float = 1.0
     """From the unit of sand, clay and silt to %."""
 
-    def texture_number(self, values: Mapping[str, float]) -> int | None:
-        """Number of the texture class that one cell's fractions make; None without a value.
+    @property
+    def stacked(self) -> bool:
+        """Whether cells have more than one layer of soil."""
+        return len(self.layers) > 1
+
+    def texture_number(self, values: Mapping[str, float], end: str) -> float:
+        """Number of the texture class that one cell's fractions make; NaN without a value.
+
+        Parameters
+        ----------
+        values : mapping of float
+            Inputs of the cell by role.
+        end : str
+            Ending of the layer's roles.
 
         Raises
         ------
         InputError
             The fractions cannot be.
         """
-        parts = {r: np.array([values[r]]) for r in ("sand", "clay", "silt") if r in values}
-        if not all(np.isfinite(part[0]) for part in parts.values()):
-            return None
+        parts = fractions({role: np.array([value]) for role, value in values.items()}, end)
         classes, wrong = class_of_fractions(parts, self.fraction_divisor)
         if wrong[0]:
             given = ", ".join(f"{role} {part[0]:g}" for role, part in parts.items())
             raise InputError(f"fractions that cannot be: {given}; check soil.unit")
-        return int(classes[0])
+        return float(classes[0])
 
     def unit_of(self, settings: Settings, role: str) -> str:
         """Unit of an input as the config declares it; empty for codes."""
@@ -114,53 +155,85 @@ def open_inputs(settings: Settings, block: int = 512) -> Inputs:
             constants[role] = raster.constant
             continue
         try:
-            mosaics[role] = open_mosaic(ROLES[role], raster, nodata)
+            mosaics[role] = open_mosaic(key_of(role), raster, nodata)
         except InputError as error:
-            faults += [settings.fault(ROLES[role], fault) for fault in error.faults]
+            faults += [settings.fault(key_of(role), fault) for fault in error.faults]
     if faults:
         raise InputError(*faults)
     grid = _region_grid(settings, mosaics, block)
     rasters = {}
-    for role, mosaic in mosaics.items():
+    needed = {role: mosaic for role, mosaic in mosaics.items() if _is_needed(settings, role)}
+    for role, mosaic in needed.items():
         try:
-            rasters[role] = align(mosaic, grid, classes=role == "texture")
+            rasters[role] = align(mosaic, grid, classes=base_role(role) == "texture")
         except InputError as error:
             files = ", ".join(t.file.path for t in mosaic.tiles[:3])
             more = f" and {len(mosaic.tiles) - 3} more" if len(mosaic.tiles) > 3 else ""
             faults += [
-                settings.fault(ROLES[role], f"{files}{more}: {text}") for text in error.faults
+                settings.fault(key_of(role), f"{files}{more}: {text}") for text in error.faults
             ]
     if faults:
         raise InputError(*faults)
     divisor = 10.0 if settings.soil.unit == "g/kg" else 1.0
-    return Inputs(grid, rasters, constants, tuple(_warnings(settings, mosaics)), divisor)
+    return Inputs(
+        grid,
+        rasters,
+        {role: value for role, value in constants.items() if _is_needed(settings, role)},
+        tuple(_warnings(settings, needed)),
+        tuple(settings.soil.parts),
+        ClassCodes.of(settings.soil.codes),
+        divisor,
+    )
+
+
+def _is_needed(settings: Settings, role: str) -> bool:
+    """Whether a run reads an input; a main table's value that every season replaces it does not."""
+    replaced_by = "depth" if role in ("elevation", "ground") else role
+    return (
+        replaced_by not in _OF_SEASONS
+        or not settings.seasons
+        or any(getattr(season, replaced_by) is None for season in settings.seasons)
+    )
 
 
 def _given(settings: Settings) -> dict[str, tuple[RasterInput, float | None, str | None]]:
     """Each role the config gives: its raster or constant, configured nodata and unit."""
     table, soil = settings.water_table, settings.soil
     groundwater, climate = settings.groundwater, settings.climate
-    roles = {
-        "depth": (table.depth, table.nodata, table.unit),
-        "elevation": (table.elevation, table.nodata, table.unit),
-        "ground": (table.ground, table.nodata, table.unit),
-        "texture": (soil.texture, soil.nodata, None),
-        "sand": (soil.sand, soil.nodata, soil.unit),
-        "clay": (soil.clay, soil.nodata, soil.unit),
-        "silt": (soil.silt, soil.nodata, soil.unit),
-        "salinity": (groundwater.salinity, groundwater.nodata, groundwater.unit),
-        "potential_evaporation": (
-            climate.potential_evaporation,
-            climate.nodata,
-            climate.unit,
-        ),
+    of_table: dict[str, tuple[float | None, str | None]] = {
+        "depth": (table.nodata, table.unit),
+        "salinity": (groundwater.nodata, groundwater.unit),
+        "potential_evaporation": (climate.nodata, climate.unit),
+        "rain": (climate.nodata, "mm"),
+        "irrigation": (climate.nodata, "mm"),
     }
+    roles: dict[str, tuple[RasterInput | None, float | None, str | None]] = {
+        "depth": (table.depth, *of_table["depth"]),
+        "elevation": (table.elevation, *of_table["depth"]),
+        "ground": (table.ground, *of_table["depth"]),
+    }
+    for end, part in soil.parts.items():
+        roles[f"texture{end}"] = (part.texture, soil.nodata, None)
+        roles |= {f"{r}{end}": (getattr(part, r), soil.nodata, soil.unit) for r in FRACTIONS}
+    roles["organic_matter"] = (soil.organic_matter, soil.nodata, "%")
+    roles["bulk_density"] = (soil.bulk_density, soil.nodata, "g/cm3")
+    if settings.root_zone is not None:
+        roles["root_depth"] = (settings.root_zone.depth, settings.root_zone.nodata, "m")
+    roles["salinity"] = (groundwater.salinity, *of_table["salinity"])
+    roles["potential_evaporation"] = (
+        climate.potential_evaporation,
+        *of_table["potential_evaporation"],
+    )
+    for k, season in enumerate(settings.seasons):
+        for role, rest in of_table.items():
+            roles[f"{role}{at_layer(k)}"] = (getattr(season, role), *rest)
     return {r: (raster, nodata, unit) for r, (raster, nodata, unit) in roles.items() if raster}
 
 
 def _region_grid(settings: Settings, mosaics: dict[str, Mosaic], block: int) -> Grid:
     wanted = settings.grid
-    water = mosaics.get("depth") or mosaics.get("elevation") or mosaics.get("ground")
+    names = ("depth", "elevation", "ground", *(role for role in mosaics if "depth@" in role))
+    water = next((mosaics[name] for name in names if name in mosaics), None)
     try:
         if wanted is None or wanted.like == "water_table":
             if water is None:
@@ -207,17 +280,17 @@ def _warnings(settings: Settings, mosaics: dict[str, Mosaic]) -> list[str]:
     warnings = []
     units = {role: unit for role, (_, _, unit) in _given(settings).items()}
     for role, mosaic in mosaics.items():
-        warnings += [f"{ROLES[role]}: {note}" for note in mosaic.notes]
+        warnings += [f"{key_of(role)}: {note}" for note in mosaic.notes]
         if mosaic.integer_without_nodata:
             warnings.append(
-                f"{ROLES[role]}: an integer raster without declared nodata, every value counts as "
+                f"{key_of(role)}: an integer raster without declared nodata, every value counts as "
                 "valid; set nodata in its table if one marks missing cells"
             )
         unit = units[role]
         for said in sorted({t.file.unit for t in mosaic.tiles if t.file.unit}):
             if unit is not None and said.strip().lower() not in _SAME_UNIT[unit]:
                 warnings.append(
-                    f"{ROLES[role]}: a file declares its unit as {said!r}, the config says "
+                    f"{key_of(role)}: a file declares its unit as {said!r}, the config says "
                     f"{unit!r}; the config is followed"
                 )
     return warnings

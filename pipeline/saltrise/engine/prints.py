@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from saltrise.engine.inputs import ROLES
 from saltrise.engine.region import Opened
 from saltrise.engine.schedule import on_threads
 from saltrise.engine.stop import check_stop
@@ -78,13 +77,11 @@ def take_prints(opened: Opened, done: Callable[[int, int], None]) -> Prints:
 
 def _files(opened: Opened) -> list[_File]:
     files: dict[str, _File] = {}
-    for role in ROLES:
-        if role in opened.inputs.rasters:
-            aligned = opened.inputs.rasters[role]
-            for tile in aligned.mosaic.tiles:
-                needed = aligned.needed(tile) or (0, 0, 0, 0)
-                share = needed[2] * needed[3] / (tile.file.width * tile.file.height)
-                files.setdefault(tile.file.path, _File(tile.file.path, needed, share))
+    for aligned in opened.inputs.rasters.values():
+        for tile in aligned.mosaic.tiles:
+            needed = aligned.needed(tile) or (0, 0, 0, 0)
+            share = needed[2] * needed[3] / (tile.file.width * tile.file.height)
+            files.setdefault(tile.file.path, _File(tile.file.path, needed, share))
     for path in _tables(opened):
         files[str(path)] = _File(str(path), None, 1.0)
     return list(files.values())

@@ -2,22 +2,27 @@
 
 from __future__ import annotations
 
-import itertools
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-import numpy as np
-from numpy.typing import NDArray
 from rasterio.errors import RasterioError
 
 from saltrise.coverage import ZoneShapes, prepare_zones
 from saltrise.engine import findings
-from saltrise.engine.inputs import ROLES, SOIL_ROLES, Inputs, open_inputs
+from saltrise.engine.inputs import Inputs, is_soil, open_inputs
 from saltrise.engine.plan import Plan
 from saltrise.engine.schedule import on_threads
+from saltrise.engine.soils import (
+    Occurring,
+    class_soil,
+    code_faults,
+    curves_of,
+    occurring,
+    soil_faults,
+)
 from saltrise.engine.survey import BlockScan, first_look, scan
 from saltrise.errors import InputError, RunError
 from saltrise.grid import cell_areas
@@ -27,35 +32,29 @@ from saltrise.io.overlaps import disagreements
 from saltrise.io.scheme_files import load_scheme
 from saltrise.io.soil_tables import load_soil_set
 from saltrise.io.vectors import Zones, read_zones
-from saltrise.physics.curve import build_curves
-from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
-from saltrise.recipe import Recipe
+from saltrise.physics.soils import SoilSet
+from saltrise.recipe import Recipe, Season
 from saltrise.schemes import Scheme
-from saltrise.units import depth_in_m, evaporation_in_mm_per_day, tds_in_g_per_l
+from saltrise.settings.model import at_layer
+from saltrise.units import depth_in_m, tds_in_g_per_l
 
 if TYPE_CHECKING:
     from saltrise.settings import Settings
-
-MASKED = -1
-UNKNOWN = -2
-
-_CODE_SPAN = 1 << 24
-"""Widest span of texture codes; beyond it a float32 cannot hold every code anyway."""
 
 
 @dataclass(frozen=True)
 class Region:
     """A surveyed region.
 
-    `textures` are the texture classes that occur, in the order of their profiles. `warnings` lack
-    what only the ranges of whole inputs can tell, see `findings.warnings`.
+    `soils` are the stacks of texture classes that occur. `warnings` lack what only the ranges of
+    whole inputs can tell, see `findings.warnings`.
     """
 
     settings: Settings
     inputs: Inputs
     found: BlockScan
     sets: tuple[SoilSet, ...]
-    textures: tuple[str, ...]
+    soils: Occurring
     scheme: Scheme
     zones: Zones | None
     warnings: tuple[str, ...]
@@ -129,17 +128,19 @@ def survey_region(
     except (RunError, RasterioError) as error:
         # Until tiles run, a broken raster is the user's to mend.
         raise InputError(*opened.zone_faults, str(error)) from error
-    textures = _textures(settings, inputs, found)
     faults = [*opened.zone_faults, *findings.faults(settings, inputs, found)]
-    if not faults:
-        faults += _soil_faults(settings, opened.sets, textures)
+    if faults:
+        raise InputError(*faults)
+    soils = occurring(settings, inputs, found)
+    if settings.soil.method == "classes":
+        faults = soil_faults(settings, opened.sets, soils.textures)
     if faults:
         raise InputError(*faults)
     zones = opened.zones
-    warnings = [*settings.warnings, *inputs.warnings, *clashes, *_clay(textures)]
+    warnings = [*settings.warnings, *inputs.warnings, *clashes, *_clay(soils.textures)]
     warnings += zones.warnings if zones else ()
     return Region(
-        settings, inputs, found, opened.sets, textures, opened.scheme, zones, tuple(warnings)
+        settings, inputs, found, opened.sets, soils, opened.scheme, zones, tuple(warnings)
     )
 
 
@@ -155,7 +156,7 @@ def _clay(textures: tuple[str, ...]) -> list[str]:
 
 
 def _references(settings: Settings) -> tuple[tuple[SoilSet, ...], Scheme]:
-    faults: list[str] = []
+    faults: list[str] = code_faults(settings)
     sets: list[SoilSet] = []
     scheme = None
     for name in settings.soil.sets:
@@ -187,48 +188,14 @@ def _scan(
     if whole:
         return scan(inputs, settings.run.tile, each)
     look = first_look(inputs)
-    soil = [role for role in SOIL_ROLES if role in inputs.rasters]
+    soil = [role for role in inputs.rasters if is_soil(role)]
+    soil += ["root_depth"] if inputs.stacked and "root_depth" in inputs.rasters else []
     if not soil:
         return look
     found = scan(inputs, settings.run.tile, each, roles=soil)
-    return replace(look, codes=found.codes, wrong_fractions=found.wrong_fractions)
-
-
-def _textures(settings: Settings, inputs: Inputs, found: BlockScan) -> tuple[str, ...]:
-    codes = set(found.codes) | _constant_codes(settings, inputs)
-    classes = settings.soil.codes
-    occurring = {name for code, name in classes.items() if code in codes and name != NOT_SOIL}
-    return tuple(sorted(occurring))
-
-
-def _constant_codes(settings: Settings, inputs: Inputs) -> set[float]:
-    """The texture code that numbers in the config give, if they do."""
-    given = inputs.constants
-    if "texture" in given:
-        return {given["texture"]}
-    if not {"sand", "clay"} <= given.keys() or "silt" in inputs.rasters:
-        return set()
-    try:
-        number = inputs.texture_number(given)
-    except InputError as error:
-        raise InputError(settings.fault("soil.sand", str(error))) from error
-    return set() if number is None else {float(number)}
-
-
-def _soil_faults(
-    settings: Settings, sets: tuple[SoilSet, ...], textures: tuple[str, ...]
-) -> list[str]:
-    faults = []
-    if not textures:
-        faults.append(
-            settings.fault("soil.classes", f'every cell of the region is mapped to "{NOT_SOIL}"')
-        )
-    for soils, texture in itertools.product(sets, textures):
-        try:
-            soil_for(soils, texture)
-        except InputError as error:
-            faults += [settings.fault("soil.parameters", text) for text in error.faults]
-    return faults
+    return replace(
+        look, codes=found.codes, wrong_fractions=found.wrong_fractions, stacks=found.stacks
+    )
 
 
 def make_plan(region: Region, work: Path, run: str) -> Plan:
@@ -254,44 +221,62 @@ def make_plan(region: Region, work: Path, run: str) -> Plan:
 
 
 def make_recipe(region: Region) -> Recipe:
-    """The parameters of the physics, from settings, survey and soil set."""
+    """The parameters of the physics, from settings, survey and soil sets."""
     settings = region.settings
-    water, groundwater, climate = settings.water_table, settings.groundwater, settings.climate
-    first, profiles = _profile_of_code(region)
-    curves = [
-        build_curves([soil_for(soils, name).profile for name in region.textures])
-        for soils in region.sets
-    ]
+    water, groundwater = settings.water_table, settings.groundwater
+    curves = [curves_of(settings, soils, region.soils.stacks) for soils in region.sets]
     return Recipe(
         curves=curves[0],
         other_curves=tuple(curves[1:]),
-        first_code=first,
-        profile_of_code=profiles,
+        soil=class_soil(region.inputs, region.soils),
+        seasons=seasons_of(settings),
         depth_factor=float(depth_in_m(1.0, water.unit)),
         tds_factor=float(tds_in_g_per_l(1.0, groundwater.unit, groundwater.tds_per_ec)),
-        evaporation_factor=float(evaporation_in_mm_per_day(1.0, climate.unit)),
-        coefficient=climate.coefficient * (1.0 - settings.surface.mulch),
         target_load=settings.hazard.target_load,
         scheme=region.scheme,
         constants=region.inputs.constants,
-        fraction_divisor=region.inputs.fraction_divisor,
+        layers=frozenset(settings.layers),
     )
 
 
-def _profile_of_code(region: Region) -> tuple[int, NDArray[np.int32]]:
-    classes = region.settings.soil.codes
-    first, last = min(classes), max(classes)
-    if last - first > _CODE_SPAN:
-        raise InputError(
-            region.settings.fault(
-                ROLES["texture"].replace("texture", "classes"),
-                f"codes run from {first} to {last}, must span at most {_CODE_SPAN}; renumber them",
+def seasons_of(settings: Settings) -> tuple[Season, ...]:
+    """The parts of the year, with where each takes its inputs from."""
+    climate, mulch = settings.climate, 1.0 - settings.surface.mulch
+    year = settings.days_per_year
+
+    def factor(days: float, coefficient: float) -> float:
+        """From potential evaporation in the config's unit to demand over the season [mm]."""
+        share = days / year if climate.unit == "mm/year" else days
+        return share * coefficient * mulch
+
+    main = "depth" if settings.water_table.depth is not None else ""
+    if not settings.seasons:
+        return (
+            Season(
+                "",
+                year,
+                main,
+                "salinity",
+                "potential_evaporation",
+                factor(year, climate.coefficient),
+            ),
+        )
+    seasons = []
+    for k, season in enumerate(settings.seasons):
+        own = {
+            role: f"{role}{at_layer(k)}" if getattr(season, role) is not None else ""
+            for role in ("depth", "salinity", "potential_evaporation", "rain", "irrigation")
+        }
+        seasons.append(
+            Season(
+                season.name,
+                season.days,
+                own["depth"] or main,
+                own["salinity"] or "salinity",
+                own["potential_evaporation"] or "potential_evaporation",
+                factor(season.days, season.coefficient or climate.coefficient),
+                own["rain"],
+                own["irrigation"],
             )
         )
-    profiles = np.full(last - first + 1, UNKNOWN, dtype=np.int32)
-    for code, name in classes.items():
-        if name == NOT_SOIL:
-            profiles[code - first] = MASKED
-        elif name in region.textures:
-            profiles[code - first] = region.textures.index(name)
-    return first, profiles
+    return tuple(seasons)

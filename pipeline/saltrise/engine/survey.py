@@ -9,17 +9,20 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import partial
+from typing import TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.engine.inputs import Inputs
+from saltrise.engine.inputs import FRACTIONS, Inputs
 from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.align import BlockReader, Floats
+from saltrise.physics.stacks import stack_keys
 from saltrise.physics.texture import class_of_fractions
+from saltrise.soil_cells import fractions
 
 Each = Callable[[Callable[[Window], "BlockScan"], Iterable[Window]], Iterable["BlockScan"]]
 """Applies a function to windows, in any order and on any threads."""
@@ -63,19 +66,37 @@ class BlockScan:
     """What one or more blocks of all inputs hold."""
 
     ranges: dict[str, Range]
-    codes: dict[float, Sighting]
+    codes: dict[tuple[str, float], Sighting]
+    """Texture codes by the ending of their layer's roles and the code."""
     complete: int
     """Cells where every input has a value."""
-    wrong_fractions: Sighting | None = None
-    """Cells whose sand, clay and silt cannot be."""
+    wrong_fractions: dict[str, Sighting] = field(default_factory=dict)
+    """Cells whose sand, clay and silt cannot be, by the ending of their layer's roles."""
+    stacks: dict[tuple[int, float], int] = field(default_factory=dict)
+    """Cells by key of their layers' classes and depth of the root zone, where it tells stacks
+    apart (else 0)."""
 
     def __add__(self, other: BlockScan) -> BlockScan:
-        ranges = add_ranges(self.ranges, other.ranges)
-        codes = dict(self.codes)
-        for code, seen in other.codes.items():
-            codes[code] = codes[code] + seen if code in codes else seen
-        wrong = _both(self.wrong_fractions, other.wrong_fractions)
-        return BlockScan(ranges, codes, self.complete + other.complete, wrong)
+        stacks = dict(self.stacks)
+        for stack, count in other.stacks.items():
+            stacks[stack] = stacks.get(stack, 0) + count
+        return BlockScan(
+            add_ranges(self.ranges, other.ranges),
+            _added(self.codes, other.codes),
+            self.complete + other.complete,
+            _added(self.wrong_fractions, other.wrong_fractions),
+            stacks,
+        )
+
+
+_Key = TypeVar("_Key")
+
+
+def _added(one: dict[_Key, Sighting], other: dict[_Key, Sighting]) -> dict[_Key, Sighting]:
+    total = dict(one)
+    for key, seen in other.items():
+        total[key] = total[key] + seen if key in total else seen
+    return total
 
 
 def add_ranges(one: dict[str, Range], other: dict[str, Range]) -> dict[str, Range]:
@@ -164,7 +185,7 @@ def _scan_window(inputs: Inputs, readers: dict[str, BlockReader], window: Window
     for block in inputs.grid.blocks(window):
         check_stop()
         values = {role: reader.read(block) for role, reader in readers.items()}
-        total = total + _scan_block(values, inputs.constants, inputs.fraction_divisor, block)
+        total = total + _scan_block(values, inputs, block)
     return total
 
 
@@ -182,28 +203,66 @@ def block_ranges(
     return {role: _range(read, block) for role, read in values.items()}
 
 
-def _scan_block(
-    values: dict[str, Floats], constants: dict[str, float], divisor: float, block: Window
-) -> BlockScan:
+def _scan_block(values: dict[str, Floats], inputs: Inputs, block: Window) -> BlockScan:
     complete = np.ones((block.height, block.width), dtype=bool)
     for read in values.values():
         complete &= np.isfinite(read)
-    wrong = None
-    texture = values.get("texture")
-    if "sand" in values or "clay" in values or "silt" in values:
-        given: dict[str, NDArray[np.float64]] = {
-            role: values[role].astype(np.float64)
-            if role in values
-            else np.full((block.height, block.width), constants[role])
-            for role in ("sand", "clay", "silt")
-            if role in values or role in constants
-        }
-        texture, bad = class_of_fractions(given, divisor)
-        wrong = _sighting(bad, block) if bad.any() else None
-    codes = {}
-    if texture is not None and np.isfinite(texture).any():
-        codes = _codes(texture, block)
-    return BlockScan(block_ranges(values, constants, block), codes, int(complete.sum()), wrong)
+    codes: dict[tuple[str, float], Sighting] = {}
+    wrong: dict[str, Sighting] = {}
+    numbers = []
+    for end in inputs.layers:
+        texture, bad = _texture(values, inputs, end, block)
+        if bad is not None and bad.any():
+            wrong[end] = _sighting(bad, block)
+        if texture is None:
+            continue
+        if f"texture{end}" not in inputs.constants and np.isfinite(texture).any():
+            codes |= {(end, code): seen for code, seen in _codes(texture, block).items()}
+        if inputs.stacked:
+            numbers.append(inputs.codes.numbers(texture.astype(np.float64)))
+    ranges = block_ranges(values, inputs.constants, block)
+    stacks = {}
+    if len(numbers) == len(inputs.layers) > 1:
+        stacks = _stacks(stack_keys(numbers), values.get("root_depth"))
+    return BlockScan(ranges, codes, int(complete.sum()), wrong, stacks)
+
+
+def _texture(
+    values: dict[str, Floats], inputs: Inputs, end: str, block: Window
+) -> tuple[Floats | NDArray[np.float64] | None, NDArray[np.bool_] | None]:
+    """Texture codes of a layer, and where its fractions cannot be; None for what is not read."""
+    role, constants = f"texture{end}", inputs.constants
+    if role in values:
+        return values[role], None
+    shape = (block.height, block.width)
+    if role in constants:
+        return (np.full(shape, constants[role]) if inputs.stacked else None), None
+    given: dict[str, NDArray[np.float64]] = {
+        r: values[r].astype(np.float64) if r in values else np.full(shape, constants[r])
+        for r in (f"{name}{end}" for name in FRACTIONS)
+        if r in values or r in constants
+    }
+    if not given or (not inputs.stacked and not given.keys() & values.keys()):
+        return None, None
+    return class_of_fractions(fractions(given, end), inputs.fraction_divisor)
+
+
+def _stacks(key: NDArray[np.int64], root: Floats | None) -> dict[tuple[int, float], int]:
+    """How many cells each stack has; a stack without a root depth counts for nothing."""
+    if root is None:
+        keys, counts = np.unique(key, return_counts=True)
+        return {(int(k), 0.0): int(n) for k, n in zip(keys, counts, strict=True)}
+    found: dict[tuple[int, float], int] = {}
+    for depth in np.unique(root[np.isfinite(root)]):
+        keys, counts = np.unique(key[root == depth], return_counts=True)
+        found |= {(int(k), float(depth)): int(n) for k, n in zip(keys, counts, strict=True)}
+        if len(found) > MANY_STACKS:
+            break
+    return found
+
+
+MANY_STACKS = 200_000
+"""A block with more stacks than this is told apart no further: far too many for any run."""
 
 
 def _range(values: Floats, block: Window) -> Range:

@@ -11,8 +11,8 @@ from numpy.typing import NDArray
 
 from saltrise.block_sums import BlockSums
 from saltrise.coverage import block_cover
-from saltrise.engine.findings import NEVER_NEGATIVE
-from saltrise.engine.inputs import ROLES
+from saltrise.engine.findings import never_negative
+from saltrise.engine.inputs import key_of
 from saltrise.engine.plan import Plan
 from saltrise.engine.records import ComputedTile, section, write_tile
 from saltrise.engine.stop import check_stop
@@ -21,9 +21,10 @@ from saltrise.errors import UnusableInputError
 from saltrise.grid import Window, block_areas
 from saltrise.io.align import Floats
 from saltrise.io.encode import encode, store
-from saltrise.layers import LAYERS
+from saltrise.layers import layer_of
 from saltrise.pyramid import Stored, halve
-from saltrise.recipe import CellResult, UnmappedCodeError, compute_cells
+from saltrise.recipe import CellResult, compute_cells
+from saltrise.soil_cells import UnmappedCodeError
 from saltrise.zonal import ZonePartial, pack
 
 Array = NDArray[np.float64]
@@ -75,7 +76,7 @@ def compute_tile(plan: Plan, window: Window) -> ComputedTile:
         stored: Stored = values
         for level in range(plan.tile_levels() + 1):
             part = section(name, level)
-            sections[part] = encode(stored, LAYERS[name], plan.compression, plan.grid.block)
+            sections[part] = encode(stored, layer_of(name), plan.compression, plan.grid.block)
             if level < plan.tile_levels():
                 stored = halve(stored, rounded=plan.rounded)
     return ComputedTile(gathered.counts, gathered.ranges, sections, _numbers(gathered))
@@ -96,7 +97,7 @@ def _gather(plan: Plan, window: Window) -> _Gathered:
         try:
             _add_block(plan, gathered, inputs, block, window)
         except UnmappedCodeError as error:
-            raise UnusableInputError(f"{ROLES['texture']}: {error}") from error
+            raise UnusableInputError(f"soil: {error}") from error
     return gathered
 
 
@@ -112,7 +113,7 @@ def _room(plan: Plan, shape: tuple[int, int]) -> StoredLayers:
     key = (plan.layers, shape)
     if key not in held:
         held.clear()
-        held[key] = {name: np.empty(shape, dtype=LAYERS[name].dtype) for name in plan.layers}
+        held[key] = {name: np.empty(shape, dtype=layer_of(name).dtype) for name in plan.layers}
     return held[key]
 
 
@@ -121,8 +122,8 @@ def _add_block(
 ) -> None:
     """Compute a block by strips of rows, so that its numbers stay in the processor's cache."""
     areas = block_areas(plan.grid, block)
-    others = len(plan.recipe.other_curves)
-    sums = BlockSums(block_cover(plan.zones, block), plan.unit_m2, others)
+    extras = len(plan.recipe.extra_sums)
+    sums = BlockSums(block_cover(plan.zones, block), plan.unit_m2, extras)
     top, left = block.row - window.row, block.col - window.col
     step = max(1, _STRIP_CELLS // block.width)
     for first in range(0, block.height, step):
@@ -138,9 +139,9 @@ def _add_block(
 
 def _sound_ranges(plan: Plan, inputs: dict[str, Floats], block: Window) -> dict[str, Range]:
     found = block_ranges(inputs, plan.recipe.constants, block)
-    for role in NEVER_NEGATIVE & found.keys():
-        if found[role].negative is not None:
-            raise UnusableInputError(f"{ROLES[role]}: holds negative values")
+    for role, seen in found.items():
+        if never_negative(role) and seen.negative is not None:
+            raise UnusableInputError(f"{key_of(role)}: holds negative values")
     return found
 
 
@@ -150,7 +151,7 @@ def _place(plan: Plan, gathered: _Gathered, result: CellResult, here: tuple[slic
     for name, target in gathered.layers.items():
         stored = (
             store(result.values[name], result.valid, rounded=plan.rounded)
-            if LAYERS[name].continuous
+            if layer_of(name).continuous
             else result.hazard_class
         )
         target[here] = stored

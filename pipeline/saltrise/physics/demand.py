@@ -15,13 +15,13 @@ def at_surface(depth_m: Floats) -> NDArray[np.bool_]:
     return depth_m <= SURFACE_DEPTH_M
 
 
-def groundwater_evaporation(maximum: Floats, demand: Floats, depth_m: Floats) -> Floats:
+def capped(most: Floats, demand: Floats, depth_m: Floats) -> Floats:
     """Groundwater evaporation: the lesser of what the soil can lift and the demand.
 
     Parameters
     ----------
-    maximum, demand : float64 arrays
-        Maximum steady evaporation and evaporative demand, one unit.
+    most, demand : float64 arrays
+        What the soil can lift and the evaporative demand, rates or sums in one unit.
     depth_m : float64 array
         Depth to water table [m]; at the surface the demand evaporates whatever the soil.
 
@@ -30,5 +30,4 @@ def groundwater_evaporation(maximum: Floats, demand: Floats, depth_m: Floats) ->
     float64 array
         In the unit of its arguments; NaN where one of them is.
     """
-    capped: Floats = np.minimum(maximum, demand)
-    return np.where(at_surface(depth_m), demand, capped)
+    return np.where(at_surface(depth_m), demand, np.minimum(most, demand))

@@ -2,52 +2,64 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from typing import Protocol, TypeVar
+
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from saltrise.physics.curve import Indices, RiseCurves
-from saltrise.units import DAYS_PER_YEAR
+from saltrise.physics.curve import DEEPEST_M, SURFACE_DEPTH_M
+from saltrise.physics.year import Part, flux_of_load, full_load, last_break
 
 Floats = NDArray[np.float64]
+Cells_contra = TypeVar("Cells_contra", contravariant=True)
 
-_PER_HUNDRED = 100.0
+PER_HUNDRED = 100.0
 """1 mm over a hectare is 10 m3; at 1 g/L that is 10 kg: 100 mm x g/L are 1 t/ha."""
 
+_ALL = 1.0 - 1e-12
+"""Share of the full load from which every season counts as limited by its demand."""
 
-def salt_load(evaporation_mm_per_year: Floats, tds_g_per_l: Floats) -> Floats:
-    """Gross yearly salt rise [t/ha/year] = evaporation [mm/year] x TDS [g/L] / 100."""
-    load: Floats = evaporation_mm_per_year * tds_g_per_l / _PER_HUNDRED
+
+class Curves(Protocol[Cells_contra]):
+    """Rise curves of a region's cells, whatever a cell is to them."""
+
+    def max_evaporation(self, cells: Cells_contra, depth_m: Floats) -> Floats:
+        """Maximum steady evaporation [mm/day] over a rise [m]."""
+        ...  # pragma: no cover
+
+    def critical_depth(self, cells: Cells_contra, flux_mm_per_day: Floats) -> Floats:
+        """Rise [m] from which a flux [mm/day] is lifted: 0.001 to 30 m."""
+        ...  # pragma: no cover
+
+
+def salt_load(evaporation_mm: Floats, tds_g_per_l: Floats) -> Floats:
+    """Gross salt rise [t/ha] = evaporation [mm] x TDS [g/L] / 100, over one and the same time."""
+    load: Floats = evaporation_mm * tds_g_per_l / PER_HUNDRED
     return load
 
 
-def critical_flux(target_load: float, tds_g_per_l: Floats) -> Floats:
-    """Flux [mm/day] that carries the target load [t/ha/year]; infinite for water without salt."""
-    with np.errstate(divide="ignore"):
-        flux: Floats = target_load * _PER_HUNDRED / DAYS_PER_YEAR / tds_g_per_l
-    return flux
-
-
 def critical_depth(
-    curves: RiseCurves,
-    profile: Indices,
-    demand_mm_per_day: Floats,
-    tds_g_per_l: Floats,
+    curves: Curves[Cells_contra],
+    cells: Cells_contra,
+    seasons: Sequence[Part],
     target_load: float,
+    root_depth_m: Floats | None = None,
 ) -> Floats:
-    """Shallowest water table [m] at which the load stays within the target load.
+    """Shallowest constant water table [m] at which the load stays within the target load.
 
     Parameters
     ----------
-    curves : RiseCurves
+    curves : Curves
         The region's curves.
-    profile : int array
-        Profile of each cell.
-    demand_mm_per_day : float64 array
-        Evaporative demand [mm/day].
-    tds_g_per_l : float64 array
-        Total dissolved solids of the groundwater [g/L].
+    cells : what `curves` takes
+        The cells' soils.
+    seasons : sequence of Part
+        The year's demands and salinities; one part where it has no seasons.
     target_load : float
         Target load [t/ha/year], > 0.
+    root_depth_m : float64 array, optional
+        Lower edge of the root zone [m below ground], where the rise ends.
 
     Returns
     -------
@@ -55,11 +67,58 @@ def critical_depth(
         0 where even the demand carries no more than the target or the water holds no salt; else
         0.001 to 30 m. NaN where an argument is.
     """
-    flux = critical_flux(target_load, tds_g_per_l)
-    depth = curves.critical_depth(profile, flux)
-    depth[demand_mm_per_day <= flux] = 0.0
-    depth[np.isnan(demand_mm_per_day)] = np.nan
+    most, target = full_load(seasons), target_load * PER_HUNDRED
+    depth = depth_of_flux(curves, cells, flux_of_load(seasons, target), root_depth_m)
+    depth[most <= target] = 0.0
+    depth[np.isnan(most)] = np.nan
     return depth
+
+
+def effective_depth(
+    curves: Curves[Cells_contra],
+    cells: Cells_contra,
+    seasons: Sequence[Part],
+    rise_mm: Sequence[Floats],
+    mean_depth_m: Floats,
+    root_depth_m: Floats | None = None,
+) -> Floats:
+    """Constant water table [m] that brings the same load in a year as the seasons' own depths.
+
+    Where every season is limited by its demand, many do: then the lesser of the mean depth and
+    the deepest of them. It is shallower than the critical depth just where the load exceeds the
+    target, which a mean depth is not.
+
+    Parameters
+    ----------
+    curves, cells, seasons, root_depth_m
+        As in `critical_depth`.
+    rise_mm : sequence of float64 arrays
+        Evaporation of each season [mm].
+    mean_depth_m : float64 array
+        Mean depth, by days [m].
+    """
+    load = np.zeros_like(mean_depth_m)
+    for part, rise in zip(seasons, rise_mm, strict=True):
+        load += rise * part.tds_g_per_l
+    limited = load >= full_load(seasons) * _ALL
+    flux = np.where(limited, last_break(seasons), flux_of_load(seasons, load))
+    depth = depth_of_flux(curves, cells, flux, root_depth_m)
+    least = np.where(flux > 0.0, np.minimum(mean_depth_m, depth), mean_depth_m)
+    return np.where(limited, least, depth)
+
+
+def depth_of_flux(
+    curves: Curves[Cells_contra],
+    cells: Cells_contra,
+    flux_mm_per_day: Floats,
+    root_depth_m: Floats | None,
+) -> Floats:
+    """Water table [m below ground] from which a flux is lifted to the surface or the roots."""
+    rise = curves.critical_depth(cells, flux_mm_per_day)
+    if root_depth_m is None:
+        return rise
+    # More than the soil lifts over the least rise: roots or not, any depth brings too little.
+    return np.where(rise <= SURFACE_DEPTH_M, rise, np.minimum(rise + root_depth_m, DEEPEST_M))
 
 
 def leaching_equivalent(load_t_per_ha: ArrayLike, ece_ds_per_m: float = 4.0) -> Floats:
@@ -78,4 +137,4 @@ def leaching_equivalent(load_t_per_ha: ArrayLike, ece_ds_per_m: float = 4.0) -> 
     """
     drainage_g_per_l = 2.0 * ece_ds_per_m * 0.64
     loads: Floats = np.asarray(load_t_per_ha, dtype=np.float64)
-    return loads * _PER_HUNDRED / drainage_g_per_l
+    return loads * PER_HUNDRED / drainage_g_per_l

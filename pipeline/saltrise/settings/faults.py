@@ -5,10 +5,10 @@ from __future__ import annotations
 from difflib import get_close_matches
 from typing import Any
 
-from pydantic import ValidationError
+from pydantic import BaseModel, ValidationError
 
-from saltrise.settings.model import TABLES, Tables
-from saltrise.settings.rules import Fault
+from saltrise.settings.model import TABLES, SoilLayer, Tables
+from saltrise.settings.values import Fault
 
 _KINDS = {
     "float_type": "a number",
@@ -85,11 +85,19 @@ def _shown(value: Any) -> str:
     return text if len(text) <= 60 else f"{text[:57]}..."
 
 
+def _model(where: tuple[str | int, ...]) -> type[BaseModel]:
+    """Model of the table that holds a key."""
+    names = [str(part) for part in where[:-1] if isinstance(part, str)]
+    if names[:2] == ["soil", "layer"]:
+        return SoilLayer
+    return TABLES.get(names[0], Tables) if names else Tables
+
+
 def _what(where: tuple[str | int, ...]) -> str:
     if len(where) == 1:
         required = [n for n, f in TABLES[str(where[0])].model_fields.items() if f.is_required()]
         return f"the table needs {', '.join(required)}" if required else "the table is needed"
-    field = TABLES[str(where[0])].model_fields[str(where[1])]
+    field = _model(where).model_fields[str(where[-1])]
     choices = getattr(field.annotation, "__args__", ())
     if choices and all(isinstance(choice, str) for choice in choices):
         return f"allowed: {', '.join(repr(c) for c in choices)}"
@@ -97,8 +105,7 @@ def _what(where: tuple[str | int, ...]) -> str:
 
 
 def _unknown(where: tuple[str | int, ...]) -> str:
-    model = TABLES.get(str(where[0])) if len(where) > 1 else Tables
-    allowed = list((model or Tables).model_fields)
+    allowed = list(_model(where).model_fields)
     what = "key" if len(where) > 1 else "table or key"
     close = get_close_matches(str(where[-1]), allowed, n=1)
     hint = f"; did you mean {close[0]!r}?" if close else ""

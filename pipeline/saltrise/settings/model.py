@@ -94,15 +94,31 @@ class WaterTable(_Table):
     nodata: Number | None = None
 
 
+class SoilLayer(_Table):
+    """`[[soil.layer]]`: texture or fractions of one layer, down to `bottom` [m below ground]."""
+
+    bottom: Positive | None = None
+    texture: Raster | None = None
+    sand: Raster | None = None
+    clay: Raster | None = None
+    silt: Raster | None = None
+
+
 class SoilTable(_Table):
-    """`[soil]`: texture codes and their classes, or fractions in `unit`; the parameter sets."""
+    """`[soil]`: texture codes and their classes, or fractions in `unit`; the parameter sets.
+
+    `organic_matter` [% by mass] and `bulk_density` [g/cm3] are for methods that need them.
+    """
 
     texture: Raster | None = None
     sand: Raster | None = None
     clay: Raster | None = None
     silt: Raster | None = None
+    layer: list[SoilLayer] = Field(default_factory=list)
     unit: Literal["%", "g/kg"] | None = None
-    method: Literal["classes"] = "classes"
+    method: Literal["classes", "cosby1984", "saxton-rawls2006", "campbell1985"] = "classes"
+    organic_matter: Raster | None = None
+    bulk_density: Raster | None = None
     parameters: Text | Annotated[list[Text], Field(min_length=1)] = "rawls1982"
     conductivity: (
         Literal["campbell", "brooks-corey", "van-genuchten", "gardner-power", "gardner-exponential"]
@@ -114,7 +130,18 @@ class SoilTable(_Table):
     @property
     def from_fractions(self) -> bool:
         """Whether texture comes from sand and clay rather than from codes."""
-        return self.texture is None
+        return all(part.texture is None for part in self.parts.values())
+
+    @property
+    def parts(self) -> Mapping[str, SoilLayer | SoilTable]:
+        """Where texture or fractions stand, by the ending of their roles: the layers from the
+        top down, or the table itself."""
+        return {at_layer(k): part for k, part in enumerate(self.layer)} or {"": self}
+
+    @property
+    def bottoms(self) -> tuple[float, ...]:
+        """Bottoms of all layers but the last [m]."""
+        return tuple(part.bottom for part in self.layer if part.bottom is not None)
 
     @property
     def codes(self) -> Mapping[int, str]:
@@ -128,6 +155,11 @@ class SoilTable(_Table):
         """Parameter sets by name or path; the first gives the layers."""
         given = self.parameters
         return (given,) if isinstance(given, str) else tuple(given)
+
+
+def at_layer(number: int) -> str:
+    """Ending of the roles of a soil layer or season, counted from 0."""
+    return f"@{number}"
 
 
 class GroundwaterTable(_Table):
@@ -146,6 +178,30 @@ class ClimateTable(_Table):
     unit: Literal["mm/year", "mm/day"]
     basis: Literal["bare soil", "reference crop", "open water", "pan"] = "bare soil"
     coefficient: Positive = 1.0
+    nodata: Number | None = None
+
+
+class SeasonTable(_Table):
+    """`[[season]]`: part of the year; `days`, `rain` and `irrigation` [mm over the season].
+
+    What is left out is taken from the main tables; units are theirs.
+    """
+
+    name: Text
+    days: Positive
+    depth: Raster | None = None
+    potential_evaporation: Raster | None = None
+    coefficient: Positive | None = None
+    salinity: Raster | None = None
+    rain: Raster | None = None
+    irrigation: Raster | None = None
+
+
+class RootZoneTable(_Table):
+    """`[root_zone]`: `depth` of its lower edge [m below ground] and `suction` there [m]."""
+
+    depth: Raster
+    suction: Positive = 150.0
     nodata: Number | None = None
 
 
@@ -180,6 +236,7 @@ class OutputTable(_Table):
     precision: Literal["rounded", "full"] = "rounded"
     compression: Literal["zstd", "deflate"] = "zstd"
     assembly: Literal["copy", "gdal"] = "copy"
+    season_layers: bool = False
 
 
 class RunTable(_Table):
@@ -199,6 +256,8 @@ class Tables(_Table):
     soil: SoilTable
     groundwater: GroundwaterTable
     climate: ClimateTable
+    season: list[SeasonTable] = Field(default_factory=list)
+    root_zone: RootZoneTable | None = None
     surface: SurfaceTable = SurfaceTable()
     hazard: HazardTable = HazardTable()
     zones: ZonesTable | None = None
@@ -213,6 +272,8 @@ TABLES: Mapping[str, type[_Table]] = MappingProxyType(
         "soil": SoilTable,
         "groundwater": GroundwaterTable,
         "climate": ClimateTable,
+        "season": SeasonTable,
+        "root_zone": RootZoneTable,
         "surface": SurfaceTable,
         "hazard": HazardTable,
         "zones": ZonesTable,

@@ -6,13 +6,13 @@ from __future__ import annotations
 import re
 from difflib import get_close_matches
 from pathlib import Path
-from typing import Any, TypeGuard
+from typing import Any
 
-from saltrise.layers import LAYERS, SEVERAL_SETS
-from saltrise.physics.soils import NOT_SOIL, TEXTURES
+from saltrise.layers import LAYERS
+from saltrise.settings.season_rules import all_seasons_have, season_faults
+from saltrise.settings.soil_rules import soil_faults
+from saltrise.settings.values import Fault, is_number, not_negative
 from saltrise.units import is_conductivity
-
-Fault = tuple[tuple[str | int, ...], str]
 
 WARN_ACCURACY_M, REFUSE_ACCURACY_M = 0.5, 1.0
 
@@ -21,19 +21,18 @@ def rule_faults(raw: dict[str, Any], base: Path) -> list[Fault]:
     """Every broken rule, as key path and message."""
     table = {name: value for name, value in raw.items() if isinstance(value, dict)}
     return [
-        *_water(table.get("water_table", {})),
-        *_grid(table.get("grid"), table.get("water_table", {})),
-        *_soil(raw.get("soil")),
-        *_classes(table.get("soil", {})),
+        *_water(table.get("water_table", {}), raw.get("season")),
+        *_grid(table.get("grid"), table.get("water_table", {}), raw.get("season")),
+        *soil_faults(raw.get("soil"), table.get("output", {})),
+        *season_faults(raw.get("season"), table.get("water_table", {})),
         *_salinity(table.get("groundwater", {})),
-        *_not_negative(table.get("climate", {}), "climate", "potential_evaporation"),
+        *not_negative(table.get("climate", {}), "climate", "potential_evaporation"),
         *_output(table.get("output", {}), base),
-        *_sets(table.get("soil", {}), table.get("output", {})),
         *_scheduler(table.get("run", {})),
     ]
 
 
-def _water(table: dict[str, Any]) -> list[Fault]:
+def _water(table: dict[str, Any], seasons: Any) -> list[Fault]:
     key = ("water_table",)
     other: list[str] = [n for n in ("elevation", "ground", "ground_accuracy") if n in table]
     faults: list[Fault] = []
@@ -43,6 +42,8 @@ def _water(table: dict[str, Any]) -> list[Fault]:
             faults.append(((*key, name), text))
         return faults
     if not other:
+        if all_seasons_have(seasons, "depth"):
+            return []
         text = "missing; give depth, or elevation, ground and ground_accuracy"
         return [((*key, "depth"), text)]
     missing: list[str] = [n for n in ("elevation", "ground", "ground_accuracy") if n not in table]
@@ -51,7 +52,7 @@ def _water(table: dict[str, Any]) -> list[Fault]:
         faults.append(((*key, name), text))
     accuracy = table.get("ground_accuracy")
     accepted = table.get("accept_ground_error") is True
-    if _is_number(accuracy) and accuracy > REFUSE_ACCURACY_M and not accepted:
+    if is_number(accuracy) and accuracy > REFUSE_ACCURACY_M and not accepted:
         text = (
             f"is {accuracy} m: a ground model this coarse makes a depth map of its own errors; "
             "at most 1.0 m, or set accept_ground_error = true"
@@ -60,13 +61,14 @@ def _water(table: dict[str, Any]) -> list[Fault]:
     return faults
 
 
-def _grid(table: dict[str, Any] | None, water: dict[str, Any]) -> list[Fault]:
+def _grid(table: dict[str, Any] | None, water: dict[str, Any], seasons: Any) -> list[Fault]:
     table = table if table is not None else {}
-    has_raster = any(
-        name in water and not _is_number(water[name]) for name in ("depth", "elevation", "ground")
-    )
+    given = [water[name] for name in ("depth", "elevation", "ground") if name in water]
+    if isinstance(seasons, list):
+        given += [s["depth"] for s in seasons if isinstance(s, dict) and "depth" in s]
+    has_raster = not all(map(is_number, given))
     if not table:
-        if water and not has_raster and ("depth" in water or "ground" in water):
+        if water and not has_raster and given:
             text = "missing: the water table is a number; give like, or crs, resolution and bounds"
             return [(("grid",), text)]
         return []
@@ -82,7 +84,7 @@ def _grid(table: dict[str, Any] | None, water: dict[str, Any]) -> list[Fault]:
         if name not in table
     ]
     bounds = table.get("bounds")
-    if isinstance(bounds, list) and len(bounds) == 4 and all(map(_is_number, bounds)):
+    if isinstance(bounds, list) and len(bounds) == 4 and all(map(is_number, bounds)):
         left, bottom, right, top = bounds
         if left >= right or bottom >= top:
             text = f"is {bounds}, must be left, bottom, right, top with left < right, bottom < top"
@@ -92,70 +94,13 @@ def _grid(table: dict[str, Any] | None, water: dict[str, Any]) -> list[Fault]:
     return faults
 
 
-_FRACTIONS = ("sand", "clay", "silt", "unit", "method")
-
-
-def _soil(table: Any) -> list[Fault]:
-    """Texture codes with their classes, or fractions with their unit; not a mixture."""
-    if not isinstance(table, dict):
-        return []
-    given = [name for name in _FRACTIONS if name in table]
-    if "texture" in table:
-        faults: list[Fault] = [
-            (("soil", name), "goes with sand and clay, not with texture; give one or the other")
-            for name in given
-        ]
-        if "classes" not in table:
-            faults.append((("soil", "classes"), "missing; map each texture code to a class"))
-        return faults
-    if not given:
-        text = "missing; give texture and classes, or sand, clay and unit"
-        return [(("soil", "texture"), text)]
-    return [
-        (("soil", name), "missing; soil from fractions needs sand, clay and unit (% or g/kg)")
-        for name in ("sand", "clay", "unit")
-        if name not in table
-    ]
-
-
-def _classes(table: dict[str, Any]) -> list[Fault]:
-    classes = table.get("classes")
-    if not isinstance(classes, dict):
-        return []
-    allowed = (*TEXTURES, NOT_SOIL)
-    faults: list[Fault] = []
-    for code, name in classes.items():
-        key = ("soil", "classes", str(code))
-        if "texture" not in table and "sand" in table:
-            if code not in TEXTURES:
-                text = f"the key is {code!r}, must be a texture class: {', '.join(TEXTURES)}"
-                faults.append((key, text))
-        elif not re.fullmatch(r"-?\d+", str(code)):
-            faults.append((key, f"the key is {code!r}, must be a whole number of the raster"))
-        if name not in allowed:
-            close = get_close_matches(str(name), allowed, n=1)
-            hint = f"; did you mean {close[0]!r}?" if close else ""
-            faults.append((key, f"is {name!r}, allowed: {', '.join(allowed)}{hint}"))
-    codes = "texture" in table
-    if codes and not faults and not any(name != NOT_SOIL for name in classes.values()):
-        faults.append((("soil", "classes"), "maps no value to a soil; name at least one class"))
-    return faults
-
-
 def _salinity(table: dict[str, Any]) -> list[Fault]:
-    faults = _not_negative(table, "groundwater", "salinity")
+    faults = not_negative(table, "groundwater", "salinity")
     unit = table.get("unit")
     if "tds_per_ec" in table and unit in ("mg/L", "g/L") and not is_conductivity(unit):
         text = f"goes with a conductivity, but unit is {unit!r}; remove it"
         faults.append((("groundwater", "tds_per_ec"), text))
     return faults
-
-
-def _not_negative(table: dict[str, Any], name: str, key: str) -> list[Fault]:
-    value = table.get(key)
-    if _is_number(value) and value < 0:
-        return [((name, key), f"is {value}, must be 0 or more")]
-    return []
 
 
 def _output(table: dict[str, Any], base: Path) -> list[Fault]:
@@ -181,20 +126,6 @@ def _output(table: dict[str, Any], base: Path) -> list[Fault]:
     return faults
 
 
-def _sets(soil: dict[str, Any], output: dict[str, Any]) -> list[Fault]:
-    given, layers = soil.get("parameters"), output.get("layers")
-    sets = given if isinstance(given, list) else [given]
-    faults: list[Fault] = []
-    twice = sorted({str(name) for name in sets if sets.count(name) > 1})
-    if twice:
-        faults.append((("soil", "parameters"), f"names {', '.join(twice)} more than once"))
-    alone = [name for name in SEVERAL_SETS if isinstance(layers, list) and name in layers]
-    if alone and len(sets) < 2:
-        text = f"holds {alone[0]!r}, which needs a list of sets in soil.parameters"
-        faults.append((("output", "layers"), text))
-    return faults
-
-
 def _scheduler(table: dict[str, Any]) -> list[Fault]:
     value = table.get("scheduler")
     known = r"threads|processes|(tcp|tls)://[^\s/:]+:\d+"
@@ -202,7 +133,3 @@ def _scheduler(table: dict[str, Any]) -> list[Fault]:
         return []
     text = f"is {value!r}, allowed: 'threads', 'processes', 'tcp://host:port'"
     return [(("run", "scheduler"), text)]
-
-
-def _is_number(value: Any) -> TypeGuard[float]:
-    return isinstance(value, int | float) and not isinstance(value, bool)

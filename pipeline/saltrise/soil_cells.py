@@ -1,0 +1,143 @@
+"""From a cell's soil inputs to what its rise curve is chosen by."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from saltrise.physics.stacks import BASE, MASK, MISSING, UNKNOWN, ClassCodes, Numbers, stack_keys
+from saltrise.physics.texture import class_of_fractions
+
+Array = NDArray[np.float64]
+
+MASKED, UNKNOWN_STACK = -1, -2
+"""Profiles of keys whose cells have no soil, and of keys that the survey did not see."""
+
+DENSE = 1 << 24
+"""Keys that a table by key may span; beyond it keys are searched for."""
+
+
+class UnmappedCodeError(ValueError):
+    """A texture code or stack that no profile was made for."""
+
+
+@dataclass(frozen=True)
+class SoilCells:
+    """Soils of some cells: `cells` as the curves take them, and where there are none.
+
+    `counts` are numbers of cells to report.
+    """
+
+    cells: Any
+    missing: NDArray[np.bool_]
+    not_soil: NDArray[np.bool_]
+    counts: dict[str, int]
+
+
+class Soil(Protocol):
+    """How a region's soil inputs are read."""
+
+    def cells(self, given: Mapping[str, Array]) -> SoilCells:
+        """Soils of some cells from inputs by role, in the config's units."""
+        ...  # pragma: no cover
+
+    def harmless(self, cells: Any, gone: NDArray[np.bool_]) -> Any:
+        """The cells with some soil or other where there is no answer."""
+        ...  # pragma: no cover
+
+
+@dataclass(frozen=True)
+class ClassSoil:
+    """Texture classes of one or more layers, from codes or fractions.
+
+    Attributes
+    ----------
+    codes : ClassCodes
+        What codes mean.
+    layers : tuple of str
+        Endings of the layers' roles, from the top down; one empty ending where there are none.
+    keys : int array or None
+        Keys of the stacks that occur, increasing; None where `profiles` is by key itself.
+    profiles : int array
+        Profile of each key.
+    roots_m : float64 array
+        Depths of the root zone that tell stacks apart, increasing; empty where none do.
+    fraction_divisor : float
+        From the unit of sand, clay and silt to %.
+    """
+
+    codes: ClassCodes
+    layers: tuple[str, ...]
+    keys: Numbers | None
+    profiles: NDArray[np.int32]
+    roots_m: Array
+    fraction_divisor: float
+
+    def cells(self, given: Mapping[str, Array]) -> SoilCells:
+        """See `Soil.cells`.
+
+        Raises
+        ------
+        UnmappedCodeError
+            A code or stack has no profile, or fractions do not add up.
+        """
+        numbers = [self.codes.numbers(self._texture(given, end)) for end in self.layers]
+        missing, masked = numbers[0] == MISSING, numbers[0] >= MASK
+        for layer in numbers[1:]:
+            missing |= layer == MISSING
+            masked |= layer >= MASK
+        key = stack_keys(numbers)
+        if self.roots_m.size:
+            key = key + self._root_key(given["root_depth"])
+            masked |= np.isnan(given["root_depth"])
+        profile = self._look_up(key)
+        unknown = (profile < 0) & ~masked
+        for layer in numbers:
+            unknown |= layer == UNKNOWN
+        if unknown.any():
+            raise UnmappedCodeError(self._unknown(given, unknown))
+        profile[masked] = MASKED
+        return SoilCells(profile, missing, masked, {})
+
+    def harmless(self, cells: NDArray[np.int32], gone: NDArray[np.bool_]) -> NDArray[np.int32]:
+        """See `Soil.harmless`."""
+        cells[gone] = 0
+        return cells
+
+    def _look_up(self, key: Numbers) -> NDArray[np.int32]:
+        if self.keys is None:
+            profile: NDArray[np.int32] = self.profiles.take(key)
+            return profile
+        place = np.minimum(np.searchsorted(self.keys, key), self.keys.size - 1)
+        found: NDArray[np.int32] = self.profiles.take(place)
+        found[self.keys.take(place) != key] = UNKNOWN_STACK
+        return found
+
+    def _root_key(self, root: Array) -> Numbers:
+        place = np.minimum(np.searchsorted(self.roots_m, root), self.roots_m.size - 1)
+        key: Numbers = place.astype(np.int64) * np.int64(BASE ** len(self.layers))
+        return key
+
+    def _texture(self, given: Mapping[str, Array], end: str) -> Array:
+        """Texture codes of a layer: as given, or the number of the class its fractions make."""
+        if f"texture{end}" in given:
+            return given[f"texture{end}"]
+        classes, wrong = class_of_fractions(fractions(given, end), self.fraction_divisor)
+        if wrong.any():
+            raise UnmappedCodeError("sand, clay and silt do not add up")
+        return classes
+
+    def _unknown(self, given: Mapping[str, Array], unknown: NDArray[np.bool_]) -> str:
+        codes = [self._texture(given, end)[unknown].flat[0] for end in self.layers]
+        shown = ", ".join(f"{code:g}" for code in codes)
+        return f"texture code {shown} is not mapped or was not there when the run began"
+
+
+def fractions(given: Mapping[str, Array], end: str) -> dict[str, Array]:
+    """Sand, clay and perhaps silt of one layer."""
+    roles = ("sand", "clay", "silt")
+    return {role: given[f"{role}{end}"] for role in roles if f"{role}{end}" in given}
