@@ -66,20 +66,28 @@ def write_zones(path: Path, shapes: dict[str, BaseGeometry], crs: str = CRS) -> 
 
 
 def write_config(folder: Path, tables: dict[str, dict[str, Any]], name: str = "region") -> Path:
-    """A TOML config; nested dicts become tables, None leaves a key out."""
+    """A TOML config; dicts become tables, lists arrays of tables, None leaves a key out."""
     lines = []
     for table, content in tables.items():
-        if not isinstance(content, dict):
+        if isinstance(content, list):
+            for part in content:
+                lines += [f"[[{table}]]", *_keys(part)]
+        elif isinstance(content, dict):
+            lines += [f"[{table}]", *_keys(content)]
+        else:
             lines.insert(0, f"{table} = {json.dumps(content)}")
-            continue
-        lines.append(f"[{table}]")
-        for key, value in content.items():
-            bare = key if re.fullmatch(r"[\w-]+", key) else json.dumps(key)
-            if value is not None:
-                lines.append(f"{bare} = {json.dumps(value)}")
     path = folder / f"{name}.toml"
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
     return path
+
+
+def _keys(content: dict[str, Any]) -> list[str]:
+    lines = []
+    for key, value in content.items():
+        bare = key if re.fullmatch(r"[A-Za-z0-9_-]+", key) else json.dumps(key)
+        if value is not None:
+            lines.append(f"{bare} = {json.dumps(value, ensure_ascii=False)}")
+    return lines
 
 
 def fields(shape: tuple[int, int], random: np.random.Generator) -> dict[str, np.ndarray]:
@@ -97,7 +105,7 @@ def fields(shape: tuple[int, int], random: np.random.Generator) -> dict[str, np.
     }
 
 
-def tables(folder: Path, **changes: dict[str, Any]) -> dict[str, dict[str, Any]]:
+def tables(folder: Path, **changes: Any) -> dict[str, dict[str, Any]]:
     """A full config for the rasters of `write_fields`, with changed keys by table."""
     base: dict[str, Any] = {
         "title": "Test",
@@ -112,7 +120,7 @@ def tables(folder: Path, **changes: dict[str, Any]) -> dict[str, dict[str, Any]]
     }
     for table, content in changes.items():
         key = table.replace("__", ".")
-        base[key] = base.get(key, {}) | content
+        base[key] = content if isinstance(content, list) else base.get(key, {}) | content
     return base
 
 
@@ -127,7 +135,7 @@ def write_fields(
 
 
 def small_region(
-    folder: Path, shape: tuple[int, int] = (40, 50), seed: int = 1, **changes: dict[str, Any]
+    folder: Path, shape: tuple[int, int] = (40, 50), seed: int = 1, **changes: Any
 ) -> Path:
     """Rasters and config of a small random region."""
     write_fields(folder, fields(shape, np.random.default_rng(seed)))

@@ -253,6 +253,8 @@ _PARAMETERS = {
     "b": "b [-]",
     "c": "c [m^n]",
     "n": "n [-]",
+    "theta_s": "theta_s [-]",
+    "theta_r": "theta_r [-]",
     "ks_mm_per_day": "Ks [mm/day]",
 }
 
@@ -261,7 +263,9 @@ def print_soils(sets: list[SoilSet], depths: dict[tuple[str, str], float]) -> No
     """Print parameter sets with values, sources and the depth for 1 mm/day [m]."""
     for soils in sets:
         print(f"{soils.name}: {soils.title} ({soils.conductivity})")
-        names = list(vars(next(iter(soils.rows.values())).profile))
+        first = vars(next(iter(soils.rows.values())).profile)
+        unknown = ("theta_s", "theta_r") if first.get("theta_s") is None else ()
+        names = [name for name in first if name not in unknown]
         heads = "".join(f"{_PARAMETERS[name]:>15}" for name in names)
         print(f"  {'texture':<17}{heads}{'1 mm/day at [m]':>17}  source")
         for row in soils.rows.values():

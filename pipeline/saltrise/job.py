@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any, Protocol
 
 from saltrise.engine import findings
-from saltrise.engine.account import layer_tags, run_date, run_record
+from saltrise.engine.account import layer_tags, run_date, run_record, supply_warnings
 from saltrise.engine.assemble import assemble
 from saltrise.engine.config import read_settings
 from saltrise.engine.estimate import Estimate, estimate_cost, require_room
@@ -147,9 +147,9 @@ def _work(
     totals = merge(plan.work, records, plan.layers)
     _assemble(plan, region, records, totals, beginning.date, workdir, ears)
     extras = plan.recipe.extra_sums
-    worst = _zones(region, totals, beginning.date, workdir, extras)
+    worst, dry = _zones(region, totals, beginning.date, workdir, extras)
     _require_unchanged(prints)
-    record = run_record(region, totals, identity["inputs"], beginning.date, worst, extras)
+    record = run_record(region, totals, identity["inputs"], beginning.date, worst, dry, extras)
     durable.write_json(workdir.unfinished / FINISHED, record)
 
 
@@ -271,11 +271,11 @@ def _assemble(
 
 def _zones(
     region: Region, totals: Totals, date: datetime, workdir: Workdir, extras: Sequence[str]
-) -> list[dict[str, Any]]:
-    """Write the zone tables; return the worst zones for the record."""
+) -> tuple[list[dict[str, Any]], list[str]]:
+    """Write the zone tables; return the worst zones for the record, and zones in doubt."""
     zones = region.zones
     if zones is None:
-        return []
+        return [], []
     table = zone_table(
         totals.zones,
         zones.ids,
@@ -284,6 +284,7 @@ def _zones(
         zones.outside_m2,
         region.settings.hazard.rank_by,
         extras,
+        zones.supply_mm_per_year,
     )
     write_zones_csv(workdir.unfinished / "zones.csv", table)
     write_zones_gpkg(workdir.unfinished / "zones.gpkg", zones, table, date)
@@ -300,4 +301,5 @@ def _zones(
         "too_shallow_ha",
         "assessed_share",
     )
-    return [{column: table[column][row] for column in shown} for row in ranked[:_WORST]]
+    worst = [{column: table[column][row] for column in shown} for row in ranked[:_WORST]]
+    return worst, supply_warnings(table, zones.supply_mm_per_year)

@@ -145,6 +145,8 @@ class _Year:
     load: Array
     limited: NDArray[np.bool_]
     maxima: list[Array]
+    response: Array
+    slow: NDArray[np.bool_]
 
 
 def compute_cells(
@@ -228,6 +230,8 @@ def _answer(
     counts["assessed"] = int(np.count_nonzero(valid)) - counts["at_surface"]
     counts["demand_limited"] = int(np.count_nonzero(valid & ~surface & year.limited))
     waters_sums = [values[name] for name in recipe.extra_sums[len(others) :]]
+    if "response_time" in recipe.layers:
+        counts["slower_than_season"] = int(np.count_nonzero(valid & year.slow))
     return CellResult(values, classes, valid, depth, counts, (*others, *waters_sums))
 
 
@@ -280,9 +284,16 @@ def _year(
     recipe: Recipe, curves: Curves[Any], cells: Any, waters: list[_Water], root: Array | None
 ) -> _Year:
     maxima, rises = [], []
-    limited = np.ones(waters[0].depth.shape, dtype=bool)
+    shape = waters[0].depth.shape
+    limited, slow = np.ones(shape, dtype=bool), np.zeros(shape, dtype=bool)
+    response = np.zeros(shape)
     for season, water in zip(recipe.seasons, waters, strict=True):
-        maximum = curves.max_evaporation(cells, water.depth if root is None else water.depth - root)
+        rise_m = water.depth if root is None else water.depth - root
+        maximum = curves.max_evaporation(cells, rise_m)
+        if "response_time" in recipe.layers:
+            days = curves.response_days(cells, rise_m)
+            slow |= (days > season.days) & ~at_surface(water.depth)
+            response = np.maximum(response, days)
         rise = capped(maximum * season.days, water.demand, water.depth)
         limited &= rise >= water.demand
         maxima.append(maximum)
@@ -290,7 +301,8 @@ def _year(
     evaporation, load = rises[0], salt_load(rises[0], waters[0].tds)
     for water, rise in zip(waters[1:], rises[1:], strict=True):
         evaporation, load = evaporation + rise, load + salt_load(rise, water.tds)
-    return _Year(_mean(recipe, maxima), rises, evaporation, load, limited, maxima)
+    mean = _mean(recipe, maxima)
+    return _Year(mean, rises, evaporation, load, limited, maxima, response, slow)
 
 
 def _layers(
@@ -316,6 +328,8 @@ def _layers(
         "critical_depth": critical,
         "depth_margin": effective - critical,
     }
+    if "response_time" in recipe.layers:
+        values["response_time"] = year.response
     if recipe.seasonal:
         values["net_demand"] = np.add.reduce([water.demand for water in waters])
         values["percolation"] = np.add.reduce([water.percolation for water in waters])

@@ -30,6 +30,9 @@ WATER_COLUMNS = {
 }
 """Columns of what seasons add, by the sum they are the mean of."""
 
+OVER_SUPPLY = "evaporation_over_supply"
+"""Column of a zone's mean evaporation over its supply."""
+
 _HA = 1e4
 
 
@@ -41,6 +44,7 @@ def zone_table(
     outside_m2: Sequence[float],
     rank_by: str,
     extras: Sequence[str] = (),
+    supply: Sequence[float | None] = (),
 ) -> dict[str, list[Any]]:
     """The table of zones, a list a column, in the order of `ids`.
 
@@ -56,6 +60,9 @@ def zone_table(
         "mean", "total" or "too_shallow".
     extras : sequence of str
         Names of what the totals sum up beside the fixed figures (`Recipe.extra_sums`).
+    supply : sequence of float or None
+        Water that reaches each zone's water table [mm/year], None where not known; empty for no
+        comparison.
 
     Returns
     -------
@@ -81,7 +88,16 @@ def zone_table(
         rows.append(place | {k: v for k, v in figures.items() if k not in place})
     _rank(rows, RANK_COLUMNS[rank_by])
     rows = [row | extra_figures(totals, zone, extras) for zone, row in enumerate(rows)]
+    if supply:
+        rows = [row | _over_supply(row, given) for row, given in zip(rows, supply, strict=True)]
     return {column: [row[column] for row in rows] for column in rows[0]} if rows else {}
+
+
+def _over_supply(row: Row, supply: float | None) -> Row:
+    """Evaporation over supply: above 1 more water leaves than comes, which cannot last."""
+    evaporation = row["evaporation_mean_mm_per_year"]
+    known = supply is not None and supply > 0 and evaporation is not None
+    return {OVER_SUPPLY: evaporation / supply if known else None}
 
 
 def _rank(rows: list[Row], column: str) -> None:

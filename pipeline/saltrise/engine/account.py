@@ -18,7 +18,9 @@ from saltrise.engine.region import Region
 from saltrise.layers import layer_of
 from saltrise.physics.soils import SoilRow, SoilSet, soil_for
 from saltrise.zonal import REGION
-from saltrise.zone_table import region_figures, set_loads
+from saltrise.zone_table import OVER_SUPPLY, region_figures, set_loads
+
+_SHOWN = 10
 
 CAUTIONS = (
     "Screening level: shows where hazard is likely, not what a field holds; verify with field "
@@ -61,6 +63,7 @@ def run_record(
     inputs: list[dict[str, Any]],
     date: datetime,
     worst: list[dict[str, Any]],
+    dry: list[str],
     extras: Sequence[str],
 ) -> dict[str, Any]:
     """Content of run.json; equal for equal inputs, versions and date."""
@@ -90,10 +93,39 @@ def run_record(
             name: {"unit": layer_of(name).unit, "meaning": layer_of(name).meaning}
             for name in region.settings.layers
         },
-        "warnings": [*region.warnings, *doubts],
+        "warnings": [*region.warnings, *doubts, *_slow(totals.counts), *dry],
         "use_limits": list(CAUTIONS),
         "versions": versions(),
     }
+
+
+def _slow(counts: dict[str, int]) -> list[str]:
+    slow = counts.get("slower_than_season", 0)
+    if not slow:
+        return []
+    share = 100 * slow / max(counts["assessed"], 1)
+    return [
+        f"response_time: in {slow:,} cells ({share:.3g} % of the assessed) the rise needs longer "
+        "than the season to become steady; there a steady rate is no more than a tendency"
+    ]
+
+
+def supply_warnings(table: dict[str, list[Any]], supply: Sequence[float | None]) -> list[str]:
+    """Zones where more water would evaporate than reaches the water table."""
+    if not supply:
+        return []
+    over = [
+        id_
+        for id_, share, given in zip(table["zone_id"], table[OVER_SUPPLY], supply, strict=True)
+        if given == 0 or (share is not None and share > 1)
+    ]
+    if not over:
+        return []
+    more = f" and {len(over) - _SHOWN} more" if len(over) > _SHOWN else ""
+    return [
+        f"evaporation exceeds the supply of water in zone {', '.join(over[:_SHOWN])}{more}: the "
+        "water table would fall, and the load stays below what is shown"
+    ]
 
 
 def alignment(region: Region) -> dict[str, str]:

@@ -56,6 +56,7 @@ def assemble(
         The file cannot be written.
     """
     layer, grid = layer_of(name), plan.grid
+    target.parent.mkdir(parents=True, exist_ok=True)
     colours = {} if layer.continuous else plan.recipe.scheme.rgb()
     dataset_tags = dict(tags) | _layer_tags(plan, layer)
     band_tags = _band_tags(plan, layer, statistics)

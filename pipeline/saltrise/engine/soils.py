@@ -15,7 +15,7 @@ from saltrise.engine.survey import BlockScan
 from saltrise.errors import InputError
 from saltrise.physics.column import Column
 from saltrise.physics.curve import SURFACE_DEPTH_M, RiseCurves, build_curves
-from saltrise.physics.profile import Profile
+from saltrise.physics.profile import Profile, retains
 from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
 from saltrise.physics.stacks import BASE, soils_of, stack_of
 from saltrise.soil_cells import DENSE, UNKNOWN_STACK, ClassSoil
@@ -139,9 +139,16 @@ def soil_faults(settings: Settings, sets: Sequence[SoilSet], textures: Sequence[
         )
     for soils, texture in itertools.product(sets, textures):
         try:
-            soil_for(soils, texture)
+            row = soil_for(soils, texture)
         except InputError as error:
             faults += [settings.fault("soil.parameters", text) for text in error.faults]
+            continue
+        if "response_time" in settings.layers and not retains(row.profile):
+            text = (
+                f"holds 'response_time', which needs the retention curve of {texture} in set "
+                f"{soils.name!r}; add columns theta_s and theta_r, or leave the layer out"
+            )
+            faults.append(settings.fault("output.layers", text))
     return faults
 
 
@@ -178,7 +185,8 @@ def class_soil(inputs: Inputs, found: Occurring) -> ClassSoil:
 
 def curves_of(settings: Settings, soils: SoilSet, stacks: Sequence[Stack]) -> RiseCurves:
     """Rise curves of stacks under one parameter set."""
-    return build_curves([profile_of(settings, soils, stack) for stack in stacks])
+    response = "response_time" in settings.layers
+    return build_curves([profile_of(settings, soils, s) for s in stacks], response=response)
 
 
 def profile_of(settings: Settings, soils: SoilSet, stack: Stack) -> Profile | Column:

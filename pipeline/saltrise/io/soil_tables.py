@@ -36,6 +36,17 @@ _NUMBERS: Mapping[str, Mapping[str, tuple[float, float]]] = MappingProxyType(
 """Columns of numbers of each conductivity law, with the least and greatest value."""
 
 
+_RETENTION: Mapping[str, tuple[float, float]] = MappingProxyType(
+    {"theta_s": (0.05, 0.95), "theta_r": (0.0, 0.5)}
+)
+"""Optional columns of laws that know a retention curve: water contents [-]."""
+
+
+def optional_columns(law: str) -> tuple[str, ...]:
+    """Columns that a CSV may have beside those of `columns`."""
+    return tuple(_RETENTION) if law in ("campbell", "brooks-corey", "van-genuchten") else ()
+
+
 def columns(law: str) -> tuple[str, ...]:
     """Columns of a CSV for a conductivity law."""
     return ("texture", *_NUMBERS[law], "source")
@@ -139,13 +150,14 @@ def _header_faults(header: list[str], law: str) -> list[str]:
         return ["columns must be separated by commas, not semicolons or tabs"]
     faults = []
     wanted = columns(law)
+    allowed = (*wanted, *optional_columns(law))
     for column in header:
-        if column not in wanted:
-            close = get_close_matches(column, wanted, n=1)
+        if column not in allowed:
+            close = get_close_matches(column, allowed, n=1)
             hint = f"; did you mean {close[0]!r}?" if close else ""
             faults.append(
                 f"unknown column {column!r}; allowed for conductivity {law!r}: "
-                f"{', '.join(wanted)}{hint}"
+                f"{', '.join(allowed)}{hint}"
             )
         elif header.count(column) > 1:
             faults.append(f"column {column!r} stands there more than once")
@@ -171,10 +183,15 @@ def _row_faults(
         faults.append(f"texture: is {texture!r}, allowed: {', '.join(TEXTURES)}{hint}")
     elif texture in rows:
         faults.append(f"texture: {texture!r} has a row already")
-    for column, (low, high) in _NUMBERS[law].items():
+    retention = {name: _RETENTION[name] for name in optional_columns(law) if name in header}
+    for column, (low, high) in (dict(_NUMBERS[law]) | retention).items():
         fault = _number_fault(values[column], low, high)
         if fault:
             faults.append(f"{column}: {fault}")
+    if not faults and retention.keys() == _RETENTION.keys():
+        saturated, residual = (float(values[name]) for name in _RETENTION)
+        if residual >= saturated:
+            faults.append(f"theta_r: is {residual:g}, must be below theta_s {saturated:g}")
     if not values["source"]:
         faults.append("source: is empty, every row needs one")
     return faults
@@ -191,18 +208,23 @@ def _number_fault(text: str, low: float, high: float) -> str:
 
 
 def _row(values: dict[str, str], law: str) -> SoilRow:
-    number = {column: float(values[column]) for column in _NUMBERS[law]}
+    names = (*_NUMBERS[law], *(name for name in optional_columns(law) if name in values))
+    number = {column: float(values[column]) for column in names}
     return SoilRow(values["texture"].strip(), _profile(law, number), values["source"].strip())
 
 
 def _profile(law: str, number: dict[str, float]) -> Profile:
     """A row's numbers [cm, cm/day] as a profile [m, mm/day]."""
+    water = {name: number[name] for name in _RETENTION if name in number}
+    if "theta_r" in water and "theta_s" not in water:
+        water = {}
     if law == "van-genuchten":
         ks = number["ks_cm_per_day"] * 10.0
-        return VanGenuchten(number["alpha_per_cm"] * 100.0, number["n"], ks)
+        return VanGenuchten(number["alpha_per_cm"] * 100.0, number["n"], ks, **water)
     if law == "gardner-exponential":
         return GardnerExponential(number["ks_cm_per_day"] * 10.0, number["alpha_per_cm"] * 100.0)
     if law == "gardner-power":
         scale = 100.0 ** -number["n"]
         return GardnerPower(10.0 * number["a"] * scale, number["b"] * scale, number["n"])
-    return Campbell(number["air_entry_cm"] / 100.0, number["b"], number["ks_cm_per_day"] * 10.0)
+    ks = number["ks_cm_per_day"] * 10.0
+    return Campbell(number["air_entry_cm"] / 100.0, number["b"], ks, **water)

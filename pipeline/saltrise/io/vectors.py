@@ -48,6 +48,12 @@ class Zones:
     outside_m2: tuple[float, ...]
     crs_wkt: str
     warnings: tuple[str, ...]
+    supply_mm_per_year: tuple[float | None, ...] = ()
+    """Water that reaches each zone's water table, where the file has such a field."""
+
+
+SUPPLY = "supply_mm_per_year"
+"""Field of zones that evaporation is compared with."""
 
 
 def read_zones(settings: Settings, grid: Grid) -> Zones:
@@ -69,6 +75,8 @@ def read_zones(settings: Settings, grid: Grid) -> Zones:
     frame = _read(settings, settings.zones_file, settings.zones.layer)
     ids, names, faults = _labels(settings, frame)
     faults += _geometry_faults(settings, frame, ids)
+    supply, more = _supply(settings, frame, ids)
+    faults += more
     if faults:
         raise InputError(*faults)
     geometries, warnings = _mended(frame.geometry.to_list(), ids)
@@ -102,6 +110,7 @@ def read_zones(settings: Settings, grid: Grid) -> Zones:
         tuple(outside),
         crs.to_wkt(),
         tuple(warnings),
+        supply,
     )
 
 
@@ -135,6 +144,21 @@ def _read(settings: Settings, path: Path, layer: str | None) -> geopandas.GeoDat
         message = f"{path}: has no coordinate reference system; assign the one it was made in"
         raise InputError(settings.fault("zones.file", message))
     return frame
+
+
+def _supply(
+    settings: Settings, frame: geopandas.GeoDataFrame, ids: list[str]
+) -> tuple[tuple[float | None, ...], list[str]]:
+    """Values of the field `SUPPLY`, None where empty; nothing where there is no such field."""
+    if SUPPLY not in frame.columns:
+        return (), []
+    values = pd.to_numeric(frame[SUPPLY], errors="coerce").to_numpy(dtype=np.float64)
+    text = frame[SUPPLY].notna().to_numpy() & np.isnan(values)
+    wrong = [id_ for id_, bad in zip(ids, text | (values < 0), strict=True) if bad]
+    if wrong:
+        rule = f"field {SUPPLY} must be a number of mm/year, 0 or more; is not in zone"
+        return (), [settings.fault("zones.file", f"{rule} {_some(wrong)}")]
+    return tuple(None if np.isnan(v) else float(v) for v in values), []
 
 
 def _labels(

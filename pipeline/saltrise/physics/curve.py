@@ -28,6 +28,7 @@ DEEPEST_M = 30.0
 
 _DEPTH_OCTAVES, _COLUMN_OCTAVES = (-10, 12), (-10, 6)
 _DEPTH_BITS, _STEEP_BITS = 5, 6
+_RESPONSE_BITS = 4
 _FLUX_BITS, _COLUMN_FLUX_BITS = 4, 5
 _LEAST_OCTAVE = -100
 """The flux table ends at 2^-100 (1e-30) mm/day, whatever a soil lifts from 30 m."""
@@ -81,6 +82,32 @@ class RiseCurves:
     """Flux [mm/day] at `SURFACE_DEPTH_M` and at `DEEPEST_M`, a row a profile."""
     pieces: Pieces | None = None
     """How rows make up curves; without, row and profile are the same."""
+    response: Table | None = None
+    """Days to a steady rise, rows and arguments as in `evaporation`; None where not asked for."""
+
+    def response_days(self, profile: Indices, depth_m: Floats) -> Floats:
+        """Days until a steady rise is brought about, from the hydrostatic profile.
+
+        Parameters
+        ----------
+        profile, depth_m : arrays
+            As in `max_evaporation`.
+
+        Returns
+        -------
+        float64 array
+            Within 1 % where it exceeds a day; NaN where masked or NaN.
+        """
+        assert self.response is not None
+        row, depth = self._place(profile, depth_m)
+        days = self.response.look_up(row, depth)
+        days[(profile < 0) | np.isnan(depth_m)] = np.nan
+        return days
+
+    def _place(self, profile: Indices, depth_m: Floats) -> tuple[Indices, Floats]:
+        """Row and argument of the tables by depth."""
+        row, depth = np.maximum(profile, 0), np.maximum(depth_m, SURFACE_DEPTH_M)
+        return (row, depth) if self.pieces is None else self.pieces.at_depth(row, depth)
 
     def max_evaporation(self, profile: Indices, depth_m: Floats) -> Floats:
         """Maximum steady evaporation [mm/day] of cells.
@@ -99,9 +126,7 @@ class RiseCurves:
             Within a relative 1e-5 of exact from 0.001 to 30 m (6e-5 under the exponential law,
             where the flux exceeds 1e-6 mm/day); NaN where masked or NaN.
         """
-        row, depth = np.maximum(profile, 0), np.maximum(depth_m, SURFACE_DEPTH_M)
-        if self.pieces is not None:
-            row, depth = self.pieces.at_depth(row, depth)
+        row, depth = self._place(profile, depth_m)
         flux = self.evaporation.look_up(row, depth)
         flux[(profile < 0) | np.isnan(depth_m)] = np.nan
         return flux
@@ -133,13 +158,15 @@ class RiseCurves:
         return depth
 
 
-def build_curves(profiles: Sequence[Profile | Column]) -> RiseCurves:
+def build_curves(profiles: Sequence[Profile | Column], *, response: bool = False) -> RiseCurves:
     """Solve profiles at the nodes of their tables.
 
     Parameters
     ----------
     profiles : sequence of Profile or Column
         At least one; all of one kind.
+    response : bool
+        Tabulate response times too; every soil has to know its retention curve.
 
     Raises
     ------
@@ -148,15 +175,18 @@ def build_curves(profiles: Sequence[Profile | Column]) -> RiseCurves:
     """
     columns = [profile for profile in profiles if isinstance(profile, Column)]
     if columns:
-        return _column_curves(columns)
+        return _column_curves(columns, response=response)
     soils = [profile for profile in profiles if not isinstance(profile, Column)]
     limits = _limits(soils)
     octaves = _flux_octaves(limits)
+    single = [Column((soil,)) for soil in soils]
+    times = _column_curves(single, response=True).response if response else None
     bits = _STEEP_BITS if any(soil.steep for soil in soils) else _DEPTH_BITS
     return RiseCurves(
         tabulate(_DEPTH_OCTAVES, bits, [_with_end_slope(soil.evaporation) for soil in soils]),
         tabulate(octaves, _FLUX_BITS, [soil.depth for soil in soils]),
         limits,
+        response=times,
     )
 
 
@@ -171,7 +201,7 @@ def _flux_octaves(limits: Floats) -> tuple[int, int]:
     return int(np.floor(np.log2(least))), max(most, _LEAST_OCTAVE + 1)
 
 
-def _column_curves(columns: Sequence[Column]) -> RiseCurves:
+def _column_curves(columns: Sequence[Column], *, response: bool) -> RiseCurves:
     """Curves of layered columns and of those with a finite suction at the top."""
     soils = list(dict.fromkeys(soil for column in columns for soil in column.layers))
     low, high = _flux_octaves(_limits(soils))
@@ -179,16 +209,17 @@ def _column_curves(columns: Sequence[Column]) -> RiseCurves:
     if any(column.suction_m < DEEPEST_M for column in columns):
         low = min(low, _COLUMN_LEAST)
     octaves = (max(low, _LEAST_OCTAVE), high + 2)
-    made = marched(columns, nodes_of(octaves, _COLUMN_FLUX_BITS), DEEPEST_M)
+    made = marched(columns, nodes_of(octaves, _COLUMN_FLUX_BITS), DEEPEST_M, response=response)
     rows = {piece.key: piece for pieces in made for piece in pieces}
     number = {key: row for row, key in enumerate(rows)}
     evaporation = [_with_end_slope(p.evaporation, p.shift_m, p.sign) for p in rows.values()]
-    table = tabulate(_COLUMN_OCTAVES, _STEEP_BITS, evaporation)
+    times = [piece.response for piece in rows.values() if piece.response is not None]
     return RiseCurves(
-        table,
+        tabulate(_COLUMN_OCTAVES, _STEEP_BITS, evaporation),
         tabulate(octaves, _COLUMN_FLUX_BITS, [piece.depth for piece in rows.values()]),
         np.array([[_flux(pieces, SURFACE_DEPTH_M), _flux(pieces, DEEPEST_M)] for pieces in made]),
         _arranged(made, number),
+        tabulate(_COLUMN_OCTAVES, _RESPONSE_BITS, times) if times else None,
     )
 
 

@@ -138,13 +138,16 @@ class QuadratureHeights:
         beyond = wanted - self._height[rows, panel]
         whole = self._height[rows, panel + 1] - self._height[rows, panel]
         log = start + _PANEL * np.clip(beyond / whole, 0.0, 1.0)
+        settled = far | wet
         for _ in range(_NEWTON_LIMIT):
             part = self._part(log, start)[0]
             step = (part - beyond) / (np.exp(log) * self.share(np.exp(log)))
             moved = np.clip(log - step, start, start + _PANEL)
             change = np.abs(moved - log)
-            log = moved
-            if np.all((change < _NEWTON_STEP * np.maximum(1.0, np.abs(log))) | far | wet):
+            # What has settled stays: no flux's answer depends on which others are asked for.
+            log = np.where(settled, log, moved)
+            settled |= change < _NEWTON_STEP * np.maximum(1.0, np.abs(log))
+            if settled.all():
                 break
         suction = np.where(far, self._far(wanted), np.exp(log))
         return np.where(wet, height / self._saturated(), suction)

@@ -14,11 +14,12 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import CubicHermiteSpline
+from scipy.interpolate import CubicHermiteSpline, PchipInterpolator
 
 from saltrise.physics.column import Column, March, from_top, through, water_table
 from saltrise.physics.heights import Heights
-from saltrise.physics.profile import Profile
+from saltrise.physics.profile import Campbell, Profile, VanGenuchten
+from saltrise.physics.storage import Drainage, response_days
 from saltrise.physics.table import Solved
 
 Floats = NDArray[np.float64]
@@ -49,6 +50,8 @@ class Piece:
     evaporation: Solved
     depth: Solved
     key: object
+    response: Solved | None = None
+    """Days to a steady rise at an argument, where it was asked for."""
 
 
 class Marches:
@@ -57,8 +60,9 @@ class Marches:
     A class because what it remembers makes thousands of stacks affordable.
     """
 
-    def __init__(self, flux_mm_per_day: Floats, deepest_m: float) -> None:
-        self._flux, self._deepest = flux_mm_per_day, deepest_m
+    def __init__(self, flux_mm_per_day: Floats, deepest_m: float, *, response: bool) -> None:
+        self._flux, self._deepest, self._response = flux_mm_per_day, deepest_m, response
+        self._drainage: dict[Profile, tuple[Drainage, Drainage]] = {}
         self._heights: dict[Profile, Heights] = {}
         self._marches: dict[object, March] = {}
         self._pieces: dict[object, Piece] = {}
@@ -109,6 +113,7 @@ class Marches:
             _evaporation(known, shift, 1.0),
             lambda _: (np.clip(depth, -1e6, 1e6), np.clip(np.nan_to_num(slope), -1e30, 0.0)),
             key,
+            self._times(column, k, depth, shift, 1.0) if self._response else None,
         )
         self._pieces[key] = piece
         return piece
@@ -148,7 +153,8 @@ class Marches:
         shift = OFFSET_M + column.suction_m
         solved = _to_nothing(known)
         flux = float(whole.evaporation(np.array([whole.shift_m + start]))[0][0])
-        piece = Piece(start, flux, shift, -1.0, solved, whole.depth, key)
+        times = self._times(column, k, depth, shift, -1.0) if self._response else None
+        piece = Piece(start, flux, shift, -1.0, solved, whole.depth, key, times)
         self._pieces[key] = piece
         return piece
 
@@ -167,6 +173,39 @@ class Marches:
             above, soil = self._march(column, k - 1), column.layers[k - 1]
             self._marches[key] = through(self._heights_of(soil), above, column.bottoms_m[k - 1])
         return self._marches[key]
+
+    def _times(self, column: Column, k: int, depth: Floats, shift: float, sign: float) -> Solved:
+        """Response time [days] at an argument, the water table standing in layer k."""
+        tops = (0.0, *column.bottoms_m[:k])
+        # Every other flux is enough for what is read as an order of magnitude.
+        pick = np.flatnonzero((depth > tops[k] * (1.0 + _APART)) & (depth < column.suction_m))[::-2]
+        stored, rest = np.zeros(pick.size), np.zeros(pick.size)
+        still = np.zeros(pick.size, dtype=np.intp)
+        for j in range(k + 1):
+            moving, resting = self._drained(column.layers[j])
+            stored += moving.to(self._march(column, j).suction_m[pick], pick)
+            rest += resting.to(depth[pick] - tops[j], still)
+            if j < k:
+                stored -= moving.to(self._march(column, j + 1).suction_m[pick], pick)
+                rest -= resting.to(depth[pick] - tops[j + 1], still)
+        days = response_days(stored, rest, self._flux[pick])
+        spline = PchipInterpolator(np.log(depth[pick]), days)
+        least, most = depth[pick[0]], depth[pick[-1]]
+
+        def solved(argument: Floats) -> tuple[Floats, Floats]:
+            wanted = (argument - shift) / sign
+            inside = np.clip(wanted, least, most)
+            slope = spline(np.log(inside), 1) / inside * sign
+            return spline(np.log(inside)), np.where(wanted == inside, slope, 0.0)
+
+        return solved
+
+    def _drained(self, soil: Profile) -> tuple[Drainage, Drainage]:
+        """Drainage of a soil under the fluxes and at rest."""
+        if soil not in self._drainage:
+            assert isinstance(soil, Campbell | VanGenuchten)
+            self._drainage[soil] = Drainage(soil, self._flux), Drainage(soil, np.zeros(1))
+        return self._drainage[soil]
 
     def _heights_of(self, soil: Profile) -> Heights:
         if soil not in self._heights:
@@ -209,8 +248,8 @@ def _to_nothing(known: Floats) -> Solved:
 
 
 def marched(
-    columns: Sequence[Column], flux_mm_per_day: Floats, deepest_m: float
+    columns: Sequence[Column], flux_mm_per_day: Floats, deepest_m: float, *, response: bool
 ) -> list[list[Piece]]:
-    """Pieces of several columns over the same fluxes."""
-    marches = Marches(flux_mm_per_day, deepest_m)
+    """Pieces of several columns over the same fluxes, with response times if asked for."""
+    marches = Marches(flux_mm_per_day, deepest_m, response=response)
     return [marches.pieces(column) for column in columns]

@@ -44,12 +44,15 @@ class Campbell:
     """A Campbell / Brooks-Corey soil: K = Ks up to air entry, Ks (air_entry/h)^(2 + 3/b) beyond.
 
     `air_entry_m` [m] is the air-entry suction head, `b` [-] the retention slope (1 / lambda),
-    `ks_mm_per_day` [mm/day] the saturated conductivity.
+    `ks_mm_per_day` [mm/day] the saturated conductivity; `theta_s` and `theta_r` [-] saturated and
+    residual water content, where they are known.
     """
 
     air_entry_m: float
     b: float
     ks_mm_per_day: float
+    theta_s: float | None = None
+    theta_r: float = 0.0
 
     steep = False
 
@@ -61,6 +64,11 @@ class Campbell:
     def conductivity(self, suction_m: Floats) -> Floats:
         """See `heights.Conductor`; by `laws.conductivity`."""
         return laws.conductivity(suction_m, *self._parameters)
+
+    def drained(self, suction_m: Floats) -> Floats:
+        """See `storage.Retainer`; saturation (air_entry/h)^(1/b) beyond air entry."""
+        saturation = np.maximum(suction_m / self.air_entry_m, 1.0) ** (-1.0 / self.b)
+        return _pores(self) * (1.0 - saturation)
 
     def heights(self, flux_mm_per_day: Floats) -> Heights:
         """See `Profile.heights`."""
@@ -83,11 +91,14 @@ class Campbell:
 
 @dataclass(frozen=True)
 class VanGenuchten:
-    """A van Genuchten-Mualem soil: `alpha_per_m` [1/m], `n` [-], `ks_mm_per_day` [mm/day]."""
+    """A van Genuchten-Mualem soil: `alpha_per_m` [1/m], `n` [-], `ks_mm_per_day` [mm/day];
+    `theta_s` and `theta_r` [-] as in `Campbell`."""
 
     alpha_per_m: float
     n: float
     ks_mm_per_day: float
+    theta_s: float | None = None
+    theta_r: float = 0.0
 
     steep = False
 
@@ -100,6 +111,11 @@ class VanGenuchten:
         """See `heights.Conductor`; by `van_genuchten.relative_conductivity`."""
         relative = van_genuchten.relative_conductivity(suction_m, self.alpha_per_m, self.n)
         return self.ks_mm_per_day * relative
+
+    def drained(self, suction_m: Floats) -> Floats:
+        """See `storage.Retainer`; saturation [1 + (alpha h)^n]^-m."""
+        power = self.n * np.log(self.alpha_per_m * suction_m)
+        return _pores(self) * -np.expm1(-(1.0 - 1.0 / self.n) * np.logaddexp(0.0, power))
 
     def heights(self, flux_mm_per_day: Floats) -> Heights:
         """See `Profile.heights`."""
@@ -114,6 +130,13 @@ class VanGenuchten:
         return van_genuchten.rise_depth(
             flux_mm_per_day, self.alpha_per_m, self.n, self.ks_mm_per_day
         )
+
+
+def _pores(soil: Campbell | VanGenuchten) -> float:
+    """Water content between saturation and residual."""
+    if soil.theta_s is None:
+        raise ValueError(f"water contents are not known of {soil}")
+    return soil.theta_s - soil.theta_r
 
 
 @dataclass(frozen=True)
@@ -177,3 +200,8 @@ class GardnerExponential:
         ratio = self.ks_mm_per_day / flux_mm_per_day
         depth = np.log1p(ratio) / self.alpha_per_m
         return depth, -1.0 / (self.alpha_per_m * flux_mm_per_day * (1.0 + 1.0 / ratio))
+
+
+def retains(profile: Profile) -> bool:
+    """Whether a soil's retention curve is known."""
+    return isinstance(profile, Campbell | VanGenuchten) and profile.theta_s is not None

@@ -24,9 +24,10 @@ def rule_faults(raw: dict[str, Any], base: Path) -> list[Fault]:
         *_water(table.get("water_table", {}), raw.get("season")),
         *_grid(table.get("grid"), table.get("water_table", {}), raw.get("season")),
         *soil_faults(raw.get("soil"), table.get("output", {})),
-        *season_faults(raw.get("season"), table.get("water_table", {})),
+        *season_faults(raw.get("season"), table.get("water_table", {}), table.get("output", {})),
         *_salinity(table.get("groundwater", {})),
         *not_negative(table.get("climate", {}), "climate", "potential_evaporation"),
+        *not_negative(table.get("root_zone", {}), "root_zone", "depth"),
         *_output(table.get("output", {}), base),
         *_scheduler(table.get("run", {})),
     ]

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import Any
 
-from saltrise.layers import season_folder
+from saltrise.layers import SEASONS, season_folder
 from saltrise.settings.values import Fault, is_number, not_negative
 
 YEAR_DAYS = (365, 366)
@@ -20,8 +20,10 @@ def all_seasons_have(seasons: Any, key: str) -> bool:
     )
 
 
-def season_faults(seasons: Any, water: dict[str, Any]) -> list[Fault]:
+def season_faults(seasons: Any, water: dict[str, Any], output: dict[str, Any]) -> list[Fault]:
     """Every broken rule of the seasons, as key path and message."""
+    if seasons is None:
+        return _without(output)
     if not isinstance(seasons, list) or not all(isinstance(s, dict) for s in seasons):
         return []
     if not seasons:
@@ -37,6 +39,19 @@ def season_faults(seasons: Any, water: dict[str, Any]) -> list[Fault]:
     for k, season in enumerate(seasons):
         for key in ("potential_evaporation", "salinity", "rain", "irrigation"):
             faults += not_negative(season, "season", k, key)
+    return faults
+
+
+def _without(output: dict[str, Any]) -> list[Fault]:
+    """What is asked for that only seasons give."""
+    layers = output.get("layers")
+    faults: list[Fault] = [
+        (("output", "layers"), f"holds {name!r}, which needs [[season]] tables")
+        for name in SEASONS
+        if isinstance(layers, list) and name in layers
+    ]
+    if output.get("season_layers") is True:
+        faults.append((("output", "season_layers"), "is true, but there is no [[season]]"))
     return faults
 
 

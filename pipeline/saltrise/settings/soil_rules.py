@@ -169,4 +169,8 @@ def _sets(soil: dict[str, Any], output: dict[str, Any]) -> list[Fault]:
     if alone and len(sets) < 2:
         text = f"holds {alone[0]!r}, which needs a list of sets in soil.parameters"
         faults.append((("output", "layers"), text))
+    timed = isinstance(layers, list) and "response_time" in layers
+    if timed and soil.get("method", "classes") != "classes":
+        text = f"holds 'response_time', which method {soil['method']!r} does not give"
+        faults.append((("output", "layers"), text))
     return faults

@@ -1,0 +1,83 @@
+"""Water that a steady rise takes out of a column, and how long the rise needs to bring it about.
+
+Before anything evaporates, suction stands at its height above the water table (hydrostatic);
+under a steady flux it is greater, so less water is held. The water between both profiles has to
+leave before the rise is steady; over the flux it is a time (the retention curves are those of the
+soils' own laws: Campbell 1974, Brooks & Corey 1964, van Genuchten 1980).
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+Floats = NDArray[np.float64]
+
+_LEAST_M, _GREATEST_M = 1e-9, 1e12
+_PANEL, _POINTS = 0.25, 10
+_MM_PER_M = 1000.0
+
+
+class Retainer(Protocol):
+    """A soil with conductivity and retention."""
+
+    @property
+    def anchor_m(self) -> float:
+        """Suction [m] where the laws' slopes break."""
+        ...  # pragma: no cover
+
+    def conductivity(self, suction_m: Floats) -> Floats:
+        """Conductivity [mm/day] at suctions [m] > 0."""
+        ...  # pragma: no cover
+
+    def drained(self, suction_m: Floats) -> Floats:
+        """Water content below saturation [-] at suctions [m] > 0."""
+        ...  # pragma: no cover
+
+
+class Drainage:
+    """Water drained between the water table and a suction, in one soil, for an array of fluxes.
+
+    The integral of (theta_s - theta) dz from suction 0 to h, dz = dh / (1 + E/K); a flux of 0 is
+    the hydrostatic profile. A class because what is summed up once serves every layer.
+    """
+
+    def __init__(self, soil: Retainer, flux_mm_per_day: Floats) -> None:
+        self._soil, self._flux = soil, flux_mm_per_day
+        back = math.ceil(math.log(soil.anchor_m / _LEAST_M) / _PANEL)
+        self._first = math.log(soil.anchor_m) - _PANEL * back
+        self._panels = math.ceil((math.log(_GREATEST_M) - self._first) / _PANEL)
+        points, weights = np.polynomial.legendre.leggauss(_POINTS)
+        self._points, self._weights = 0.5 + 0.5 * points, 0.5 * weights
+        edges = self._first + _PANEL * np.arange(self._panels)
+        head = np.exp(edges[:, np.newaxis] + _PANEL * self._points)
+        drained = head * (_PANEL * self._weights) * soil.drained(head)
+        conductivity = soil.conductivity(head)
+        self._sum = np.zeros((flux_mm_per_day.size, self._panels + 1))
+        with np.errstate(divide="ignore", over="ignore"):
+            for k, flux in enumerate(flux_mm_per_day):
+                part = (drained / (1.0 + flux / conductivity)).sum(axis=1)
+                np.cumsum(part, out=self._sum[k, 1:])
+
+    def to(self, suction_m: Floats, row: NDArray[np.intp]) -> Floats:
+        """Water [m] drained between the water table and suctions [m] under the fluxes of some
+        rows; none below it."""
+        end = math.exp(self._first + _PANEL * self._panels)
+        inside = np.log(np.clip(suction_m, math.exp(self._first), end))
+        panel = np.clip((inside - self._first) // _PANEL, 0, self._panels - 1).astype(np.intp)
+        start = self._first + _PANEL * panel
+        width = (inside - start)[:, np.newaxis]
+        head = np.exp(start[:, np.newaxis] + width * self._points)
+        with np.errstate(divide="ignore", over="ignore"):
+            share = 1.0 / (1.0 + self._flux[row, np.newaxis] / self._soil.conductivity(head))
+        part = (head * (width * self._weights) * self._soil.drained(head) * share).sum(axis=1)
+        total: Floats = self._sum[row, panel] + part
+        return total
+
+
+def response_days(stored_m: Floats, hydrostatic_m: Floats, flux_mm_per_day: Floats) -> Floats:
+    """Days that a flux [mm/day] needs to take the water [m] between two profiles."""
+    return np.maximum(stored_m - hydrostatic_m, 0.0) * _MM_PER_M / flux_mm_per_day
