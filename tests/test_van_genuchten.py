@@ -13,7 +13,8 @@ from scipy.integrate import quad
 
 from published import table
 from saltrise.io.soil_tables import load_soil_set
-from saltrise.physics.van_genuchten import max_evaporation, relative_conductivity, rise_depth
+from saltrise.physics.profile import VanGenuchten
+from saltrise.physics.van_genuchten import relative_conductivity
 
 ROWS = load_soil_set("carsel-parrish1988", Path()).rows
 
@@ -72,7 +73,7 @@ def test_depth_equals_scipys_quadrature(texture: str) -> None:
             quad(integrand, a, b, epsabs=0, epsrel=1e-12, limit=200)[0]
             for a, b in itertools.pairwise(edges)
         )
-        assert rise_depth(rate, alpha, n, ks)[0][0] == pytest.approx(expected, rel=1e-8)
+        assert VanGenuchten(alpha, n, ks).depth(rate)[0][0] == pytest.approx(expected, rel=1e-8)
 
 
 def test_conductivity_equals_the_printed_form_where_that_keeps_its_digits() -> None:
@@ -99,9 +100,9 @@ def test_nothing_cancels_near_saturation_or_far_into_dryness(alpha: float, n: fl
 @given(st.floats(0.1, 50), st.floats(1.06, 6.0), st.floats(0.1, 1e4))
 def test_depth_and_evaporation_are_inverse_and_monotone(alpha: float, n: float, ks: float) -> None:
     depths = np.geomspace(0.01, 30, 9)
-    flux, slope = max_evaporation(depths, alpha, n, ks)
-    np.testing.assert_allclose(rise_depth(flux, alpha, n, ks)[0], depths, rtol=1e-9)
+    flux, slope = VanGenuchten(alpha, n, ks).evaporation(depths)
+    np.testing.assert_allclose(VanGenuchten(alpha, n, ks).depth(flux)[0], depths, rtol=1e-9)
     assert np.all(np.diff(flux) < 0)
-    near = max_evaporation(depths * 1.0001, alpha, n, ks)[0]
-    far = max_evaporation(depths * 0.9999, alpha, n, ks)[0]
+    near = VanGenuchten(alpha, n, ks).evaporation(depths * 1.0001)[0]
+    far = VanGenuchten(alpha, n, ks).evaporation(depths * 0.9999)[0]
     np.testing.assert_allclose(slope, (near - far) / (depths * 0.0002), rtol=1e-5)

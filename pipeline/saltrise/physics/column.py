@@ -16,11 +16,9 @@ from numpy.typing import NDArray
 
 from saltrise.physics.heights import Heights
 from saltrise.physics.profile import Profile
+from saltrise.physics.reach import invert
 
 Floats = NDArray[np.float64]
-
-_LEAST_OCTAVE, _GREATEST_OCTAVE = -100, 60
-_NEWTON_LIMIT, _NEWTON_STEP, _ROUNDING = 60, 1e-11, 1e-14
 
 
 @dataclass(frozen=True)
@@ -61,41 +59,16 @@ class Column:
         return depth, slope
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
-        """See `Profile.evaporation`; Newton's method on log flux, bracketed.
+        """See `Profile.evaporation`; by `reach.invert`.
 
         Nothing rises where the water table lies deeper than the suction at the top reaches.
 
         Raises
         ------
         ArithmeticError
-            Newton's method did not settle.
+            It did not settle.
         """
-        wanted = np.atleast_1d(np.asarray(depth_m, dtype=np.float64))
-        grid = np.ldexp(1.0, np.arange(_LEAST_OCTAVE, _GREATEST_OCTAVE))
-        known = self.depth(grid)[0]
-        lifts = wanted < self.suction_m
-        target = np.where(lifts, wanted, known[grid.size // 2])
-        place = np.clip(np.searchsorted(-known, -target), 1, grid.size - 1)
-        low, high = np.log(grid[place - 1]), np.log(grid[place])
-        log = (low + high) / 2
-        for _ in range(_NEWTON_LIMIT):
-            found, slope = self.depth(np.exp(log))
-            deeper = found > target
-            low, high = np.where(deeper, log, low), np.where(deeper, high, log)
-            moved = log - (found - target) / (np.exp(log) * slope)
-            # The slope jumps at interfaces: a step out of the bracket is halved instead.
-            moved = np.where((moved >= low) & (moved <= high), moved, (low + high) / 2)
-            settled = np.abs(moved - log) < _NEWTON_STEP
-            settled |= np.abs(found - target) < _ROUNDING * target
-            log = moved
-            if settled.all():
-                break
-        else:
-            raise ArithmeticError(
-                f"layered column: no flux found for depth {target[~settled][0]!r} m of {self}"
-            )
-        flux = np.exp(log)
-        return np.where(lifts, flux, 0.0), np.where(lifts, 1.0 / slope, 0.0)
+        return invert(self.depth, depth_m, self.suction_m)
 
 
 @dataclass(frozen=True)

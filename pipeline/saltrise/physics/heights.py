@@ -21,29 +21,14 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.physics.reach import Conductor, Panels, tail
+
 Floats = NDArray[np.float64]
 
-_LEAST_M, _GREATEST_M = 1e-14, 1e16
-"""Suctions between which the integral is by quadrature; below nothing, above a power law."""
-
-_PANEL, _POINTS = 0.25, 10
-"""Width of a panel in log suction and Gauss-Legendre points in it: the integrand's poles lie pi/n
-off the axis for K ~ h^-n, so up to n = 15 a panel errs by less than 1e-11 of itself."""
+_LEAST_M = 1e-14
+"""Suction that counts as saturated."""
 
 _NEWTON_LIMIT, _NEWTON_STEP = 12, 1e-14
-
-
-class Conductor(Protocol):
-    """A soil's conductivity."""
-
-    @property
-    def anchor_m(self) -> float:
-        """Suction [m] where the law's slope breaks, or any inside it where none does."""
-        ...  # pragma: no cover
-
-    def conductivity(self, suction_m: Floats) -> Floats:
-        """Conductivity [mm/day] at suctions [m] > 0."""
-        ...  # pragma: no cover
 
 
 class Heights(Protocol):
@@ -70,14 +55,10 @@ class QuadratureHeights:
 
     def __init__(self, soil: Conductor, flux_mm_per_day: Floats) -> None:
         self._soil, self._flux = soil, flux_mm_per_day
-        back = math.ceil(math.log(soil.anchor_m / _LEAST_M) / _PANEL)
-        self._first = math.log(soil.anchor_m) - _PANEL * back
-        self._panels = math.ceil((math.log(_GREATEST_M) - self._first) / _PANEL)
-        points, weights = np.polynomial.legendre.leggauss(_POINTS)
-        self._points, self._weights = 0.5 + 0.5 * points, 0.5 * weights
-        edges = self._first + _PANEL * np.arange(self._panels)
-        head = np.exp(edges[:, np.newaxis] + _PANEL * self._points)
-        area = head * (_PANEL * self._weights)
+        panels = Panels(soil)
+        self._first, self._width, self._panels = panels.first, panels.width, panels.count
+        self._points, self._weights = panels.points, panels.weights
+        head, area = panels.nodes(panels.edges())
         conductivity = soil.conductivity(head)
         shape = (flux_mm_per_day.size, self._panels + 1)
         self._height, self._rest = np.zeros(shape), np.zeros(shape)
@@ -88,18 +69,10 @@ class QuadratureHeights:
                 np.cumsum(part.sum(axis=1), out=self._height[k, 1:])
                 part *= 1.0 - share
                 np.cumsum(part.sum(axis=1), out=self._rest[k, 1:])
-        self._set_tail()
-
-    def _set_tail(self) -> None:
-        """Beyond the last panel K is a power of h, and far below the flux."""
-        end = math.exp(self._first + _PANEL * self._panels)
-        last, before = self._soil.conductivity(np.array([end, end / 2]))
-        self._end = end
-        if last <= 0.0:
-            self._power, self._tail = 2.0, np.zeros(self._flux.size)
-            return
-        self._power = math.log2(before / last)
-        self._tail = end * last / (self._flux * (self._power - 1.0))
+        # Beyond the last panel K is a power of h, and far below the flux.
+        self._end = math.exp(self._first + self._width * self._panels)
+        self._power, beyond = tail(soil, self._end)
+        self._tail = beyond / flux_mm_per_day
 
     def at(self, suction_m: Floats) -> tuple[Floats, Floats]:
         """See `Heights.at`."""
@@ -134,15 +107,15 @@ class QuadratureHeights:
         far = panel >= self._panels
         panel = np.minimum(panel, self._panels - 1)
         rows = np.arange(wanted.size)
-        start = self._first + _PANEL * panel
+        start = self._first + self._width * panel
         beyond = wanted - self._height[rows, panel]
         whole = self._height[rows, panel + 1] - self._height[rows, panel]
-        log = start + _PANEL * np.clip(beyond / whole, 0.0, 1.0)
+        log = start + self._width * np.clip(beyond / whole, 0.0, 1.0)
         settled = far | wet
         for _ in range(_NEWTON_LIMIT):
             part = self._part(log, start)[0]
             step = (part - beyond) / (np.exp(log) * self.share(np.exp(log)))
-            moved = np.clip(log - step, start, start + _PANEL)
+            moved = np.clip(log - step, start, start + self._width)
             change = np.abs(moved - log)
             # What has settled stays: no flux's answer depends on which others are asked for.
             log = np.where(settled, log, moved)
@@ -162,8 +135,8 @@ class QuadratureHeights:
         return self.share(np.zeros(self._flux.size))
 
     def _place(self, log: Floats) -> tuple[NDArray[np.intp], NDArray[np.intp], Floats]:
-        panel = np.clip((log - self._first) // _PANEL, 0, self._panels - 1).astype(np.intp)
-        start: Floats = self._first + _PANEL * panel.astype(np.float64)
+        panel = np.clip((log - self._first) // self._width, 0, self._panels - 1).astype(np.intp)
+        start: Floats = self._first + self._width * panel.astype(np.float64)
         return np.arange(log.size), panel, start
 
     def _part(self, log: Floats, start: Floats) -> tuple[Floats, Floats]:

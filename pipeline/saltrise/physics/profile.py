@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from saltrise.physics import laws, van_genuchten
 from saltrise.physics.heights import ExponentialHeights, Heights, QuadratureHeights
+from saltrise.physics.reach import invert, reach
 
 Floats = NDArray[np.float64]
 
@@ -58,11 +59,11 @@ class Campbell:
 
     @property
     def anchor_m(self) -> float:
-        """See `heights.Conductor`."""
+        """See `reach.Conductor`."""
         return self.air_entry_m
 
     def conductivity(self, suction_m: Floats) -> Floats:
-        """See `heights.Conductor`; by `laws.conductivity`."""
+        """See `reach.Conductor`; by `laws.conductivity`."""
         return laws.conductivity(suction_m, *self._parameters)
 
     def drained(self, suction_m: Floats) -> Floats:
@@ -104,11 +105,11 @@ class VanGenuchten:
 
     @property
     def anchor_m(self) -> float:
-        """See `heights.Conductor`."""
+        """See `reach.Conductor`."""
         return 1.0 / self.alpha_per_m
 
     def conductivity(self, suction_m: Floats) -> Floats:
-        """See `heights.Conductor`; by `van_genuchten.relative_conductivity`."""
+        """See `reach.Conductor`; by `van_genuchten.relative_conductivity`."""
         relative = van_genuchten.relative_conductivity(suction_m, self.alpha_per_m, self.n)
         return self.ks_mm_per_day * relative
 
@@ -122,14 +123,12 @@ class VanGenuchten:
         return QuadratureHeights(self, flux_mm_per_day)
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
-        """See `Profile.evaporation`; by `van_genuchten.max_evaporation`."""
-        return van_genuchten.max_evaporation(depth_m, self.alpha_per_m, self.n, self.ks_mm_per_day)
+        """See `Profile.evaporation`; by `reach.invert`."""
+        return invert(self.depth, depth_m)
 
     def depth(self, flux_mm_per_day: Floats) -> tuple[Floats, Floats]:
-        """See `Profile.depth`; by `van_genuchten.rise_depth`."""
-        return van_genuchten.rise_depth(
-            flux_mm_per_day, self.alpha_per_m, self.n, self.ks_mm_per_day
-        )
+        """See `Profile.depth`; by `reach.reach`."""
+        return reach(self, flux_mm_per_day)
 
 
 def _pores(soil: Campbell | VanGenuchten) -> float:
@@ -151,11 +150,11 @@ class GardnerPower:
 
     @property
     def anchor_m(self) -> float:
-        """See `heights.Conductor`."""
+        """See `reach.Conductor`."""
         return self.c ** (1.0 / self.n) if self.c > 0.0 else 1.0
 
     def conductivity(self, suction_m: Floats) -> Floats:
-        """See `heights.Conductor`."""
+        """See `reach.Conductor`."""
         with np.errstate(over="ignore"):
             return self.a / (suction_m**self.n + self.c)
 

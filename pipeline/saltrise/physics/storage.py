@@ -14,24 +14,15 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.physics.reach import Conductor, Panels
+
 Floats = NDArray[np.float64]
 
-_LEAST_M, _GREATEST_M = 1e-9, 1e12
-_PANEL, _POINTS = 0.25, 10
 _MM_PER_M = 1000.0
 
 
-class Retainer(Protocol):
+class Retainer(Conductor, Protocol):
     """A soil with conductivity and retention."""
-
-    @property
-    def anchor_m(self) -> float:
-        """Suction [m] where the laws' slopes break."""
-        ...  # pragma: no cover
-
-    def conductivity(self, suction_m: Floats) -> Floats:
-        """Conductivity [mm/day] at suctions [m] > 0."""
-        ...  # pragma: no cover
 
     def drained(self, suction_m: Floats) -> Floats:
         """Water content below saturation [-] at suctions [m] > 0."""
@@ -47,15 +38,11 @@ class Drainage:
 
     def __init__(self, soil: Retainer, flux_mm_per_day: Floats) -> None:
         self._soil, self._flux = soil, flux_mm_per_day
-        back = math.ceil(math.log(soil.anchor_m / _LEAST_M) / _PANEL)
-        self._first = math.log(soil.anchor_m) - _PANEL * back
-        self._panels = math.ceil((math.log(_GREATEST_M) - self._first) / _PANEL)
-        points, weights = np.polynomial.legendre.leggauss(_POINTS)
-        self._points, self._weights = 0.5 + 0.5 * points, 0.5 * weights
-        edges = self._first + _PANEL * np.arange(self._panels)
-        head = np.exp(edges[:, np.newaxis] + _PANEL * self._points)
-        drained = head * (_PANEL * self._weights) * soil.drained(head)
-        conductivity = soil.conductivity(head)
+        panels = Panels(soil)
+        self._first, self._width, self._panels = panels.first, panels.width, panels.count
+        self._points, self._weights = panels.points, panels.weights
+        head, area = panels.nodes(panels.edges())
+        drained, conductivity = area * soil.drained(head), soil.conductivity(head)
         self._sum = np.zeros((flux_mm_per_day.size, self._panels + 1))
         with np.errstate(divide="ignore", over="ignore"):
             for k, flux in enumerate(flux_mm_per_day):
@@ -65,10 +52,10 @@ class Drainage:
     def to(self, suction_m: Floats, row: NDArray[np.intp]) -> Floats:
         """Water [m] drained between the water table and suctions [m] under the fluxes of some
         rows; none below it."""
-        end = math.exp(self._first + _PANEL * self._panels)
+        end = math.exp(self._first + self._width * self._panels)
         inside = np.log(np.clip(suction_m, math.exp(self._first), end))
-        panel = np.clip((inside - self._first) // _PANEL, 0, self._panels - 1).astype(np.intp)
-        start = self._first + _PANEL * panel
+        panel = np.clip((inside - self._first) // self._width, 0, self._panels - 1).astype(np.intp)
+        start = self._first + self._width * panel
         width = (inside - start)[:, np.newaxis]
         head = np.exp(start[:, np.newaxis] + width * self._points)
         with np.errstate(divide="ignore", over="ignore"):
