@@ -23,7 +23,7 @@ _PANEL, _POINTS = 0.25, 10
 """Widest panel in log suction and Gauss-Legendre points in it: the integrand's poles lie pi/n
 off the axis for K ~ h^-n, so up to n = 15 a panel errs by less than 1e-11 of itself."""
 
-_LEAST_OCTAVE, _GREATEST_OCTAVE = -100, 60
+_LEAST_OCTAVE, _GREATEST_OCTAVE = -300, 60
 _NEWTON_LIMIT, _NEWTON_STEP, _ROUNDING = 60, 1e-11, 1e-14
 
 
