@@ -21,6 +21,10 @@ from saltrise.physics.reach import invert
 Floats = NDArray[np.float64]
 
 
+_LEAST_OCTAVE = -100
+"""Below 1e-30 mm/day a march would run out of numbers."""
+
+
 @dataclass(frozen=True)
 class Column:
     """Soils from the top down to the water table, wherever it stands.
@@ -68,7 +72,7 @@ class Column:
         ArithmeticError
             It did not settle.
         """
-        return invert(self.depth, depth_m, self.suction_m)
+        return invert(self.depth, depth_m, self.suction_m, _LEAST_OCTAVE)
 
 
 @dataclass(frozen=True)

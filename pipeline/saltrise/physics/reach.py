@@ -118,7 +118,10 @@ def reach(
 
 
 def invert(
-    depth_of: Callable[[Floats], tuple[Floats, Floats]], depth_m: Floats, most_m: float = math.inf
+    depth_of: Callable[[Floats], tuple[Floats, Floats]],
+    depth_m: Floats,
+    most_m: float = math.inf,
+    least_octave: int = _LEAST_OCTAVE,
 ) -> tuple[Floats, Floats]:
     """Flux [mm/day] that reaches depths, and its slope [mm/day/m]: the inverse of `depth_of`.
 
@@ -132,6 +135,8 @@ def invert(
         Depths > 0.
     most_m : float
         Depth from which on nothing rises.
+    least_octave : int
+        Fluxes are sought from 2 to this power on [mm/day].
 
     Raises
     ------
@@ -139,7 +144,7 @@ def invert(
         It did not settle.
     """
     wanted = np.atleast_1d(np.asarray(depth_m, dtype=np.float64))
-    grid = np.ldexp(1.0, np.arange(_LEAST_OCTAVE, _GREATEST_OCTAVE))
+    grid = np.ldexp(1.0, np.arange(least_octave, _GREATEST_OCTAVE))
     known = depth_of(grid)[0]
     lifts = wanted < most_m
     target = np.where(lifts, wanted, known[grid.size // 2])
