@@ -9,10 +9,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.engine.account import parameters
 from saltrise.engine.config import read_settings
 from saltrise.engine.inputs import key_of
 from saltrise.engine.region import Opened, Region, make_recipe, open_region
-from saltrise.engine.soils import occurring, profile_of
+from saltrise.engine.soils import Occurring, occurring, profile_of
 from saltrise.engine.survey import BlockScan, Sighting
 from saltrise.errors import InputError
 from saltrise.io.align import BlockReader
@@ -21,10 +22,13 @@ from saltrise.io.regrid import crs_text, point_in
 from saltrise.layers import BASIC
 from saltrise.physics.column import Column
 from saltrise.physics.curve import SURFACE_DEPTH_M
+from saltrise.physics.fraction_soils import profile_of_fractions
 from saltrise.physics.laws import closed_form_evaporation, gardner_limiting_rate
 from saltrise.physics.profile import Campbell, GardnerPower, Profile
+from saltrise.physics.regressions import METHODS
 from saltrise.physics.soils import NOT_SOIL, TEXTURES, soil_for
 from saltrise.physics.stacks import stack_keys
+from saltrise.physics.texture import fractions_in_percent
 from saltrise.recipe import CellResult, Recipe, compute_cells, converted
 from saltrise.settings import Settings
 
@@ -116,7 +120,7 @@ class Explainer:
         missing = [key_of(role) for role, value in values.items() if not np.isfinite(value)]
         if missing:
             return {"masked": f"no value in {', '.join(missing)}"}
-        names = [self._texture(values, end) for end in self._opened.inputs.layers]
+        names = self._names(values)
         if NOT_SOIL in names:
             return {"texture": ", ".join(names), "masked": f'mapped to "{NOT_SOIL}"'}
         region = self._region(names, values.get("root_depth", 0.0))
@@ -124,7 +128,7 @@ class Explainer:
         cell = {role: np.array([[value]]) for role, value in values.items()}
         result = compute_cells(recipe, cell, (1, 1))
         return (
-            self._soil(region, names)
+            self._soil(region, names, values)
             | self._water(region, recipe, cell)
             | {
                 "target_load_t_per_ha_per_year": self._settings.hazard.target_load,
@@ -135,6 +139,34 @@ class Explainer:
                 "hazard_scheme": region.scheme.title,
             }
         )
+
+    def _names(self, values: dict[str, float]) -> list[str]:
+        """Texture classes of the cell's layers; none where a regression takes the fractions."""
+        if self._settings.soil.method != "classes":
+            return []
+        return [self._texture(values, end) for end in self._opened.inputs.layers]
+
+    def _profile(self, region: Region, values: Mapping[str, float]) -> Profile | Column:
+        """The cell's soil as the exact solution takes it."""
+        settings = self._settings
+        if settings.soil.method == "classes":
+            return profile_of(settings, region.sets[0], region.soils.stacks[0])
+        soil = self._regressed(values)
+        if settings.root_zone is None:
+            return soil
+        return Column((soil,), (), settings.root_zone.suction)
+
+    def _regressed(self, values: Mapping[str, float]) -> Profile:
+        arrays = {role: np.array([value]) for role, value in values.items()}
+        sand, clay, wrong = fractions_in_percent(
+            arrays["sand"], arrays["clay"], arrays.get("silt"), self._opened.inputs.fraction_divisor
+        )
+        if wrong[0]:
+            raise InputError(self._settings.fault("soil.sand", "fractions that cannot be here"))
+        method = self._settings.soil.method
+        given = {"sand": float(sand[0]), "clay": float(clay[0])}
+        needs = METHODS[method].needs
+        return profile_of_fractions(method, given | ({needs: values[needs]} if needs else {}))
 
     def _texture(self, values: dict[str, float], end: str) -> str:
         """Texture class of a layer of the cell."""
@@ -151,6 +183,10 @@ class Explainer:
     def _region(self, names: Sequence[str], root_m: float) -> Region:
         """A region in which only this cell's soils occur; its curve has the nodes of a run's."""
         opened, inputs = self._opened, self._opened.inputs
+        if not names:
+            seen = BlockScan({}, {}, 1)
+            soils = Occurring((), {})
+            return Region(self._settings, inputs, seen, (), soils, opened.scheme, None, ())
         numbers = [np.array([TEXTURES.index(name)], dtype=np.int64) for name in names]
         seen = BlockScan({}, {}, 1, {}, {(int(stack_keys(numbers)[0]), root_m): 1})
         if not inputs.stacked:
@@ -159,7 +195,17 @@ class Explainer:
         soils = occurring(self._settings, inputs, seen)
         return Region(self._settings, inputs, seen, opened.sets, soils, opened.scheme, None, ())
 
-    def _soil(self, region: Region, names: Sequence[str]) -> Answer:
+    def _soil(self, region: Region, names: Sequence[str], values: dict[str, float]) -> Answer:
+        if not names:
+            method = METHODS[self._settings.soil.method]
+            soil = vars(self._regressed(values)) | {"source": method.source}
+            used = parameters(region, ())
+            return {
+                "texture": "fractions",
+                "parameter_set": used["set"],
+                "conductivity": used["conductivity"],
+                "parameters": soil,
+            }
         soils, stack = region.sets[0], region.soils.stacks[0]
         edges = (0.0, *self._settings.soil.bottoms)
         rows = [soil_for(soils, name) for name in names]
@@ -180,7 +226,7 @@ class Explainer:
     def _water(self, region: Region, recipe: Recipe, cell: dict[str, Array]) -> Answer:
         """Depth, salinity and demand, of the year or of each season, and what the soil lifts."""
         root = float(cell["root_depth"][0, 0]) if "root_depth" in cell else 0.0
-        profile = profile_of(self._settings, region.sets[0], region.soils.stacks[0])
+        profile = self._profile(region, {role: float(v[0, 0]) for role, v in cell.items()})
         seasons = []
         for season, water in zip(recipe.seasons, converted(recipe, cell), strict=True):
             depth = float(water.depth[0, 0])

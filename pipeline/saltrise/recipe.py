@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from saltrise.layers import season_layer
+from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, capped
 from saltrise.physics.salt import Curves, critical_depth, effective_depth, salt_load
 from saltrise.physics.year import Part, net_demand
@@ -191,17 +192,15 @@ def compute_cells(
         missing["no_root_depth"] = ~np.isfinite(root)
     valid, counts = _masked(missing, shape)
     counts |= soil.counts
-    cells = soil.cells
     if not valid.all():
         # Harmless numbers where there is no answer, so that sums may weigh them with 0.
         gone = ~valid
-        cells = recipe.soil.harmless(cells, gone)
         for water in waters:
             water.depth[gone], water.tds[gone], water.demand[gone] = 1.0, 0.0, 0.0
             water.percolation[gone] = 0.0
         if root is not None:
             root[gone] = 0.0
-    return _answer(recipe, cells, waters, root, valid, counts)
+    return _answer(recipe, soil.cells, waters, root, valid, counts)
 
 
 def _answer(
@@ -290,7 +289,7 @@ def _year(
     for season, water in zip(recipe.seasons, waters, strict=True):
         rise_m = water.depth if root is None else water.depth - root
         maximum = curves.max_evaporation(cells, rise_m)
-        if "response_time" in recipe.layers:
+        if isinstance(curves, RiseCurves) and curves.response is not None:
             days = curves.response_days(cells, rise_m)
             slow |= (days > season.days) & ~at_surface(water.depth)
             response = np.maximum(response, days)

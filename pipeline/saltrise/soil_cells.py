@@ -9,13 +9,15 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.physics.fraction_soils import soils_of
+from saltrise.physics.regressions import METHODS
 from saltrise.physics.stacks import BASE, MASK, MISSING, UNKNOWN, ClassCodes, Numbers, stack_keys
-from saltrise.physics.texture import class_of_fractions
+from saltrise.physics.texture import class_of_fractions, fractions_in_percent
 
 Array = NDArray[np.float64]
 
-MASKED, UNKNOWN_STACK = -1, -2
-"""Profiles of keys whose cells have no soil, and of keys that the survey did not see."""
+UNKNOWN_STACK = -1
+"""Profile of keys that the survey did not see."""
 
 DENSE = 1 << 24
 """Keys that a table by key may span; beyond it keys are searched for."""
@@ -27,7 +29,8 @@ class UnmappedCodeError(ValueError):
 
 @dataclass(frozen=True)
 class SoilCells:
-    """Soils of some cells: `cells` as the curves take them, and where there are none.
+    """Soils of some cells: `cells` as the curves take them, some soil or other where there is
+    none, and where that is.
 
     `counts` are numbers of cells to report.
     """
@@ -43,10 +46,6 @@ class Soil(Protocol):
 
     def cells(self, given: Mapping[str, Array]) -> SoilCells:
         """Soils of some cells from inputs by role, in the config's units."""
-        ...  # pragma: no cover
-
-    def harmless(self, cells: Any, gone: NDArray[np.bool_]) -> Any:
-        """The cells with some soil or other where there is no answer."""
         ...  # pragma: no cover
 
 
@@ -100,13 +99,8 @@ class ClassSoil:
             unknown |= layer == UNKNOWN
         if unknown.any():
             raise UnmappedCodeError(self._unknown(given, unknown))
-        profile[masked] = MASKED
+        profile[masked] = 0
         return SoilCells(profile, missing, masked, {})
-
-    def harmless(self, cells: NDArray[np.int32], gone: NDArray[np.bool_]) -> NDArray[np.int32]:
-        """See `Soil.harmless`."""
-        cells[gone] = 0
-        return cells
 
     def _look_up(self, key: Numbers) -> NDArray[np.int32]:
         if self.keys is None:
@@ -135,6 +129,47 @@ class ClassSoil:
         codes = [self._texture(given, end)[unknown].flat[0] for end in self.layers]
         shown = ", ".join(f"{code:g}" for code in codes)
         return f"texture code {shown} is not mapped or was not there when the run began"
+
+
+@dataclass(frozen=True)
+class FractionSoil:
+    """Parameters cell by cell from fractions, by a published regression.
+
+    `method` is a name of `regressions.METHODS`, `fraction_divisor` goes from the unit of sand,
+    clay and silt to %.
+    """
+
+    method: str
+    fraction_divisor: float
+
+    def cells(self, given: Mapping[str, Array]) -> SoilCells:
+        """See `Soil.cells`.
+
+        Raises
+        ------
+        UnmappedCodeError
+            Fractions do not add up.
+        """
+        sand, clay, wrong = fractions_in_percent(
+            given["sand"], given["clay"], given.get("silt"), self.fraction_divisor
+        )
+        if wrong.any():
+            raise UnmappedCodeError("sand, clay and silt do not add up")
+        inputs = {"sand": sand, "clay": clay}
+        needs = METHODS[self.method].needs
+        if needs:
+            inputs[needs] = given[needs]
+        missing = np.isnan(sand) | np.isnan(clay)
+        for values in inputs.values():
+            missing |= np.isnan(values)
+        if missing.any():
+            inputs = {r: np.where(missing, _ANY_SOIL[r], values) for r, values in inputs.items()}
+        found = soils_of(self.method, inputs)
+        outside = int(np.count_nonzero(found.outside & ~missing))
+        return SoilCells(found.cells, missing, np.zeros_like(missing), {"outside_range": outside})
+
+
+_ANY_SOIL = {"sand": 40.0, "clay": 20.0, "organic_matter": 2.0, "bulk_density": 1.4}
 
 
 def fractions(given: Mapping[str, Array], end: str) -> dict[str, Array]:

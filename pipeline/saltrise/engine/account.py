@@ -16,6 +16,7 @@ from saltrise.engine.inputs import key_of
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
 from saltrise.layers import layer_of
+from saltrise.physics.regressions import METHODS
 from saltrise.physics.soils import SoilRow, SoilSet, soil_for
 from saltrise.zonal import REGION
 from saltrise.zone_table import OVER_SUPPLY, region_figures, set_loads
@@ -49,7 +50,7 @@ def layer_tags(region: Region, date: datetime) -> dict[str, str]:
         "TIFFTAG_SOFTWARE": f"saltrise {version('saltrise')}",
         "TIFFTAG_DATETIME": date.strftime("%Y:%m:%d %H:%M:%S"),
         "TITLE": settings.title,
-        "SOIL_PARAMETERS": region.sets[0].name,
+        "SOIL_PARAMETERS": parameters(region, region.sets[:1])["set"],
         "TARGET_LOAD": f"{settings.hazard.target_load!r} t ha-1 year-1",
         "DAYS_PER_YEAR": f"{settings.days_per_year:g}",
         "PRECISION": settings.output.precision,
@@ -82,7 +83,7 @@ def run_record(
             "width": grid.width,
             "height": grid.height,
         },
-        "parameters": parameters(region, region.sets[0]),
+        "parameters": parameters(region, region.sets[:1]),
         **_several_sets(region, totals, extras),
         "hazard_scheme": asdict(region.scheme),
         "counts_cells": totals.counts,
@@ -93,7 +94,13 @@ def run_record(
             name: {"unit": layer_of(name).unit, "meaning": layer_of(name).meaning}
             for name in region.settings.layers
         },
-        "warnings": [*region.warnings, *doubts, *_slow(totals.counts), *dry],
+        "warnings": [
+            *region.warnings,
+            *doubts,
+            *_slow(totals.counts),
+            *dry,
+            *outside_warnings(region, totals.counts),
+        ],
         "use_limits": list(CAUTIONS),
         "versions": versions(),
     }
@@ -139,21 +146,50 @@ def _numbers(row: SoilRow) -> dict[str, Any]:
 
 def _several_sets(region: Region, totals: Totals, extras: Sequence[str]) -> dict[str, Any]:
     """What the choice of soil parameter set does to the region's total; nothing for one set."""
-    if len(region.sets) == 1:
+    if len(region.sets) < 2:
         return {}
     names = [soils.name for soils in region.sets]
     loads = dict(zip(names, set_loads(totals.zones, REGION, extras), strict=True))
     return {
-        "other_parameters": [parameters(region, soils) for soils in region.sets[1:]],
+        "other_parameters": [parameters(region, (soils,)) for soils in region.sets[1:]],
         "salt_load_by_set_t_per_year": loads,
     }
 
 
-def parameters(region: Region, soils: SoilSet) -> dict[str, Any]:
-    """The parameter values of a set that are used, with their sources."""
+def parameters(region: Region, sets: Sequence[SoilSet]) -> dict[str, Any]:
+    """The parameter values of a set that are used, with their sources; or the regression."""
+    if not sets:
+        name = region.settings.soil.method
+        method = METHODS[name]
+        return {
+            "set": name,
+            "title": method.source,
+            "conductivity": "saxton-rawls" if name == "saxton-rawls2006" else "campbell",
+            "ranges": {role: list(ends) for role, ends in method.ranges.items()},
+            "ranges_source": method.range_source,
+            "classes": [],
+        }
+    soils = sets[0]
     return {
         "set": soils.name,
         "title": soils.title,
         "conductivity": soils.conductivity,
         "classes": [_numbers(soil_for(soils, texture)) for texture in region.soils.textures],
     }
+
+
+def outside_warnings(region: Region, counts: dict[str, int]) -> list[str]:
+    """Cells whose fractions lie outside the regression's range."""
+    outside = counts.get("outside_range", 0)
+    if not outside:
+        return []
+    method = METHODS[region.settings.soil.method]
+    units = {"bulk_density": "g/cm3"}
+    ranges = ", ".join(
+        f"{role.replace('_', ' ')} {low:g} to {high:g} {units.get(role, '%')}"
+        for role, (low, high) in method.ranges.items()
+    )
+    return [
+        f"soil.method: {outside:,} cells lie outside the range of {region.settings.soil.method} "
+        f"({ranges}) or of what its results can mean; they are held at its edge"
+    ]

@@ -17,11 +17,10 @@ from saltrise.engine.plan import Plan
 from saltrise.engine.schedule import on_threads
 from saltrise.engine.soils import (
     Occurring,
-    class_soil,
     code_faults,
-    curves_of,
     occurring,
     soil_faults,
+    soil_of,
 )
 from saltrise.engine.survey import BlockScan, first_look, scan
 from saltrise.errors import InputError, RunError
@@ -159,7 +158,7 @@ def _references(settings: Settings) -> tuple[tuple[SoilSet, ...], Scheme]:
     faults: list[str] = code_faults(settings)
     sets: list[SoilSet] = []
     scheme = None
-    for name in settings.soil.sets:
+    for name in settings.soil.sets if settings.soil.method == "classes" else ():
         try:
             sets.append(load_soil_set(name, settings.base, settings.soil.conductivity))
         except InputError as error:
@@ -224,11 +223,11 @@ def make_recipe(region: Region) -> Recipe:
     """The parameters of the physics, from settings, survey and soil sets."""
     settings = region.settings
     water, groundwater = settings.water_table, settings.groundwater
-    curves = [curves_of(settings, soils, region.soils.stacks) for soils in region.sets]
+    curves, soil = soil_of(settings, region.inputs, region.soils, region.sets)
     return Recipe(
         curves=curves[0],
         other_curves=tuple(curves[1:]),
-        soil=class_soil(region.inputs, region.soils),
+        soil=soil,
         seasons=seasons_of(settings),
         depth_factor=float(depth_in_m(1.0, water.unit)),
         tds_factor=float(tds_in_g_per_l(1.0, groundwater.unit, groundwater.tds_per_ec)),

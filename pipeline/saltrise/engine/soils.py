@@ -6,7 +6,7 @@ import itertools
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -15,10 +15,12 @@ from saltrise.engine.survey import BlockScan
 from saltrise.errors import InputError
 from saltrise.physics.column import Column
 from saltrise.physics.curve import SURFACE_DEPTH_M, RiseCurves, build_curves
+from saltrise.physics.fraction_soils import curves_for
 from saltrise.physics.profile import Profile, retains
+from saltrise.physics.salt import Curves
 from saltrise.physics.soils import NOT_SOIL, SoilSet, soil_for
 from saltrise.physics.stacks import BASE, soils_of, stack_of
-from saltrise.soil_cells import DENSE, UNKNOWN_STACK, ClassSoil
+from saltrise.soil_cells import DENSE, UNKNOWN_STACK, ClassSoil, FractionSoil, Soil
 
 if TYPE_CHECKING:
     from saltrise.settings import Settings
@@ -183,6 +185,24 @@ def class_soil(inputs: Inputs, found: Occurring) -> ClassSoil:
     )
 
 
+def soil_of(
+    settings: Settings, inputs: Inputs, found: Occurring, sets: Sequence[SoilSet]
+) -> tuple[list[Curves[Any]], Soil]:
+    """Curves of the region's soils under each set, and how its inputs choose among them."""
+    method = settings.soil.method
+    if method == "classes":
+        curves = [curves_of(settings, soils, found.stacks) for soils in sets]
+        return [*curves], class_soil(inputs, found)
+    return [curves_for(method, top_suction(settings))], FractionSoil(
+        method, inputs.fraction_divisor
+    )
+
+
+def top_suction(settings: Settings) -> float:
+    """Suction at the top of the rise [m]: infinite where the config has no root zone."""
+    return math.inf if settings.root_zone is None else settings.root_zone.suction
+
+
 def curves_of(settings: Settings, soils: SoilSet, stacks: Sequence[Stack]) -> RiseCurves:
     """Rise curves of stacks under one parameter set."""
     response = "response_time" in settings.layers
@@ -192,7 +212,7 @@ def curves_of(settings: Settings, soils: SoilSet, stacks: Sequence[Stack]) -> Ri
 def profile_of(settings: Settings, soils: SoilSet, stack: Stack) -> Profile | Column:
     """A stack as the physics takes it: a soil that dries without limit, or a column."""
     layers = tuple(soil_for(soils, name).profile for name in stack.soils)
-    suction = math.inf if settings.root_zone is None else settings.root_zone.suction
+    suction = top_suction(settings)
     if settings.soil.layer or settings.root_zone is not None:
         return Column(layers, stack.bottoms_m, suction)
     return layers[0]

@@ -71,10 +71,10 @@ METHODS: Mapping[str, Method] = MappingProxyType(
     }
 )
 
-LEAST_WILTING, LEAST_AIR_KPA, LEAST_LARGE_PORES = 0.02, 0.1, 0.01
+LEAST_WILTING, LEAST_RATIO, LEAST_AIR_KPA, LEAST_LARGE_PORES = 0.02, 1.13, 0.1, 0.01
 """Where [2] leaves physical sense (sand without organic matter, much organic matter) its water
-content at 1500 kPa, its air-entry tension [kPa] and the pores drained at 33 kPa are held at
-these; limits of this project, counted like clamped inputs."""
+content at 1500 kPa, that at 33 kPa over it, its air-entry tension [kPa] and the pores drained at
+33 kPa are held at these; limits of this project, counted like clamped inputs."""
 
 
 def clamped(
@@ -160,6 +160,8 @@ def saxton_rawls(sand: Floats, clay: Floats, organic_matter: Floats) -> SaxtonRa
     air_kpa = tension + (0.02 * tension * tension - 0.113 * tension - 0.70)
     held = (theta_1500 < LEAST_WILTING) | (drained < LEAST_LARGE_PORES) | (air_kpa < LEAST_AIR_KPA)
     theta_1500 = np.maximum(theta_1500, LEAST_WILTING)
+    held |= theta_33 < LEAST_RATIO * theta_1500
+    theta_33 = np.maximum(theta_33, LEAST_RATIO * theta_1500)
     drained = np.maximum(drained, LEAST_LARGE_PORES)
     air_kpa = np.maximum(air_kpa, LEAST_AIR_KPA)
     b = math.log(1500.0 / 33.0) / powers.log(theta_33 / theta_1500)

@@ -32,10 +32,6 @@ class Curves(Protocol[Cells_contra]):
         """Rise [m] from which a flux [mm/day] is lifted: 0.001 to 30 m."""
         ...  # pragma: no cover
 
-    def response_days(self, cells: Cells_contra, depth_m: Floats) -> Floats:
-        """Days until a steady rise is brought about."""
-        ...  # pragma: no cover
-
 
 def salt_load(evaporation_mm: Floats, tds_g_per_l: Floats) -> Floats:
     """Gross salt rise [t/ha] = evaporation [mm] x TDS [g/L] / 100, over one and the same time."""

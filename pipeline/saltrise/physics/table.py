@@ -42,17 +42,28 @@ class Table:
 
     def look_up(self, row: Indices, value: Floats) -> Floats:
         """Interpolate; numbers beyond the table count as its ends, NaN as its low end."""
+        return self.at(row, self.locate(value))
+
+    def locate(self, value: Floats) -> tuple[NDArray[np.int64], Floats]:
+        """Interval of each number in any row, and its position there from 0 to 1."""
         low, high = (2.0**octave for octave in self.octaves)
         inside = np.where(value > low, value, low)
         np.minimum(inside, np.nextafter(high, 0.0), out=inside)
         bits = inside.view(np.int64)
         index = bits >> np.int64(_MANTISSA - self.bits)
         index -= np.int64((self.octaves[0] + 1023) << self.bits)
-        index += row.astype(np.int64) * self.intervals
         bits &= np.int64((1 << (_MANTISSA - self.bits)) - 1)
         bits <<= np.int64(self.bits)
         bits |= _ONE
         inside -= 1.0
+        return index, inside
+
+    def at(
+        self, row: Indices | NDArray[np.int64], located: tuple[NDArray[np.int64], Floats]
+    ) -> Floats:
+        """Values of rows where `locate` has placed the numbers."""
+        index, inside = located
+        index = index + row.astype(np.int64) * self.intervals
         result: Floats = self.coefficients[3].take(index)
         for k in (2, 1, 0):
             result *= inside

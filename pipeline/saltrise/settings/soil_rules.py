@@ -8,7 +8,7 @@ from typing import Any
 
 from saltrise.layers import SEVERAL_SETS
 from saltrise.physics.soils import NOT_SOIL, TEXTURES
-from saltrise.settings.values import Fault, is_number
+from saltrise.settings.values import Fault, is_number, not_negative
 
 _FRACTIONS = ("sand", "clay", "silt")
 _OF_FRACTIONS = (*_FRACTIONS, "unit", "method", "organic_matter", "bulk_density")
@@ -120,7 +120,10 @@ def _bottoms(layers: list[dict[str, Any]]) -> list[Fault]:
 
 def _method(table: dict[str, Any]) -> list[Fault]:
     method = table.get("method", "classes")
-    faults: list[Fault] = []
+    faults: list[Fault] = [
+        *not_negative(table, "soil", "organic_matter"),
+        *not_negative(table, "soil", "bulk_density"),
+    ]
     for name, (key, what) in _NEEDS.items():
         if method == name and key not in table:
             faults.append((("soil", key), f"missing; method {name!r} needs {what}"))
