@@ -180,5 +180,5 @@ def test_settings_that_cannot_be(tmp_path: Path, soil: dict, message: str) -> No
 
 def test_response_time_needs_classes(tmp_path: Path) -> None:
     config = write(tmp_path, {"method": "cosby1984"}, output={"layers": ["response_time"]})
-    with pytest.raises(InputError, match="response_time.*method 'cosby1984' does not give"):
+    with pytest.raises(InputError, match=r"response_time.*method 'cosby1984' does not give"):
         saltrise.run(config)

@@ -18,6 +18,8 @@ import reference
 import saltrise
 from saltrise.engine.config import read_settings
 from saltrise.grid import Grid, cell_areas
+from saltrise.io.soil_tables import load_soil_set
+from saltrise.physics.column import Column
 from saltrise.result import Result
 
 ROOT = Path(__file__).parents[1]
@@ -36,14 +38,18 @@ def pasted(name: str) -> np.ndarray:
     return np.block([[tile(i, j) for j in range(2)] for i in range(2)])
 
 
-@pytest.fixture(scope="module")
-def demo(tmp_path_factory: pytest.TempPathFactory) -> Result:
-    found = read_settings(ROOT / "config" / "velith.toml")
+def run_demo(folder: Path, config: str) -> Result:
+    found = read_settings(ROOT / "config" / config)
     output = found.tables.output.model_copy(
-        update={"folder": str(tmp_path_factory.mktemp("demo") / "velith"), "precision": "full"}
+        update={"folder": str(folder / "out"), "precision": "full"}
     )
     tables = found.tables.model_copy(update={"output": output})
     return saltrise.run(type(found)(tables, found.source, found.base, found.lines))
+
+
+@pytest.fixture(scope="module")
+def demo(tmp_path_factory: pytest.TempPathFactory) -> Result:
+    return run_demo(tmp_path_factory.mktemp("demo"), "velith.toml")
 
 
 def test_the_files_are_small_and_lie_over_open_ocean() -> None:
@@ -139,3 +145,30 @@ def test_the_demo_is_believable(demo: Result) -> None:
     ranks = list(demo.zones["rank"])
     assert sum(rank is not None and rank == rank for rank in ranks) >= 10
     assert min(demo.zones["area_ha"]) < 2 < max(demo.zones["area_ha"])
+
+
+def test_the_demo_of_seasons_worked_by_hand(tmp_path: Path) -> None:
+    """Layers, roots, seasons and mulch of config/velith_seasons.toml, by the exact solution."""
+    result = run_demo(tmp_path, "velith_seasons.toml")
+    depth, codes, salt = (
+        pasted(name).astype(float) for name in ("water_table_depth", "texture", "groundwater_ec")
+    )
+    load, most = (result.layer(name)[0] for name in ("salt_load", "max_evaporation"))
+    soils = {t: row.profile for t, row in load_soil_set("rawls1982", ROOT).rows.items()}
+    years = [(150, None, 900 * 150 / 365 * 0.9 - 180), (35, 0.7, 1650 * 35 / 365 * 0.9 - 250)]
+    years.append((180, None, 2450 * 180 / 365 * 0.9 - 620))
+    places = np.argwhere(~np.ma.getmaskarray(load) & (depth > 0.3))
+    for row, col in np.random.default_rng(3).choice(places, 20, replace=False):
+        stack = (soils[TEXTURE[codes[row, col]]], soils["silt loam"], soils["loamy sand"])
+        column = Column(stack, (0.6 - 0.25, 1.8 - 0.25), 5.0)
+        brought = mean = 0.0
+        for days, own, demand in years:
+            rise = max((own or depth[row, col]) - 0.25, 0.001)
+            rate = float(column.evaporation(np.array([rise]))[0][0])
+            brought += min(rate * days, max(demand, 0.0))
+            mean += rate * days / 365
+        tds = four_neighbours(salt, row, col) * 0.64
+        assert load[row, col] == pytest.approx(brought * tds / 100, rel=1.1e-4, abs=1e-6)
+        assert most[row, col] == pytest.approx(mean, rel=1.1e-4, abs=1e-6)
+    folders = [path.name for path in (result.folder / "layers").iterdir() if path.is_dir()]
+    assert sorted(folders) == ["season-fallow", "season-growing", "season-leaching"]

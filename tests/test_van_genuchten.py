@@ -106,3 +106,22 @@ def test_depth_and_evaporation_are_inverse_and_monotone(alpha: float, n: float, 
     near = VanGenuchten(alpha, n, ks).evaporation(depths * 1.0001)[0]
     far = VanGenuchten(alpha, n, ks).evaporation(depths * 0.9999)[0]
     np.testing.assert_allclose(slope, (near - far) / (depths * 0.0002), rtol=1e-5)
+
+
+SHAH = {
+    "sand": 50,
+    "loamy sand": 70,
+    "sandy loam": 130,
+    "loam": 265,
+    "silt loam": 420,
+    "silt": 430,
+}
+
+
+@pytest.mark.parametrize("texture", SHAH)
+def test_extinction_depths_of_shah_2007(texture: str) -> None:
+    """Shah, Nachabe & Ross (2007) Ground Water 45:329-338, Table 5: depth [cm] at which bare-soil
+    evaporation falls to 0.5 % of the potential rate. They simulated moving water; the steady rise
+    at 0.5 % of 5 mm/day lies within 12 % of it for these six classes."""
+    depth = ROWS[texture].profile.depth(np.array([0.005 * 5.0]))[0][0] * 100
+    assert depth == pytest.approx(SHAH[texture], rel=0.12)

@@ -27,27 +27,58 @@ RASTERS = (
 )
 
 
-def make_region(folder: Path, size: int, zones: int = 0) -> Path:
+SOIL_RASTERS = (
+    ("middle", 0.0, 13.0, 83, "uint8", 0),
+    ("deep", 0.0, 13.0, 113, "uint8", 0),
+    ("sand", 7.0, 55.0, 97, "float32", -9999),
+    ("clay", 4.0, 44.0, 71, "float32", -9999),
+)
+
+_FRACTIONS = 'sand = "sand.tif"\nclay = "clay.tif"\nunit = "%"\n'
+
+SOILS = {
+    "": 'texture = "texture.tif"\n',
+    "layers": "".join(
+        f'[[soil.layer]]\n{bottom}texture = "{name}.tif"\n'
+        for bottom, name in (
+            ("bottom = 0.4\n", "texture"),
+            ("bottom = 1.2\n", "middle"),
+            ("", "deep"),
+        )
+    ),
+    "classes": _FRACTIONS,
+    "cosby1984": _FRACTIONS + 'method = "cosby1984"\n',
+    "campbell1985": _FRACTIONS + 'method = "campbell1985"\nbulk_density = 1.4\n',
+    "saxton-rawls2006": _FRACTIONS + 'method = "saxton-rawls2006"\norganic_matter = 2.5\n',
+}
+"""Tables `[soil]` to compare, by name; the first is the usual one."""
+
+
+def make_region(folder: Path, size: int, zones: int = 0, soil: str = "") -> Path:
     """Write rasters of `size` x `size` cells, `zones` zones and a config; return the config."""
     folder.mkdir(parents=True, exist_ok=True)
-    config = folder / f"region{zones}.toml"
+    config = folder / f"region{zones}{soil}.toml"
     if not (folder / "demand.tif").exists():
         for number, raster in enumerate(RASTERS):
+            _write(folder, size, np.random.default_rng(number), *raster)
+    if soil and not (folder / "clay.tif").exists():
+        for number, raster in enumerate(SOIL_RASTERS, start=len(RASTERS)):
             _write(folder, size, np.random.default_rng(number), *raster)
     table = ""
     if zones:
         _write_zones(folder / f"zones{zones}.gpkg", size, zones)
         table = f'[zones]\nfile = "zones{zones}.gpkg"\n'
     classes = "\n".join(f'{k} = "{name}"' for k, name in enumerate(CLASSES, start=1))
+    classes = f"[soil.classes]\n{classes}" if soil in ("", "layers") else ""
+    if soil == "classes":
+        classes = '[soil.classes]\nsilt = "silt loam"'
     config.write_text(
         f"""title = "Benchmark (invented)"
 [water_table]
 depth = "depth.tif"
 unit = "m"
 [soil]
-texture = "texture.tif"
-[soil.classes]
-{classes}
+{SOILS[soil]}{classes}
 [groundwater]
 salinity = "salinity.tif"
 unit = "dS/m"

@@ -28,8 +28,8 @@ CAUTIONS = (
     "sampling before acting.",
     "Upper estimate for bare soil with these parameters: steady flow to a bare surface. Vapour "
     "flow, moving water tables, roots and layering can exceed it.",
-    "Gross yearly salt rise from groundwater, not the net salt balance and not a river load: "
-    "rain, irrigation, leaching and drainage are not subtracted.",
+    "Gross yearly salt rise from groundwater, not the net salt balance and not a river load: salt "
+    "that rain, irrigation and drainage leach is not subtracted.",
     "Hazard is the potential for salt to rise; it is not risk, which needs what stands there.",
     "The choice of soil parameter set can change the answer by a factor of ten or more.",
     "Local codes, standards and licensed practice take precedence.",

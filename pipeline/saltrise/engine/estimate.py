@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import pickle
 import shutil
 import time
 from dataclasses import dataclass
@@ -59,9 +60,10 @@ def estimate_cost(plan: Plan, workers: int) -> Estimate:
     stored = sum(5 if name == "hazard_class" else 4 for name in plan.layers)
     tile_gb = min(plan.tile**2, cells) * stored * 2 / 1e9
     block_gb = grid.block**2 * 8 * _BLOCK_COPIES / 1e9
+    curves_gb = len(pickle.dumps(plan.recipe, protocol=5)) / 1e9
     return Estimate(
         tiles=len(plan.tiles()),
-        memory_gb=_LIBRARIES_GB + workers * (tile_gb + block_gb),
+        memory_gb=_LIBRARIES_GB + curves_gb + workers * (tile_gb + block_gb),
         scratch_gb=scratch,
         final_gb=scratch * _OVERVIEWS,
         seconds=spent * cells / sampled / workers * (1 + _ASSEMBLY),

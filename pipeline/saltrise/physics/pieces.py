@@ -178,7 +178,8 @@ class Marches:
         """Response time [days] at an argument, the water table standing in layer k."""
         tops = (0.0, *column.bottoms_m[:k])
         # Every other flux is enough for what is read as an order of magnitude.
-        pick = np.flatnonzero((depth > tops[k] * (1.0 + _APART)) & (depth < column.suction_m))[::-2]
+        reach = column.suction_m - _STRAIGHT_M
+        pick = np.flatnonzero((depth > tops[k] * (1.0 + _APART)) & (depth < reach))[::-2]
         stored, rest = np.zeros(pick.size), np.zeros(pick.size)
         still = np.zeros(pick.size, dtype=np.intp)
         for j in range(k + 1):
