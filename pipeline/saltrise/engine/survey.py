@@ -250,6 +250,9 @@ def _texture(
 def _stacks(key: NDArray[np.int64], root: Floats | None) -> dict[tuple[int, float], int]:
     """How many cells each stack has; a stack without a root depth counts for nothing."""
     if root is None:
+        if int(key.max()) < _FEW_KEYS:
+            counts = np.bincount(key.ravel())
+            return {(int(k), 0.0): int(counts[k]) for k in np.flatnonzero(counts)}
         keys, counts = np.unique(key, return_counts=True)
         return {(int(k), 0.0): int(n) for k, n in zip(keys, counts, strict=True)}
     found: dict[tuple[int, float], int] = {}
@@ -260,6 +263,9 @@ def _stacks(key: NDArray[np.int64], root: Floats | None) -> dict[tuple[int, floa
             break
     return found
 
+
+_FEW_KEYS = 1 << 18
+"""Keys that are counted rather than sorted."""
 
 MANY_STACKS = 200_000
 """A block with more stacks than this is told apart no further: far too many for any run."""

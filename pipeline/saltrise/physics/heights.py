@@ -16,12 +16,13 @@ References
 from __future__ import annotations
 
 import math
+from functools import cached_property
 from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.physics.reach import Conductor, Panels, tail
+from saltrise.physics.reach import POINTS, WEIGHTS, Conductor, nodes_in, tail
 
 Floats = NDArray[np.float64]
 
@@ -55,24 +56,27 @@ class QuadratureHeights:
 
     def __init__(self, soil: Conductor, flux_mm_per_day: Floats) -> None:
         self._soil, self._flux = soil, flux_mm_per_day
-        panels = Panels(soil)
+        panels = nodes_in(soil)[0]
         self._first, self._width, self._panels = panels.first, panels.width, panels.count
-        self._points, self._weights = panels.points, panels.weights
-        head, area = panels.nodes(panels.edges())
-        conductivity = soil.conductivity(head)
-        shape = (flux_mm_per_day.size, self._panels + 1)
-        self._height, self._rest = np.zeros(shape), np.zeros(shape)
-        with np.errstate(divide="ignore", over="ignore"):
-            for k, flux in enumerate(flux_mm_per_day):
-                share = 1.0 / (1.0 + flux / conductivity)
-                part = area * share
-                np.cumsum(part.sum(axis=1), out=self._height[k, 1:])
-                part *= 1.0 - share
-                np.cumsum(part.sum(axis=1), out=self._rest[k, 1:])
         # Beyond the last panel K is a power of h, and far below the flux.
         self._end = math.exp(self._first + self._width * self._panels)
         self._power, beyond = tail(soil, self._end)
         self._tail = beyond / flux_mm_per_day
+
+    @cached_property
+    def _sums(self) -> tuple[Floats, Floats]:
+        """Height, and flux times its slope with the sign turned, at the edges of the panels."""
+        _, _, area, conductivity = nodes_in(self._soil)
+        shape = (self._flux.size, self._panels + 1)
+        height, rest = np.zeros(shape), np.zeros(shape)
+        with np.errstate(divide="ignore", over="ignore"):
+            for k, flux in enumerate(self._flux):
+                share = 1.0 / (1.0 + flux / conductivity)
+                part = area * share
+                np.cumsum(part.sum(axis=1), out=height[k, 1:])
+                part *= 1.0 - share
+                np.cumsum(part.sum(axis=1), out=rest[k, 1:])
+        return height, rest
 
     def at(self, suction_m: Floats) -> tuple[Floats, Floats]:
         """See `Heights.at`."""
@@ -80,8 +84,9 @@ class QuadratureHeights:
         inside = np.where(wet, math.exp(self._first), np.minimum(suction_m, self._end))
         rows, panel, start = self._place(np.log(inside))
         height, rest = self._part(np.log(inside), start)
-        height += self._height[rows, panel]
-        rest += self._rest[rows, panel]
+        heights, rests = self._sums
+        height += heights[rows, panel]
+        rest += rests[rows, panel]
         with np.errstate(over="ignore", divide="ignore"):
             left = np.maximum(suction_m / self._end, 1.0) ** (1.0 - self._power)
         height += self._tail * (1.0 - left)
@@ -103,13 +108,14 @@ class QuadratureHeights:
         height = self.at(suction_m)[0] - distance_m
         wet = height <= 0.0
         wanted = np.where(wet, 0.0, height)
-        panel = np.clip((self._height <= wanted[:, np.newaxis]).sum(axis=1) - 1, 0, None)
+        heights = self._sums[0]
+        panel = np.clip((heights <= wanted[:, np.newaxis]).sum(axis=1) - 1, 0, None)
         far = panel >= self._panels
         panel = np.minimum(panel, self._panels - 1)
         rows = np.arange(wanted.size)
         start = self._first + self._width * panel
-        beyond = wanted - self._height[rows, panel]
-        whole = self._height[rows, panel + 1] - self._height[rows, panel]
+        beyond = wanted - heights[rows, panel]
+        whole = heights[rows, panel + 1] - heights[rows, panel]
         log = start + self._width * np.clip(beyond / whole, 0.0, 1.0)
         settled = far | wet
         for _ in range(_NEWTON_LIMIT):
@@ -126,7 +132,7 @@ class QuadratureHeights:
         return np.where(wet, height / self._saturated(), suction)
 
     def _far(self, height: Floats) -> Floats:
-        left = np.maximum(self._height[:, -1] + self._tail - height, 0.0)
+        left = np.maximum(self._sums[0][:, -1] + self._tail - height, 0.0)
         with np.errstate(divide="ignore", invalid="ignore"):
             far: Floats = self._end * (self._tail / left) ** (1.0 / (self._power - 1.0))
         return far
@@ -142,10 +148,10 @@ class QuadratureHeights:
     def _part(self, log: Floats, start: Floats) -> tuple[Floats, Floats]:
         """The integrals from a panel's start to a log suction inside it."""
         width = (log - start)[:, np.newaxis]
-        head = np.exp(start[:, np.newaxis] + width * self._points)
+        head = np.exp(start[:, np.newaxis] + width * POINTS)
         with np.errstate(divide="ignore", over="ignore"):
             share = 1.0 / (1.0 + self._flux[:, np.newaxis] / self._soil.conductivity(head))
-        area = head * (width * self._weights) * share
+        area = head * (width * WEIGHTS) * share
         return area.sum(axis=1), (area * (1.0 - share)).sum(axis=1)
 
 

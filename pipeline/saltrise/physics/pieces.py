@@ -134,10 +134,13 @@ class Marches:
     def _near(self, column: Column, k: int, flux: float) -> Floats:
         """Depths, fluxes and slopes just below a layer's top, where some laws bend sharply."""
         close = flux * (1.0 - _CLOSE)
-        march = from_top(close, column.suction_m)
-        for soil, bottom in zip(column.layers[:k], column.bottoms_m[:k], strict=True):
-            march = through(soil.heights(close), march, bottom)
-        depth, slope = water_table(column.layers[k].heights(close), march)
+        key = (column.layers[:k], column.bottoms_m[:k], column.suction_m, "near")
+        if key not in self._marches:
+            march = from_top(close, column.suction_m)
+            for soil, bottom in zip(column.layers[:k], column.bottoms_m[:k], strict=True):
+                march = through(soil.heights(close), march, bottom)
+            self._marches[key] = march
+        depth, slope = water_table(column.layers[k].heights(close), self._marches[key])
         return np.column_stack((depth, close, slope))
 
     def _last(self, column: Column, k: int, start: float) -> Piece:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from functools import lru_cache
 from typing import Protocol
 
 import numpy as np
@@ -40,6 +41,11 @@ class Conductor(Protocol):
         ...  # pragma: no cover
 
 
+_GAUSS = np.polynomial.legendre.leggauss(_POINTS)
+POINTS, WEIGHTS = 0.5 + 0.5 * _GAUSS[0], 0.5 * _GAUSS[1]
+"""Gauss-Legendre points and weights on a panel from 0 to 1."""
+
+
 class Panels:
     """Panels in log suction that fit a soil, and the quadrature's nodes in them.
 
@@ -55,8 +61,6 @@ class Panels:
         anchor = math.log(soil.anchor_m)
         self.first = anchor - self.width * math.ceil((anchor - math.log(_LEAST_M)) / self.width)
         self.count = math.ceil((math.log(_GREATEST_M) - self.first) / self.width)
-        points, weights = np.polynomial.legendre.leggauss(_POINTS)
-        self.points, self.weights = 0.5 + 0.5 * points, 0.5 * weights
 
     def edges(self) -> Floats:
         """All edges in log suction."""
@@ -66,8 +70,16 @@ class Panels:
     def nodes(self, edges: Floats) -> tuple[Floats, Floats]:
         """Suctions [m] and weights of the quadrature between edges, a row a panel."""
         wide = np.diff(edges)[:, np.newaxis]
-        head = np.exp(edges[:-1, np.newaxis] + wide * self.points)
-        return head, head * (wide * self.weights)
+        head = np.exp(edges[:-1, np.newaxis] + wide * POINTS)
+        return head, head * (wide * WEIGHTS)
+
+
+@lru_cache(maxsize=64)
+def nodes_in(soil: Conductor) -> tuple[Panels, Floats, Floats, Floats]:
+    """Panels of a soil with the suctions of all nodes, their weights and conductivities."""
+    panels = Panels(soil)
+    head, area = panels.nodes(panels.edges())
+    return panels, head, area, soil.conductivity(head)
 
 
 def tail(soil: Conductor, end_m: float) -> tuple[float, float]:

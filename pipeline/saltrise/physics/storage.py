@@ -14,7 +14,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.physics.reach import Conductor, Panels
+from saltrise.physics.reach import POINTS, WEIGHTS, Conductor, nodes_in
 
 Floats = NDArray[np.float64]
 
@@ -38,11 +38,9 @@ class Drainage:
 
     def __init__(self, soil: Retainer, flux_mm_per_day: Floats) -> None:
         self._soil, self._flux = soil, flux_mm_per_day
-        panels = Panels(soil)
+        panels, head, area, conductivity = nodes_in(soil)
         self._first, self._width, self._panels = panels.first, panels.width, panels.count
-        self._points, self._weights = panels.points, panels.weights
-        head, area = panels.nodes(panels.edges())
-        drained, conductivity = area * soil.drained(head), soil.conductivity(head)
+        drained = area * soil.drained(head)
         self._sum = np.zeros((flux_mm_per_day.size, self._panels + 1))
         with np.errstate(divide="ignore", over="ignore"):
             for k, flux in enumerate(flux_mm_per_day):
@@ -57,10 +55,10 @@ class Drainage:
         panel = np.clip((inside - self._first) // self._width, 0, self._panels - 1).astype(np.intp)
         start = self._first + self._width * panel
         width = (inside - start)[:, np.newaxis]
-        head = np.exp(start[:, np.newaxis] + width * self._points)
+        head = np.exp(start[:, np.newaxis] + width * POINTS)
         with np.errstate(divide="ignore", over="ignore"):
             share = 1.0 / (1.0 + self._flux[row, np.newaxis] / self._soil.conductivity(head))
-        part = (head * (width * self._weights) * self._soil.drained(head) * share).sum(axis=1)
+        part = (head * (width * WEIGHTS) * self._soil.drained(head) * share).sum(axis=1)
         total: Floats = self._sum[row, panel] + part
         return total
 
