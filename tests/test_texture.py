@@ -166,3 +166,16 @@ def test_faults_of_the_soil_table(tmp_path: Path, soil, classes, words) -> None:
     with pytest.raises(InputError) as caught:
         saltrise.run(regions.write_config(tmp_path, tables))
     assert words in str(caught.value)
+
+
+def test_the_table_of_squares_equals_the_rules() -> None:
+    from saltrise.physics.texture import _by_rules
+
+    random = np.random.default_rng(8)
+    clay = random.uniform(0, 100, 400_000)
+    sand = random.uniform(0, 1, 400_000) * (100 - clay)
+    # Near whole numbers too, where the edges meet.
+    clay[::2] = np.round(clay[::2]) + random.choice([-1e-10, 0.0, 1e-10], 200_000)
+    sand[::3] = np.round(sand[::3])
+    sand[5], clay[6] = np.nan, np.nan
+    np.testing.assert_array_equal(texture_class(sand, clay), _by_rules(sand, clay))
