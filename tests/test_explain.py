@@ -43,7 +43,7 @@ def centre(row: int, col: int) -> tuple[float, float]:
 def test_every_cell_equals_its_layers(region: Path) -> None:
     explainer = Explainer(region)
     layers = {}
-    for path in (region.parent / "out" / "layers").iterdir():
+    for path in (region.parent / "out" / "layers").glob("*.tif"):
         with rasterio.open(path) as dataset:
             layers[path.stem] = dataset.read(1)
     random = np.random.default_rng(3)

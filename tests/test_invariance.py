@@ -134,7 +134,7 @@ def test_the_assembled_layer_holds_what_gdals_own_driver_writes(tmp_path: Path) 
     regions.write_zones(tmp_path / "zones.gpkg", stars(random, 30_000.0))
     for way in ("copy", "gdal"):
         run(tmp_path, way, 512, 2, block=512, output={"assembly": way})
-    for path in sorted((tmp_path / "copy" / "layers").iterdir()):
+    for path in sorted((tmp_path / "copy" / "layers").glob("*.tif")):
         with (
             rasterio.open(path) as ours,
             rasterio.open(tmp_path / "gdal" / "layers" / path.name) as theirs,

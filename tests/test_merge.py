@@ -44,7 +44,7 @@ def test_blocks_without_a_cell_count_for_nothing() -> None:
 
 def test_tags_describe_the_stored_values(tmp_path: Path) -> None:
     result = saltrise.run(regions.small_region(tmp_path, (60, 70)), block=16)
-    for path in (result.folder / "layers").iterdir():
+    for path in (result.folder / "layers").glob("*.tif"):
         with rasterio.open(path) as dataset:
             stored = dataset.read(1, masked=True).compressed().astype(np.float64)
             tags = dataset.tags(1)

@@ -80,11 +80,12 @@ def test_a_run_ended_at_every_durable_step_goes_on_to_the_same_bytes(region, aga
 def test_a_run_ended_again_and_again_gets_there(region, again: Path) -> None:
     _, expected, steps = region
     ends = 0
-    # Four steps at a time: the zone tables, run.json and the last rename are done in one go.
-    while stopped_run(again, 4)[-1] != "whole":
+    # Six steps at a time: the zone tables, item.json, run.json and the last rename are done in
+    # one go.
+    while stopped_run(again, 6)[-1] != "whole":
         ends += 1
         assert ends < len(steps)
-    assert ends > len(steps) // 5
+    assert ends > len(steps) // 9
     assert same(again.parent / "out", expected)
 
 

@@ -84,7 +84,7 @@ def test_forty_cells_worked_by_hand(demo: Result) -> None:
         pasted(name).astype(float) for name in ("water_table_depth", "texture", "groundwater_ec")
     )
     layers = {}
-    for path in (demo.folder / "layers").iterdir():
+    for path in (demo.folder / "layers").glob("*.tif"):
         with rasterio.open(path) as dataset:
             layers[path.stem] = dataset.read(1)
     random = np.random.default_rng(40)

@@ -42,7 +42,7 @@ def results(tmp_path_factory: pytest.TempPathFactory) -> dict[str, saltrise.Resu
 
 def test_the_first_set_gives_the_layers(results) -> None:
     together, first = results["all"], results[SETS[0]]
-    for path in (first.folder / "layers").iterdir():
+    for path in (first.folder / "layers").glob("*.tif"):
         np.testing.assert_array_equal(
             together.layer(path.stem)[0].filled(), first.layer(path.stem)[0].filled()
         )
@@ -99,5 +99,5 @@ def test_faults_of_a_list(tmp_path: Path) -> None:
 
 def test_chosen_layers_stay_chosen(tmp_path: Path) -> None:
     result = run_with(tmp_path, SETS[:2], output={"layers": ["salt_load"]})
-    assert [p.stem for p in (result.folder / "layers").iterdir()] == ["salt_load"]
+    assert [p.stem for p in (result.folder / "layers").glob("*.tif")] == ["salt_load"]
     assert "salt_load_highest_set_t_per_year" in result.zones.columns

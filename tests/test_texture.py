@@ -109,7 +109,7 @@ def test_fractions_run_like_the_classes_they_make(tmp_path: Path, unit: str) -> 
     (tmp_path / "fractions").mkdir()
     codes = saltrise.run(regions.small_region(tmp_path / "codes"))
     fractions = saltrise.run(fraction_region(tmp_path / "fractions", unit))
-    for path in (codes.folder / "layers").iterdir():
+    for path in (codes.folder / "layers").glob("*.tif"):
         assert (fractions.folder / "layers" / path.name).exists()
         np.testing.assert_array_equal(
             fractions.layer(path.stem)[0].filled(), codes.layer(path.stem)[0].filled()

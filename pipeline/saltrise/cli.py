@@ -200,6 +200,24 @@ def explain(
 
 
 @commands.command()
+@click.argument("first", type=click.Path(path_type=Path))
+@click.argument("second", type=click.Path(path_type=Path))
+@click.option("--out", type=click.Path(path_type=Path), required=True, help="New folder to write.")
+@click.option(
+    "--depth-error",
+    type=click.FloatRange(min=0.0),
+    default=0.0,
+    metavar="M",
+    help="Depths [m] that differ by no more count as unchanged.",
+)
+def diff(first: Path, second: Path, out: Path, depth_error: float) -> None:
+    """Compare two finished runs of one grid: the SECOND folder minus the FIRST."""
+    from saltrise.compare import compare
+
+    console.print_change(compare(first, second, out, depth_error), depth_error)
+
+
+@commands.command()
 @click.argument("sets", nargs=-1)
 @click.option(
     "--compare", is_flag=True, help="Show every class under every set side by side, in mm/day."

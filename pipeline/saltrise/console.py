@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any, TextIO
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
+    from saltrise.compare import Comparison
     from saltrise.engine.estimate import Estimate
     from saltrise.engine.region import Region
     from saltrise.job import Listener
@@ -288,6 +289,29 @@ def print_comparison(
         shown = ("no row" if rate is None else f"{rate:.4g}" for rate in cells)
         row = "".join(f"{text:>{w}}" for text, w in zip(shown, widths, strict=True))
         print(f"{texture:<17}{row}")
+
+
+def print_change(found: Comparison, depth_error_m: float) -> None:
+    """Print what a comparison of two runs found."""
+    if found.differing:
+        print("The runs differ in:")
+        for text in found.differing:
+            print(f"  {text}")
+    else:
+        print("The runs have the same settings, inputs and software.")
+    before, after = found.load_t_per_year
+    change = f" ({100 * (after - before) / before:+.3g} %)" if before else ""
+    print(f"Gross salt rise on land assessed in both: {before:,.0f} to {after:,.0f} t/year{change}")
+    print(f"  worse by class  {found.worse_ha:>14,.1f} ha")
+    print(f"  better by class {found.better_ha:>14,.1f} ha")
+    print(f"  same class      {found.same_ha:>14,.1f} ha")
+    if depth_error_m > 0:
+        print(
+            f"  of the changed, {found.within_error_ha:,.1f} ha have depths that differ by no more "
+            f"than {depth_error_m:g} m, within their error"
+        )
+    print("Screening level; a change of settings or inputs changes the map as much as the land.")
+    print(f"Written to {found.folder}")
 
 
 def print_json(content: dict[str, Any]) -> None:

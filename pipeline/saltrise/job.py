@@ -12,6 +12,7 @@ from saltrise.engine.account import layer_tags, run_date, run_record, supply_war
 from saltrise.engine.assemble import assemble
 from saltrise.engine.config import read_settings
 from saltrise.engine.estimate import Estimate, estimate_cost, require_room
+from saltrise.engine.handover import hand_over
 from saltrise.engine.identity import digest, identify, versions
 from saltrise.engine.merge import Totals, merge
 from saltrise.engine.plan import Plan
@@ -39,7 +40,7 @@ from saltrise.errors import (
 )
 from saltrise.io import durable
 from saltrise.io.fingerprint import code_print
-from saltrise.io.tables import write_zones_csv
+from saltrise.io.tables import write_csv
 from saltrise.io.vectors import write_zones_gpkg
 from saltrise.result import Result
 from saltrise.settings import Settings
@@ -148,6 +149,7 @@ def _work(
     _assemble(plan, region, records, totals, beginning.date, workdir, ears)
     extras = plan.recipe.extra_sums
     worst, dry = _zones(region, totals, beginning.date, workdir, extras)
+    hand_over(region, totals, beginning.date, workdir.unfinished)
     _require_unchanged(prints)
     record = run_record(region, totals, identity["inputs"], beginning.date, worst, dry, extras)
     durable.write_json(workdir.unfinished / FINISHED, record)
@@ -286,7 +288,7 @@ def _zones(
         extras,
         zones.supply_mm_per_year,
     )
-    write_zones_csv(workdir.unfinished / "zones.csv", table)
+    write_csv(workdir.unfinished / "zones.csv", table)
     write_zones_gpkg(workdir.unfinished / "zones.gpkg", zones, table, date)
     ranked = sorted(
         (row for row, rank in enumerate(table["rank"]) if rank is not None),

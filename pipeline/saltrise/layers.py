@@ -27,12 +27,15 @@ class Layer:
     name: str
     unit: str
     meaning: str
-    dtype: Literal["float32", "uint8"]
+    dtype: Literal["float32", "uint8", "int16"]
     nodata: float
     overview: Literal["mean", "most frequent"]
     cf_name: str | None = None
     needs: Literal["", "several sets", "seasons", "retention"] = ""
     """What a config must give for the layer to exist; nothing for most."""
+    stops: tuple[float, ...] = ()
+    """Values at which the colours of `ramp` stand, the same in every run so that maps compare."""
+    ramp: tuple[str, ...] = ()
 
     @property
     def continuous(self) -> bool:
@@ -40,8 +43,27 @@ class Layer:
         return self.dtype == "float32"
 
 
-def _quantity(name: str, unit: str, meaning: str, cf_name: str | None = None) -> Layer:
-    return Layer(name, unit, meaning, "float32", NODATA, "mean", cf_name)
+# ColorBrewer 5-class ramps (Harrower & Brewer 2003, The Cartographic Journal 40(1):27-37): one hue
+# ordered by lightness, or two hues for what has a middle; they hold under colour-blindness.
+SALT = ("#ffffd4", "#fed98e", "#fe9929", "#d95f0e", "#993404")
+WATER = ("#f0f9e8", "#bae4bc", "#7bccc4", "#43a2ca", "#0868ac")
+DEPTH = ("#f1eef6", "#bdc9e1", "#74a9cf", "#2b8cbe", "#045a8d")
+MARGIN = ("#e66101", "#fdb863", "#f7f7f7", "#b2abd2", "#5e3c99")
+TIME = ("#edf8fb", "#b3cde3", "#8c96c6", "#8856a7", "#810f7c")
+
+_LOADS = (0.0, 1.0, 5.0, 15.0, 30.0)
+
+
+def _quantity(
+    name: str,
+    unit: str,
+    meaning: str,
+    stops: tuple[float, ...],
+    ramp: tuple[str, ...],
+    cf_name: str | None = None,
+    needs: Literal["", "several sets", "seasons", "retention"] = "",
+) -> Layer:
+    return Layer(name, unit, meaning, "float32", NODATA, "mean", cf_name, needs, stops, ramp)
 
 
 LAYERS: dict[str, Layer] = {
@@ -51,17 +73,35 @@ LAYERS: dict[str, Layer] = {
             "max_evaporation",
             "mm day-1",
             "maximum steady evaporation the soil can lift",
+            (0.0, 0.1, 0.5, 1.0, 3.0),
+            WATER,
             "water_evaporation_flux_from_soil",
         ),
         _quantity(
             "evaporation",
             "mm year-1",
             "groundwater evaporation, capped by evaporative demand",
+            (0.0, 10.0, 50.0, 200.0, 800.0),
+            WATER,
             "water_evaporation_amount",
         ),
-        _quantity("salt_load", "t ha-1 year-1", "gross yearly salt rise from groundwater"),
-        _quantity("critical_depth", "m", "critical depth to water table for the target load"),
-        _quantity("depth_margin", "m", "depth to water table minus critical depth"),
+        _quantity(
+            "salt_load", "t ha-1 year-1", "gross yearly salt rise from groundwater", _LOADS, SALT
+        ),
+        _quantity(
+            "critical_depth",
+            "m",
+            "critical depth to water table for the target load",
+            (0.0, 1.0, 2.0, 3.0, 5.0),
+            DEPTH,
+        ),
+        _quantity(
+            "depth_margin",
+            "m",
+            "depth to water table minus critical depth",
+            (-2.0, -0.5, 0.0, 0.5, 2.0),
+            MARGIN,
+        ),
         Layer(
             "hazard_class",
             "class",
@@ -70,49 +110,44 @@ LAYERS: dict[str, Layer] = {
             CLASS_NODATA,
             "most frequent",
         ),
-        Layer(
+        _quantity(
             "salt_load_lowest_set",
             "t ha-1 year-1",
             "lowest gross yearly salt rise among the soil parameter sets",
-            "float32",
-            NODATA,
-            "mean",
+            _LOADS,
+            SALT,
             needs="several sets",
         ),
-        Layer(
+        _quantity(
             "salt_load_highest_set",
             "t ha-1 year-1",
             "highest gross yearly salt rise among the soil parameter sets",
-            "float32",
-            NODATA,
-            "mean",
+            _LOADS,
+            SALT,
             needs="several sets",
         ),
-        Layer(
+        _quantity(
             "net_demand",
             "mm year-1",
             "evaporative demand that rain and irrigation leave",
-            "float32",
-            NODATA,
-            "mean",
+            (0.0, 200.0, 500.0, 1000.0, 2000.0),
+            WATER,
             needs="seasons",
         ),
-        Layer(
+        _quantity(
             "percolation",
             "mm year-1",
             "rain and irrigation beyond the evaporative demand",
-            "float32",
-            NODATA,
-            "mean",
+            (0.0, 50.0, 100.0, 200.0, 500.0),
+            DEPTH,
             needs="seasons",
         ),
-        Layer(
+        _quantity(
             "response_time",
             "days",
             "water between hydrostatic and steady profile over maximum evaporation",
-            "float32",
-            NODATA,
-            "mean",
+            (1.0, 10.0, 30.0, 100.0, 365.0),
+            TIME,
             needs="retention",
         ),
     )
@@ -135,6 +170,36 @@ PER_SEASON = {
     "percolation": "mm",
 }
 """Layers that a run can write for each season, with their units over the season."""
+
+
+CHANGES: dict[str, Layer] = {
+    layer.name: layer
+    for layer in (
+        _quantity(
+            "salt_load_change",
+            "t ha-1 year-1",
+            "change of gross yearly salt rise",
+            (-15.0, -2.0, 0.0, 2.0, 15.0),
+            MARGIN[::-1],
+        ),
+        _quantity(
+            "depth_margin_change",
+            "m",
+            "change of depth margin",
+            (-1.0, -0.2, 0.0, 0.2, 1.0),
+            MARGIN,
+        ),
+        Layer(
+            "hazard_class_change",
+            "class",
+            "change of hazard class; 100 where depths differ within their error",
+            "int16",
+            -32768,
+            "most frequent",
+        ),
+    )
+}
+"""Layers of a comparison of two runs, the second minus the first."""
 
 
 def season_folder(name: str) -> str:

@@ -20,18 +20,27 @@ CLASS_COUNT = 5
 SURFACE_CLASS = 6
 """Class of cells with water at or above the surface."""
 
-CLASSIFIED = ("max_evaporation", "evaporation", "salt_load")
-"""Layers whose larger values are the worse ones, so that breaks can rise with the class."""
+CLASSIFIED = ("max_evaporation", "evaporation", "salt_load", "depth_margin")
+"""Layers that can be classified; their larger values are the worse ones, so that breaks rise."""
+
+FALLING = ("depth_margin",)
+"""But for these: the smaller value is the worse one and breaks fall."""
 
 _REQUIRED = ("breaks", "names", "colours", "citation")
 _OPTIONAL = ("title", "layer", "unit", "surface_name", "surface_colour", "name")
 _SURFACE = ("water at surface", "#2c7fb8")
-_UNITS = {"max_evaporation": "mm day-1", "evaporation": "mm year-1", "salt_load": "t ha-1 year-1"}
+_UNITS = {
+    "max_evaporation": "mm day-1",
+    "evaporation": "mm year-1",
+    "salt_load": "t ha-1 year-1",
+    "depth_margin": "m",
+}
 
 
 @dataclass(frozen=True)
 class Scheme:
-    """A class scheme: class k holds `breaks[k-2] <= value < breaks[k-1]` of `layer`.
+    """A class scheme: class k holds `breaks[k-2] <= value < breaks[k-1]` of `layer`, or where
+    breaks fall `breaks[k-1] <= value < breaks[k-2]`.
 
     `names` and `colours` (`#rrggbb`) run over classes 1 to 6, the sixth being water at the
     surface; `breaks` has four values in `unit`, the layer's own.
@@ -50,8 +59,36 @@ class Scheme:
         """Class 1 to 5 of each value, any shape; a NaN falls into class 1 (mask it yourself)."""
         classes = np.ones(values.shape, dtype=np.uint8)
         for edge in self.breaks:
-            classes += values >= edge
+            classes += (values < edge) if self.falls else (values >= edge)
         return classes
+
+    @property
+    def falls(self) -> bool:
+        """Whether the smaller value is the worse one."""
+        return self.layer in FALLING
+
+    def bounds(self) -> list[tuple[float, float]]:
+        """Lower and upper end of classes 1 to 5, infinite where open."""
+        edges = [-np.inf, *sorted(self.breaks), np.inf]
+        if not self.falls:
+            edges[0] = 0.0
+        pairs = list(itertools.pairwise(edges))
+        return pairs[::-1] if self.falls else pairs
+
+    def labels(self) -> list[str]:
+        """Classes 1 to 6 in words with their ends and unit."""
+        unit = self.unit.replace("-1", "").split()
+        shown = "/".join(unit)
+        words = []
+        for name, (low, high) in zip(self.names, self.bounds(), strict=False):
+            if np.isinf(high):
+                span = f"{low:g} {shown} and more"
+            elif np.isinf(low) or (low == 0 and not self.falls):
+                span = f"under {high:g} {shown}"
+            else:
+                span = f"{low:g} to {high:g} {shown}"
+            words.append(f"{name} ({span})")
+        return [*words, self.names[-1]]
 
     def rgb(self) -> dict[int, tuple[int, int, int]]:
         """Colour of each class 1 to 6 as red, green, blue from 0 to 255."""
@@ -67,9 +104,10 @@ def parse_scheme(text: str, name: str, source: str) -> Scheme:
     Parameters
     ----------
     text : str
-        TOML with `breaks` (4 rising numbers), `names` and `colours` (5, or 6 with water at the
-        surface last), `citation`; optionally `title`, `layer` (the classified layer, default
-        `salt_load`), `unit` (must be the layer's own), `surface_name`, `surface_colour`.
+        TOML with `breaks` (4 rising numbers; falling ones for `depth_margin`), `names` and
+        `colours` (5, or 6 with water at the surface last), `citation`; optionally `title`,
+        `layer` (the classified layer, default `salt_load`), `unit` (must be the layer's own),
+        `surface_name`, `surface_colour`.
     name : str
         Name under which the scheme is recorded.
     source : str
@@ -141,6 +179,13 @@ def _break_faults(raw: dict[str, Any]) -> list[str]:
         return []
     if not isinstance(edges, list) or len(edges) != CLASS_COUNT - 1:
         return [f"breaks: is {edges!r}, must be a list of {CLASS_COUNT - 1} numbers"]
+    falls = raw.get("layer") in FALLING
+    if falls:
+        if not all(map(_is_number, edges)):
+            return [f"breaks: is {edges!r}, every value must be a number"]
+        if any(b >= a for a, b in itertools.pairwise(edges)):
+            return [f"breaks: is {edges!r}, values must fall: less {raw['layer']} is worse"]
+        return []
     if not all(_is_number(edge) and edge > 0 for edge in edges):
         return [f"breaks: is {edges!r}, every value must be a positive number"]
     if any(b <= a for a, b in itertools.pairwise(edges)):

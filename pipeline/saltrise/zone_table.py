@@ -33,6 +33,45 @@ WATER_COLUMNS = {
 OVER_SUPPLY = "evaporation_over_supply"
 """Column of a zone's mean evaporation over its supply."""
 
+MEANINGS: dict[str, tuple[str, str]] = {
+    "zone_id": ("", "id of the zone"),
+    "name": ("", "name of the zone"),
+    "area_ha": ("ha", "area of the polygon on the ellipsoid"),
+    "assessed_ha": ("ha", "cells with every input, water below the surface"),
+    "assessed_share": ("1", "assessed over area"),
+    "at_surface_ha": ("ha", "water at or above the surface"),
+    "nodata_ha": ("ha", "cells that lack an input or are no soil"),
+    "outside_ha": ("ha", "beyond the grid"),
+    "depth_mean_m": ("m", "mean depth to water table"),
+    "depth_under_1_ha": ("ha", "depth to water table under 1 m"),
+    "depth_1_to_2_ha": ("ha", "depth to water table from 1 to under 2 m"),
+    "depth_2_to_3_ha": ("ha", "depth to water table from 2 to under 3 m"),
+    "depth_over_3_ha": ("ha", "depth to water table 3 m and more"),
+    "evaporation_mean_mm_per_year": ("mm year-1", "mean groundwater evaporation"),
+    "salt_load_t_per_year": ("t year-1", "gross salt rise"),
+    "salt_load_mean_t_per_ha_per_year": ("t ha-1 year-1", "mean gross salt rise"),
+    "salt_load_p10_t_per_ha_per_year": ("t ha-1 year-1", "load that 10 % of the area stays under"),
+    "salt_load_p50_t_per_ha_per_year": ("t ha-1 year-1", "load that half the area stays under"),
+    "salt_load_p90_t_per_ha_per_year": ("t ha-1 year-1", "load that 90 % of the area stays under"),
+    "critical_depth_p50_m": ("m", "depth that keeps half the area within the target load"),
+    "critical_depth_p80_m": ("m", "depth that keeps 80 % of the area within the target load"),
+    "depth_margin_mean_m": ("m", "mean of depth minus critical depth"),
+    "too_shallow_ha": ("ha", "water table shallower than the critical depth"),
+    "very_low_ha": ("ha", "hazard class 1"),
+    "low_ha": ("ha", "hazard class 2"),
+    "moderate_ha": ("ha", "hazard class 3"),
+    "high_ha": ("ha", "hazard class 4"),
+    "very_high_ha": ("ha", "hazard class 5"),
+    "at_surface_salt_load_t_per_year": ("t year-1", "salt rise of cells with water at the surface"),
+    "rank": ("", "1 is the worst; empty under 60 % assessed"),
+    "salt_load_lowest_set_t_per_year": ("t year-1", "lowest total among the parameter sets"),
+    "salt_load_highest_set_t_per_year": ("t year-1", "highest total among the parameter sets"),
+    WATER_COLUMNS["net_demand"]: ("mm year-1", "mean demand that rain and irrigation leave"),
+    WATER_COLUMNS["percolation"]: ("mm year-1", "mean of rain and irrigation beyond the demand"),
+    OVER_SUPPLY: ("1", "mean evaporation over the zone's supply; above 1 it cannot last"),
+}
+"""Unit and meaning of every column a zone table can have."""
+
 _HA = 1e4
 
 

@@ -20,7 +20,19 @@ from saltrise.errors import InputError
 from saltrise.io import durable
 
 FINISHED = "run.json"
-KNOWN = frozenset({"layers", "zones.gpkg", "zones.csv", FINISHED})
+KNOWN = frozenset(
+    {
+        "layers",
+        "styles",
+        "maps",
+        "zones.gpkg",
+        "zones.csv",
+        "zones_columns.csv",
+        "item.json",
+        "report.html",
+        FINISHED,
+    }
+)
 """What a finished run's folder may hold."""
 
 _SHOWN = 8

@@ -6,11 +6,16 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import pyproj
 import rasterio
 from affine import Affine
 
+from saltrise.grid import Grid
+from saltrise.io.ground import on_grid
+
 if TYPE_CHECKING:
     import geopandas
+    from shapely.geometry.base import BaseGeometry
 
 
 def read_layer(path: Path) -> tuple[np.ma.MaskedArray[Any, Any], Affine]:
@@ -26,3 +31,14 @@ def read_zone_layer(path: Path) -> geopandas.GeoDataFrame:
     if not path.is_file():
         raise FileNotFoundError(f"{path}: the run had no [zones]")
     return geopandas.read_file(path, layer="zones")
+
+
+def zones_on(folder: Path, grid: Grid) -> tuple[list[str], list[str], list[BaseGeometry]] | None:
+    """Ids, names and polygons in the grid's CRS of a finished run's zones; None without zones."""
+    path = folder / "zones.gpkg"
+    if not path.is_file():
+        return None
+    frame = read_zone_layer(path)
+    crs = pyproj.CRS(frame.crs)
+    shapes = [on_grid(geometry, crs, grid) for geometry in frame.geometry]
+    return [str(v) for v in frame["zone_id"]], [str(v) for v in frame["name"]], shapes

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
 import math
+from collections.abc import Sequence
 
 from rasterio.crs import CRS
 from rasterio.errors import CRSError, RasterioError
@@ -65,3 +67,29 @@ def point_in(source_wkt: str, target_wkt: str, x: float, y: float) -> tuple[floa
     if not (math.isfinite(xs[0]) and math.isfinite(ys[0])):
         raise InputError(f"the point {x}, {y} has no place in the grid's CRS")
     return xs[0], ys[0]
+
+
+def outline_in_degrees(
+    source_wkt: str, corners: Sequence[tuple[float, float]], steps: int = 8
+) -> list[tuple[float, float]]:
+    """A closed outline as longitude and latitude on WGS 84, each side cut in `steps`.
+
+    Raises
+    ------
+    InputError
+        A point has no place on the globe.
+    """
+    around = [*corners, corners[0]]
+    points = []
+    for (x0, y0), (x1, y1) in itertools.pairwise(around):
+        points += [(x0 + (x1 - x0) * k / steps, y0 + (y1 - y0) * k / steps) for k in range(steps)]
+    degrees = crs_text("EPSG:4326")
+    placed = [point_in(source_wkt, degrees, x, y) for x, y in points]
+    rounded = [(round(lon, 9), round(lat, 9)) for lon, lat in placed]
+    return [*rounded, rounded[0]]
+
+
+def epsg_of(wkt: str) -> int | None:
+    """EPSG code of a CRS, if it has one."""
+    code = CRS.from_wkt(wkt).to_epsg()
+    return int(code) if code is not None else None

@@ -13,8 +13,8 @@ from saltrise.io import durable
 _FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 
-def write_zones_csv(path: Path, table: dict[str, list[Any]]) -> None:
-    """Write a table, a row a zone: numbers in full, empty where undefined.
+def write_csv(path: Path, table: dict[str, list[Any]]) -> None:
+    """Write a table by columns: numbers in full, empty where undefined.
 
     A text that a spreadsheet would take for a formula gets one leading apostrophe.
 

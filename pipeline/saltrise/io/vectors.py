@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import os
+import sqlite3
 from collections import Counter
+from contextlib import closing
 from dataclasses import dataclass
 from datetime import datetime
 from difflib import get_close_matches
@@ -24,6 +26,7 @@ from saltrise.errors import InputError, RunError
 from saltrise.grid import Grid
 from saltrise.io import durable
 from saltrise.io.ground import ellipsoid_area, on_grid, outside_area
+from saltrise.zone_table import MEANINGS
 
 if TYPE_CHECKING:
     from saltrise.settings import Settings
@@ -301,11 +304,12 @@ def write_zones_gpkg(path: Path, zones: Zones, table: dict[str, list[Any]], date
         pyogrio.write_dataframe(
             frame, temporary, layer="zones", driver="GPKG", geometry_type="MultiPolygon"
         )
+        _describe_fields(temporary, [name for name in table if name in MEANINGS])
         durable.sync_file(temporary)
         temporary.replace(path)
     except OSError as error:
         raise RunError(durable.explain(path, error)) from error
-    except (DataSourceError, RuntimeError) as error:
+    except (DataSourceError, RuntimeError, sqlite3.Error) as error:
         raise RunError(f"{path}: cannot be written: {error}") from error
     finally:
         if before is None:
@@ -313,3 +317,35 @@ def write_zones_gpkg(path: Path, zones: Zones, table: dict[str, list[Any]], date
         else:
             os.environ["OGR_CURRENT_DATE"] = before
     durable.step(path.name)
+
+
+def _describe_fields(path: Path, columns: list[str]) -> None:
+    """Units and meanings of the columns, as the GeoPackage schema extension keeps them."""
+    with closing(sqlite3.connect(path)) as database, database:
+        database.execute(
+            "CREATE TABLE gpkg_data_columns (table_name TEXT NOT NULL, column_name TEXT NOT NULL, "
+            "name TEXT, title TEXT, description TEXT, mime_type TEXT, constraint_name TEXT, "
+            "CONSTRAINT pk_gdc PRIMARY KEY (table_name, column_name))"
+        )
+        database.execute(
+            "CREATE TABLE gpkg_data_column_constraints (constraint_name TEXT NOT NULL, "
+            "constraint_type TEXT NOT NULL, value TEXT, min NUMERIC, min_is_inclusive BOOLEAN, "
+            "max NUMERIC, max_is_inclusive BOOLEAN, description TEXT)"
+        )
+        database.execute(
+            "CREATE TABLE IF NOT EXISTS gpkg_extensions (table_name TEXT, column_name TEXT, "
+            "extension_name TEXT NOT NULL, definition TEXT NOT NULL, scope TEXT NOT NULL)"
+        )
+        for table in ("gpkg_data_columns", "gpkg_data_column_constraints"):
+            database.execute(
+                "INSERT INTO gpkg_extensions VALUES (?, NULL, 'gpkg_schema', "
+                "'http://www.geopackage.org/spec121/#extension_schema', 'read-write')",
+                (table,),
+            )
+        for column in columns:
+            unit, meaning = MEANINGS[column]
+            text = f"{meaning} [{unit}]" if unit else meaning
+            database.execute(
+                "INSERT INTO gpkg_data_columns VALUES ('zones', ?, NULL, NULL, ?, NULL, NULL)",
+                (column, text),
+            )

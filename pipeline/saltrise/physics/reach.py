@@ -40,6 +40,10 @@ class Conductor(Protocol):
         """Conductivity [mm/day] at suctions [m] > 0."""
         ...  # pragma: no cover
 
+    def __hash__(self) -> int:
+        """Equal laws have equal hashes: what is made of one is kept."""
+        ...  # pragma: no cover
+
 
 _GAUSS = np.polynomial.legendre.leggauss(_POINTS)
 POINTS, WEIGHTS = 0.5 + 0.5 * _GAUSS[0], 0.5 * _GAUSS[1]

@@ -1,0 +1,121 @@
+"""Hand over: everything in the folder that is made from the finished layers and tables."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict
+from datetime import datetime
+from pathlib import Path
+from typing import Any
+
+from saltrise.engine.account import CAUTIONS
+from saltrise.engine.identity import versions
+from saltrise.engine.merge import Totals
+from saltrise.engine.region import Region
+from saltrise.io import durable
+from saltrise.io.fingerprint import fingerprint
+from saltrise.io.regrid import epsg_of, outline_in_degrees
+from saltrise.io.tables import write_csv
+from saltrise.layers import layer_of
+from saltrise.report.stac import HandedFile, Place, stac_item
+from saltrise.report.styles import attribute_table, sld
+from saltrise.zonal import REGION
+from saltrise.zone_table import MEANINGS
+
+_ITEM = "item.json"
+
+METHOD = (
+    "Maximum steady evaporation E from a water table at depth L solves L = integral of "
+    "dh / (1 + E/K(h)) (Buckingham-Darcy) for each soil; groundwater evaporation is the lesser of "
+    "it and the evaporative demand; salt load [t/ha/year] = evaporation [mm/year] x TDS [g/L] / "
+    "100; the critical depth is where the load meets the target load."
+)
+
+
+def hand_over(region: Region, totals: Totals, date: datetime, folder: Path) -> None:
+    """Write styles, attribute table, column descriptions and the folder's STAC Item.
+
+    Raises
+    ------
+    RunError
+        A file cannot be written.
+    """
+    _styles(region, folder)
+    if "hazard_class" in region.settings.layers:
+        areas = totals.zones.areas(REGION).sum(axis=(1, 2))[1:] / 1e4
+        _text(
+            folder / "layers" / "hazard_class.tif.aux.xml",
+            attribute_table(region.scheme, [float(area) for area in areas]),
+        )
+    if region.zones is not None:
+        _columns(folder)
+    item = _item(region, totals, date, folder)
+    durable.write_json(folder / _ITEM, item)
+
+
+def _text(path: Path, text: str) -> None:
+    """Write a file unless an earlier start of the run has: they appear whole."""
+    if path.exists():
+        return
+    path.parent.mkdir(parents=True, exist_ok=True)
+    durable.write_whole(path, [text.encode()])
+
+
+def _styles(region: Region, folder: Path) -> None:
+    for name in region.settings.layers:
+        style = sld(layer_of(name), region.scheme, region.settings.title)
+        _text(folder / "styles" / f"{name}.sld", style)
+
+
+def _columns(folder: Path) -> None:
+    if (folder / "zones_columns.csv").exists():
+        return
+    head = (folder / "zones.csv").read_text("utf-8").splitlines()[0].split(",")
+    table = {
+        "column": head,
+        "unit": [MEANINGS[name][0] for name in head],
+        "meaning": [MEANINGS[name][1] for name in head],
+    }
+    write_csv(folder / "zones_columns.csv", table)
+
+
+def _item(region: Region, totals: Totals, date: datetime, folder: Path) -> dict[str, Any]:
+    grid = region.inputs.grid
+    corners = [
+        grid.corner(row, col)
+        for row, col in ((0, 0), (grid.height, 0), (grid.height, grid.width), (0, grid.width))
+    ]
+    place = Place(
+        outline_in_degrees(grid.crs_wkt, corners),
+        epsg_of(grid.crs_wkt),
+        grid.crs_wkt,
+        grid.transform,
+        grid.width,
+        grid.height,
+    )
+    statistics: dict[str, Mapping[str, float]] = {
+        name: asdict(found) for name, found in totals.statistics.items()
+    }
+    return stac_item(
+        region.settings.title,
+        f"{region.scheme.title}. {' '.join(CAUTIONS)}",
+        date,
+        place,
+        region.scheme,
+        statistics,
+        _files(folder),
+        METHOD,
+        versions(),
+    )
+
+
+def _files(folder: Path) -> list[HandedFile]:
+    """Every file so far but the item itself, in one order."""
+    found = []
+    for path in sorted(p for p in folder.rglob("*") if p.is_file()):
+        name = path.relative_to(folder).as_posix()
+        if name.startswith("work/") or name in (_ITEM, "run.json") or name.endswith(".xml"):
+            continue
+        print_ = fingerprint(str(path))
+        found.append(HandedFile(name, print_.size, print_.sha256))
+    return found
