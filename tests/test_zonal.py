@@ -42,7 +42,7 @@ def random_values(size: int, random: np.random.Generator) -> ZoneValues:
     for array in (depth, load):
         array[classes == 0] = 7.5
     critical = random.uniform(0, 4, size)
-    return ZoneValues(depth, load * 30, load, critical, depth - critical, classes)
+    return ZoneValues(depth, load * 30, load, critical, depth - critical, classes, depth * 5)
 
 
 def partial_of(cover: BlockCover, areas: np.ndarray, values: ZoneValues) -> ZonePartial:
@@ -150,6 +150,7 @@ def test_percentiles_know_zero() -> None:
         np.zeros(4),
         np.full(4, 2.0),
         np.array([1, 1, 1, 3], dtype=np.uint8),
+        np.zeros(4),
     )
     nothing = block_cover(prepare_zones([], grid_of(2, 2)), Window(0, 0, 2, 2))
     figures = region_figures(merge_partials([partial_of(nothing, np.full(4, 9.0), values)]))

@@ -18,6 +18,8 @@ from saltrise.zonal import (
     DEPTHS,
     QUANTITIES,
     REGION,
+    SALT_EDGES_G_PER_L,
+    SALTS,
     Histogram,
     ZonePartial,
     ZoneValues,
@@ -146,6 +148,10 @@ class _Cells:
             code += values.depth_m >= edge
         code *= np.uint8(2)
         code += values.depth_margin < 0
+        # 7 x 4 x 2 x 4 codes still fit a byte.
+        code *= np.uint8(SALTS)
+        for edge in SALT_EDGES_G_PER_L:
+            code += values.tds_g_per_l >= edge
         surface = hazard == CLASSES - 1
         return cls(
             code,

@@ -8,13 +8,14 @@ from pathlib import Path
 from typing import Any, Protocol
 
 from saltrise.engine import findings
-from saltrise.engine.account import layer_tags, run_date, run_record, supply_warnings
+from saltrise.engine.account import layer_tags, run_date, run_record, run_warnings
 from saltrise.engine.assemble import assemble
 from saltrise.engine.config import read_settings
 from saltrise.engine.estimate import Estimate, estimate_cost, require_room
 from saltrise.engine.handover import hand_over
 from saltrise.engine.identity import digest, identify, versions
 from saltrise.engine.merge import Totals, merge
+from saltrise.engine.pictures import Finished
 from saltrise.engine.plan import Plan
 from saltrise.engine.prints import Prints, take_prints
 from saltrise.engine.records import Record, is_done, read_record
@@ -148,10 +149,15 @@ def _work(
     totals = merge(plan.work, records, plan.layers)
     _assemble(plan, region, records, totals, beginning.date, workdir, ears)
     extras = plan.recipe.extra_sums
-    worst, dry = _zones(region, totals, beginning.date, workdir, extras)
-    hand_over(region, totals, beginning.date, workdir.unfinished)
+    table = _zones(region, totals, beginning.date, workdir, extras)
+    doubts = run_warnings(region, totals, table)
+    finished = Finished(
+        region, plan, totals, table, tuple(doubts), beginning.date, workdir.unfinished
+    )
+    hand_over(finished)
     _require_unchanged(prints)
-    record = run_record(region, totals, identity["inputs"], beginning.date, worst, dry, extras)
+    worst = _worst(table)
+    record = run_record(region, totals, identity["inputs"], beginning.date, worst, doubts, extras)
     durable.write_json(workdir.unfinished / FINISHED, record)
 
 
@@ -273,11 +279,11 @@ def _assemble(
 
 def _zones(
     region: Region, totals: Totals, date: datetime, workdir: Workdir, extras: Sequence[str]
-) -> tuple[list[dict[str, Any]], list[str]]:
-    """Write the zone tables; return the worst zones for the record, and zones in doubt."""
+) -> dict[str, list[Any]]:
+    """Write the zone tables and return their columns; none without zones."""
     zones = region.zones
     if zones is None:
-        return [], []
+        return {}
     table = zone_table(
         totals.zones,
         zones.ids,
@@ -290,6 +296,13 @@ def _zones(
     )
     write_csv(workdir.unfinished / "zones.csv", table)
     write_zones_gpkg(workdir.unfinished / "zones.gpkg", zones, table, date)
+    return table
+
+
+def _worst(table: dict[str, list[Any]]) -> list[dict[str, Any]]:
+    """The worst zones for the record."""
+    if not table:
+        return []
     ranked = sorted(
         (row for row, rank in enumerate(table["rank"]) if rank is not None),
         key=lambda row: table["rank"][row],
@@ -303,5 +316,4 @@ def _zones(
         "too_shallow_ha",
         "assessed_share",
     )
-    worst = [{column: table[column][row] for column in shown} for row in ranked[:_WORST]]
-    return worst, supply_warnings(table, zones.supply_mm_per_year)
+    return [{column: table[column][row] for column in shown} for row in ranked[:_WORST]]

@@ -110,6 +110,7 @@ class CellResult:
     hazard_class: NDArray[np.uint8]
     valid: NDArray[np.bool_]
     depth: Array
+    tds: Array
     counts: dict[str, int]
     extras: tuple[Array, ...]
 
@@ -122,6 +123,7 @@ class CellResult:
             critical_depth=self.values["critical_depth"].ravel(),
             depth_margin=self.values["depth_margin"].ravel(),
             hazard_class=self.hazard_class.ravel(),
+            tds_g_per_l=self.tds.ravel(),
             extras=tuple(values.ravel() for values in self.extras),
         )
 
@@ -231,7 +233,8 @@ def _answer(
     waters_sums = [values[name] for name in recipe.extra_sums[len(others) :]]
     if "response_time" in recipe.layers:
         counts["slower_than_season"] = int(np.count_nonzero(valid & year.slow))
-    return CellResult(values, classes, valid, depth, counts, (*others, *waters_sums))
+    tds = _mean(recipe, [water.tds for water in waters])
+    return CellResult(values, classes, valid, depth, tds, counts, (*others, *waters_sums))
 
 
 def converted(recipe: Recipe, given: Mapping[str, Array]) -> list[_Water]:

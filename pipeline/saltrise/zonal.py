@@ -26,14 +26,20 @@ CLASSES, DEPTHS = 7, 4
 DEPTH_EDGES_M = (1.0, 2.0, 3.0)
 """A depth class holds its lower edge."""
 
+SALTS = 4
+SALT_EDGES_G_PER_L = (1.5, 7.0, 15.0)
+SALT_NAMES = ("at most slightly saline", "moderately saline", "highly saline", "very highly saline")
+"""Classes of groundwater salinity by TDS [g/L]: Rhoades, Kandiah & Mashali (1992) FAO Irrigation
+and Drainage Paper 48, Table 1 (from memory); a class holds its lower edge."""
+
 SUMS = ("depth", "evaporation", "salt_load", "depth_margin", "surface_load")
 """Sums weighted by area [m2]: the first four over assessed cells, the last over surface cells."""
 
 QUANTITIES = ("salt_load", "critical_depth")
 """Quantities with percentiles, by their number in a histogram."""
 
-CODES = CLASSES * DEPTHS * 2
-"""Columns of area by hazard class, depth class and too shallow (no, yes)."""
+CODES = CLASSES * DEPTHS * 2 * SALTS
+"""Columns of area by hazard class, depth class, too shallow (no, yes) and salinity class."""
 
 COLUMNS = CODES + len(SUMS)
 """Columns of a row of sums; extras follow."""
@@ -49,7 +55,7 @@ class ZoneValues:
     """Values before rounding of a run of a block's cells, flat, in row-major order.
 
     `depth_m` [m], `evaporation_mm_per_year`, `salt_load` [t/ha/year], `critical_depth` and
-    `depth_margin` [m], `extras` whatever else is summed. Where
+    `depth_margin` [m], `tds_g_per_l` of the groundwater, `extras` whatever else is summed. Where
     `hazard_class` is 0 the others are finite but mean nothing.
     """
 
@@ -59,6 +65,7 @@ class ZoneValues:
     critical_depth: Floats
     depth_margin: Floats
     hazard_class: NDArray[np.uint8]
+    tds_g_per_l: Floats
     extras: tuple[Floats, ...] = ()
 
     def part(self, cells: slice | Whole) -> ZoneValues:
@@ -98,7 +105,16 @@ class ZoneTotals:
 
     def areas(self, zone: int) -> Floats:
         """Area [m2] by hazard class, depth class and too shallow (no, yes)."""
-        return self._row(zone)[:CODES].reshape(CLASSES, DEPTHS, 2)
+        areas: Floats = self._areas(zone).sum(axis=3)
+        return areas
+
+    def depth_by_salinity(self, zone: int) -> Floats:
+        """Assessed area [m2] by depth class and salinity class."""
+        areas: Floats = self._areas(zone)[1 : CLASSES - 1].sum(axis=(0, 2))
+        return areas
+
+    def _areas(self, zone: int) -> Floats:
+        return self._row(zone)[:CODES].reshape(CLASSES, DEPTHS, 2, SALTS)
 
     def sum_of(self, zone: int, name: str) -> float:
         """One of `SUMS`."""

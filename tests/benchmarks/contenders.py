@@ -45,14 +45,16 @@ def cog_floor(config: Path) -> None:
     from saltrise.engine.survey import BlockScan, Range, Sighting
     from saltrise.io.fingerprint import Fingerprint
     from saltrise.recipe import CellResult
-    from saltrise.zonal import Histogram, ZonePartial
+    from saltrise.zonal import COLUMNS, Histogram, ZonePartial
 
     def copied(_recipe, inputs, _shape):
         valid = np.logical_and.reduce([np.isfinite(values) for values in inputs.values()])
         roles = {"demand": "potential_evaporation"}
         values = {n: inputs[roles.get(r, r)].astype(np.float64) for n, r in LAYERS[:-1]}
         codes = np.nan_to_num(inputs["texture"]).astype(np.uint8)
-        return CellResult(values, codes, valid, inputs["depth"], {"cells": valid.size}, ())
+        return CellResult(
+            values, codes, valid, inputs["depth"], inputs["salinity"], {"cells": valid.size}, ()
+        )
 
     class Unsummed:
         """Stands for both areas and sums, and does nothing."""
@@ -63,7 +65,7 @@ def cog_floor(config: Path) -> None:
 
         def add(self, *_: object) -> None: ...
         def partial(self) -> ZonePartial:
-            return ZonePartial(np.array([-1]), np.zeros((1, 61)), Histogram(*[nothing] * 4))
+            return ZonePartial(np.array([-1]), np.zeros((1, COLUMNS)), Histogram(*[nothing] * 4))
 
     nothing = np.zeros(0, np.int64)
 

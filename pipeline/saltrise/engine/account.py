@@ -36,6 +36,15 @@ CAUTIONS = (
 )
 
 
+METHOD = (
+    "Maximum steady evaporation E from a water table at depth L solves L = integral of "
+    "dh / (1 + E/K(h)) (Buckingham-Darcy) for each soil; groundwater evaporation is the lesser of "
+    "it and the evaporative demand; salt load [t/ha/year] = evaporation [mm/year] x TDS [g/L] / "
+    "100; the critical depth is where the load meets the target load."
+)
+"""How the numbers come about, in a paragraph."""
+
+
 def run_date() -> datetime:
     """The run's date: `SOURCE_DATE_EPOCH` if set, else the clock [UTC, whole seconds]."""
     epoch = os.environ.get("SOURCE_DATE_EPOCH")
@@ -64,11 +73,10 @@ def run_record(
     inputs: list[dict[str, Any]],
     date: datetime,
     worst: list[dict[str, Any]],
-    dry: list[str],
+    doubts: list[str],
     extras: Sequence[str],
 ) -> dict[str, Any]:
     """Content of run.json; equal for equal inputs, versions and date."""
-    doubts = findings.warnings(region.settings, totals.ranges)
     grid = region.inputs.grid
     return {
         "program": "saltrise",
@@ -94,16 +102,23 @@ def run_record(
             name: {"unit": layer_of(name).unit, "meaning": layer_of(name).meaning}
             for name in region.settings.layers
         },
-        "warnings": [
-            *region.warnings,
-            *doubts,
-            *_slow(totals.counts),
-            *dry,
-            *outside_warnings(region, totals.counts),
-        ],
+        "warnings": doubts,
+        "method": METHOD,
         "use_limits": list(CAUTIONS),
         "versions": versions(),
     }
+
+
+def run_warnings(region: Region, totals: Totals, table: dict[str, list[Any]]) -> list[str]:
+    """Everything a user should doubt about a finished run."""
+    supply = region.zones.supply_mm_per_year if region.zones is not None else ()
+    return [
+        *region.warnings,
+        *findings.warnings(region.settings, totals.ranges),
+        *_slow(totals.counts),
+        *supply_warnings(table, supply),
+        *outside_warnings(region, totals.counts),
+    ]
 
 
 def _slow(counts: dict[str, int]) -> list[str]:

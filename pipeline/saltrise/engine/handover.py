@@ -8,9 +8,10 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
-from saltrise.engine.account import CAUTIONS
+from saltrise.engine.account import CAUTIONS, METHOD
 from saltrise.engine.identity import versions
 from saltrise.engine.merge import Totals
+from saltrise.engine.pictures import Finished, draw_map, draw_page
 from saltrise.engine.region import Region
 from saltrise.io import durable
 from saltrise.io.fingerprint import fingerprint
@@ -24,22 +25,16 @@ from saltrise.zone_table import MEANINGS
 
 _ITEM = "item.json"
 
-METHOD = (
-    "Maximum steady evaporation E from a water table at depth L solves L = integral of "
-    "dh / (1 + E/K(h)) (Buckingham-Darcy) for each soil; groundwater evaporation is the lesser of "
-    "it and the evaporative demand; salt load [t/ha/year] = evaporation [mm/year] x TDS [g/L] / "
-    "100; the critical depth is where the load meets the target load."
-)
 
-
-def hand_over(region: Region, totals: Totals, date: datetime, folder: Path) -> None:
-    """Write styles, attribute table, column descriptions and the folder's STAC Item.
+def hand_over(found: Finished) -> None:
+    """Write styles, attribute table, column descriptions, maps, page and the STAC Item.
 
     Raises
     ------
     RunError
         A file cannot be written.
     """
+    region, totals, folder = found.region, found.totals, found.folder
     _styles(region, folder)
     if "hazard_class" in region.settings.layers:
         areas = totals.zones.areas(REGION).sum(axis=(1, 2))[1:] / 1e4
@@ -49,7 +44,13 @@ def hand_over(region: Region, totals: Totals, date: datetime, folder: Path) -> N
         )
     if region.zones is not None:
         _columns(folder)
-    item = _item(region, totals, date, folder)
+    for name in region.settings.layers:
+        target = folder / "maps" / f"{name}.png"
+        if not target.exists():
+            target.parent.mkdir(parents=True, exist_ok=True)
+            durable.write_whole(target, [draw_map(found, name)])
+    durable.write_whole(folder / "report.html", [draw_page(found).encode()])
+    item = _item(region, totals, found.date, folder)
     durable.write_json(folder / _ITEM, item)
 
 

@@ -24,6 +24,14 @@ def read_layer(path: Path) -> tuple[np.ma.MaskedArray[Any, Any], Affine]:
         return dataset.read(1, masked=True), dataset.transform
 
 
+def read_reduced(path: Path, step: int) -> np.ma.MaskedArray[Any, Any]:
+    """A layer at one cell in `step` (a power of two) each way, from its overviews."""
+    with rasterio.open(path) as dataset:
+        shape = (-(-dataset.height // step), -(-dataset.width // step))
+        values: np.ma.MaskedArray[Any, Any] = dataset.read(1, masked=True, out_shape=shape)
+        return values
+
+
 def read_zone_layer(path: Path) -> geopandas.GeoDataFrame:
     """The zone table with its polygons."""
     import geopandas

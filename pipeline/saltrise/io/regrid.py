@@ -6,6 +6,7 @@ import itertools
 import math
 from collections.abc import Sequence
 
+import pyproj
 from rasterio.crs import CRS
 from rasterio.errors import CRSError, RasterioError
 from rasterio.warp import transform, transform_bounds
@@ -93,3 +94,32 @@ def epsg_of(wkt: str) -> int | None:
     """EPSG code of a CRS, if it has one."""
     code = CRS.from_wkt(wkt).to_epsg()
     return int(code) if code is not None else None
+
+
+def ground_size(
+    wkt: str, centre: tuple[float, float], right: tuple[float, float], below: tuple[float, float]
+) -> tuple[float, float, tuple[float, float]]:
+    """How a cell lies on the ground.
+
+    Parameters
+    ----------
+    wkt : str
+        The grid's CRS.
+    centre, right, below : pairs of float
+        Corner of a cell, and of its neighbours to the right and below.
+
+    Returns
+    -------
+    metres_x, metres_y : float
+        Width and height [m].
+    north : pair of float
+        Direction of north in rows and columns (x right, y down), of length 1.
+    """
+    degrees = crs_text("EPSG:4326")
+    at, east, south = (point_in(wkt, degrees, *point) for point in (centre, right, below))
+    geod = pyproj.Geod(ellps="WGS84")
+    azimuth_x, _, metres_x = geod.inv(*at, *east)
+    azimuth_y, _, metres_y = geod.inv(*at, *south)
+    x, y = math.cos(math.radians(azimuth_x)), math.cos(math.radians(azimuth_y))
+    length = math.hypot(x, y) or 1.0
+    return float(metres_x), float(metres_y), (x / length, y / length)

@@ -37,6 +37,7 @@ class SourceFile:
     offset: float
     bands: int
     unit: str
+    date: str
     point: bool
     """The file declares cells as points (`AREA_OR_POINT=Point`)."""
 
@@ -133,6 +134,7 @@ def _header(path: str, dataset: rasterio.DatasetReader) -> SourceFile:
         offset=float(dataset.offsets[0]),
         bands=dataset.count - int(alpha),
         unit=dataset.units[0] or "",
+        date=str(dataset.tags().get("TIFFTAG_DATETIME", "")),
         point=dataset.tags().get("AREA_OR_POINT") == "Point",
     )
 

@@ -91,6 +91,7 @@ class WaterTable(_Table):
     ground_accuracy: Annotated[float, Field(ge=0, allow_inf_nan=False)] | None = None
     accept_ground_error: bool = False
     unit: Literal["m", "cm", "ft"]
+    date: Text | None = None
     nodata: Number | None = None
 
 
@@ -125,6 +126,7 @@ class SoilTable(_Table):
         | None
     ) = None
     classes: Mapping[int | str, str] = Field(default_factory=dict)
+    date: Text | None = None
     nodata: Number | None = None
 
     @property
@@ -168,6 +170,7 @@ class GroundwaterTable(_Table):
     salinity: Raster
     unit: Literal["dS/m", "mS/cm", "uS/cm", "mg/L", "g/L"]
     tds_per_ec: Positive = TDS_PER_EC
+    date: Text | None = None
     nodata: Number | None = None
 
 
@@ -178,6 +181,7 @@ class ClimateTable(_Table):
     unit: Literal["mm/year", "mm/day"]
     basis: Literal["bare soil", "reference crop", "open water", "pan"] = "bare soil"
     coefficient: Positive = 1.0
+    date: Text | None = None
     nodata: Number | None = None
 
 

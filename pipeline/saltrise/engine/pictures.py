@@ -1,0 +1,393 @@
+"""The page and the maps of a finished run: what they show, from its sums and layers."""
+
+from __future__ import annotations
+
+import itertools
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from datetime import datetime
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from saltrise.engine.account import CAUTIONS, METHOD, alignment, parameters
+from saltrise.engine.inputs import base_role, key_of
+from saltrise.engine.merge import Totals
+from saltrise.engine.plan import Plan
+from saltrise.engine.region import Region
+from saltrise.engine.soils import profile_of
+from saltrise.io.finished import read_reduced
+from saltrise.io.regrid import ground_size
+from saltrise.layers import layer_of
+from saltrise.report.figures import (
+    Sheet,
+    colours_of,
+    drawable,
+    length_text,
+    map_png,
+    png,
+    svg_path,
+)
+from saltrise.report.page import curve_chart, render
+from saltrise.report.styles import plain_unit
+from saltrise.zonal import REGION, SALT_EDGES_G_PER_L, SALT_NAMES
+from saltrise.zone_table import CLASS_COLUMNS, DEPTH_COLUMNS, region_figures
+
+Table = Mapping[str, list[Any]]
+
+_LONGEST = 900
+"""Pixels of a map's longer side at most."""
+
+_DEPTH_NAMES = ("under 1 m", "1 to under 2 m", "2 to under 3 m", "3 m and more")
+_MOST_CURVES = 12
+
+_COLUMNS = (
+    ("zone_id", "id"),
+    ("name", "district"),
+    ("rank", "rank"),
+    ("salt_load_mean_t_per_ha_per_year", "mean load [t/ha/year]"),
+    ("salt_load_t_per_year", "load [t/year]"),
+    ("too_shallow_ha", "too shallow [ha]"),
+    ("critical_depth_p50_m", "critical depth, half the area [m]"),
+    ("critical_depth_p80_m", "critical depth, 80 % [m]"),
+    ("depth_mean_m", "mean depth [m]"),
+    ("evaporation_mean_mm_per_year", "evaporation [mm/year]"),
+    ("area_ha", "area [ha]"),
+    ("assessed_ha", "assessed [ha]"),
+    ("at_surface_ha", "water at surface [ha]"),
+    ("nodata_ha", "no answer [ha]"),
+    ("outside_ha", "outside [ha]"),
+)
+
+
+@dataclass(frozen=True)
+class Finished:
+    """A run whose layers and zone table are made: what its page and maps are drawn from."""
+
+    region: Region
+    plan: Plan
+    totals: Totals
+    table: Table
+    warnings: tuple[str, ...]
+    date: datetime
+    folder: Path
+
+
+def sheet_of(plan: Plan) -> Sheet:
+    """How the reduced pictures of a grid lie on the ground."""
+    grid, cells = plan.grid, 1
+    while max(grid.width, grid.height) / cells > _LONGEST:
+        cells *= 2
+    row, col = grid.height // 2, grid.width // 2
+    corners = [grid.corner(row + dr, col + dc) for dr, dc in ((0, 0), (0, 1), (1, 0))]
+    x, y, north = ground_size(grid.crs_wkt, *corners)
+    size = (-(-grid.width // cells), -(-grid.height // cells))
+    return Sheet(*size, float(cells), x * cells, y * cells, north)
+
+
+def draw_map(found: Finished, name: str) -> bytes:
+    """One layer as a map for a slide."""
+    sheet, layer, settings = sheet_of(found.plan), layer_of(name), found.region.settings
+    values = read_reduced(found.folder / "layers" / f"{name}.tif", int(sheet.cells))
+    title = f"{drawable(settings.title, 'Region')}: {layer.meaning}"
+    caption = (
+        f"saltrise {version('saltrise')}, {found.date:%Y-%m-%d}. Screening level, upper estimate "
+        "for bare soil; verify with field sampling."
+    )
+    scheme = found.region.scheme
+    picture = colours_of(values, layer, scheme)
+    return map_png(picture, layer, scheme, sheet, found.plan.zones.shapes, title, caption)
+
+
+def draw_page(found: Finished) -> str:
+    """The page."""
+    region, settings = found.region, found.region.settings
+    figures = region_figures(found.totals.zones, found.plan.recipe.extra_sums)
+    rows = _rows(found.table)
+    return render(
+        {
+            "title": settings.title,
+            "scheme": region.scheme,
+            "date": f"{found.date:%Y-%m-%d}",
+            "version": version("saltrise"),
+            "answer": _answer(found, figures, rows),
+            "cautions": CAUTIONS,
+            "method": METHOD,
+            "maps": _maps(found),
+            "zones": rows,
+            "columns": [
+                {"key": key, "label": label, "text": key in ("zone_id", "name")}
+                for key, label in _COLUMNS
+            ],
+            "rank_by": settings.hazard.rank_by.replace("_", " "),
+            "bars": [_bar(found, "Region", figures)] + [_bar(found, r["name"], r) for r in rows],
+            "crossed": _crossed(found, rows),
+            "salt_names": _salt_names(),
+            "chart": _chart(found),
+            "inputs": _inputs(found),
+            "parameters": parameters(region, region.sets[:1]),
+            "warnings": found.warnings,
+            "masked": _masked(found.totals.counts),
+        }
+    )
+
+
+def _rows(table: Table) -> list[dict[str, Any]]:
+    """Zones, the worst first."""
+    if not table:
+        return []
+    count = len(table["zone_id"])
+    rows = [{key: values[k] for key, values in table.items()} | {"zone": k} for k in range(count)]
+    return sorted(rows, key=lambda r: (r["rank"] is None, r["rank"] or 0, r["zone_id"]))
+
+
+def _answer(found: Finished, figures: Mapping[str, Any], rows: list[dict[str, Any]]) -> list[str]:
+    settings, scheme = found.region.settings, found.region.scheme
+    assessed = figures["assessed_ha"]
+    if not assessed:
+        return ["No land could be assessed."]
+    worst = figures["high_ha"] + figures["very_high_ha"]
+    sentences = [
+        f"Of {assessed:,.0f} ha assessed, {worst:,.0f} ha ({100 * worst / assessed:.3g} %) are in "
+        f"the classes {scheme.names[3]} and {scheme.names[4]}; groundwater brings a gross "
+        f"{figures['salt_load_t_per_year']:,.0f} t of salt a year.",
+    ]
+    ranked = [row for row in rows if row["rank"] is not None][:3]
+    if ranked:
+        names = ", ".join(
+            f"{row['name']} ({row['salt_load_mean_t_per_ha_per_year']:.3g} t/ha/year)"
+            for row in ranked
+        )
+        by = settings.hazard.rank_by.replace("_", " ")
+        sentences.append(f"By {by}, first come {names}.")
+    half, most = figures["critical_depth_p50_m"], figures["critical_depth_p80_m"]
+    sentences.append(
+        f"To keep the load within {settings.hazard.target_load:g} t/ha/year the water table has "
+        f"to stay deeper than {half:.2g} m on half of the land and than {most:.2g} m on 80 % of "
+        f"it; on {figures['too_shallow_ha']:,.0f} ha it is shallower than it should be."
+    )
+    return sentences
+
+
+def _maps(found: Finished) -> list[dict[str, Any]]:
+    sheet, scheme = sheet_of(found.plan), found.region.scheme
+    rows = {row["zone"]: k for k, row in enumerate(_rows(found.table))}
+    zones = found.region.zones
+    shapes = found.plan.zones.shapes
+    labels = [_label(found.table, k) for k in range(len(shapes))] if zones else []
+    outlines = [
+        {"d": svg_path(shape, sheet), "row": rows[k], "label": labels[k]}
+        for k, shape in enumerate(shapes)
+    ]
+    length, pixels = sheet.scale_bar()
+    maps = []
+    for name in ("hazard_class", "salt_load"):
+        if name not in found.plan.layers:
+            continue
+        layer = layer_of(name)
+        values = read_reduced(found.folder / "layers" / f"{name}.tif", int(sheet.cells))
+        stops = [f"{stop:g} {plain_unit(layer.unit)}" for stop in layer.stops]
+        legend = (
+            list(zip(layer.ramp, stops, strict=True))
+            if layer.continuous
+            else [
+                (colour, f"{k} {label}")
+                for k, (colour, label) in enumerate(
+                    zip(scheme.colours, scheme.labels(), strict=True), start=1
+                )
+            ]
+        )
+        maps.append(
+            {
+                "title": scheme.title if not layer.continuous else layer.meaning.capitalize(),
+                "source": _source(png(colours_of(values, layer, scheme))),
+                "width": sheet.width,
+                "height": sheet.height * sheet.stretch,
+                "stretch": sheet.stretch,
+                "legend": [*legend, ("#e1e1e1", "no answer")],
+                "outlines": outlines,
+                "scale": (length_text(length), pixels),
+                "turn": float(np.degrees(np.arctan2(sheet.north[0], -sheet.north[1]))),
+            }
+        )
+    return maps
+
+
+def _source(image: bytes) -> Any:
+    import base64
+
+    text = f"data:image/png;base64,{base64.b64encode(image).decode()}"
+    return lambda: text
+
+
+def _label(table: Table, zone: int) -> str:
+    load = table["salt_load_mean_t_per_ha_per_year"][zone]
+    rank = table["rank"][zone]
+    shown = "not assessed" if load is None else f"{load:.3g} t/ha/year"
+    place = f", rank {rank}" if rank is not None else ""
+    return f"{table['name'][zone]}: {shown}{place}"
+
+
+def _bar(found: Finished, name: str, figures: Mapping[str, Any]) -> dict[str, Any]:
+    areas = [figures[column] for column in CLASS_COLUMNS]
+    total = sum(areas)
+    return {
+        "name": name,
+        "parts": [
+            {
+                "area": area,
+                "share": 100 * area / total if total else 0.0,
+                "colour": colour,
+                "dark": sum(rgb) < 330,
+                "number": k,
+            }
+            for k, (area, colour, rgb) in enumerate(
+                zip(
+                    areas,
+                    found.region.scheme.colours,
+                    found.region.scheme.rgb().values(),
+                    strict=False,
+                ),
+                start=1,
+            )
+        ],
+    }
+
+
+def _salt_names() -> list[str]:
+    edges = [f"{edge:g}" for edge in SALT_EDGES_G_PER_L]
+    spans = [
+        f"under {edges[0]} g/L",
+        *(f"{a} to under {b} g/L" for a, b in itertools.pairwise(edges)),
+        f"{edges[-1]} g/L and more",
+    ]
+    return [f"{name} ({span})" for name, span in zip(SALT_NAMES, spans, strict=True)]
+
+
+def _crossed(found: Finished, rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    zones = [("Region", REGION)] + [(row["name"], row["zone"]) for row in rows]
+    tables = []
+    for name, zone in zones:
+        areas = found.totals.zones.depth_by_salinity(zone) / 1e4
+        cells = [[float(v) for v in row] for row in areas]
+        tables.append({"name": name, "rows": list(zip(_DEPTH_NAMES, cells, strict=True))})
+    return tables
+
+
+def _chart(found: Finished) -> dict[str, Any] | None:
+    """Rise curves of the soils that occur, unless they vary from cell to cell."""
+    region, recipe = found.region, found.plan.recipe
+    stacks = region.soils.stacks[:_MOST_CURVES]
+    if not stacks:
+        return None
+    deepest = 6.0
+    depths = np.linspace(0.1, deepest, 90)
+    curves = [
+        (
+            " over ".join(stack.soils),
+            depths,
+            profile_of(region.settings, region.sets[0], stack).evaporation(depths)[0],
+        )
+        for stack in stacks
+    ]
+    demand = found.totals.ranges.get("potential_evaporation")
+    season = recipe.seasons[0]
+    rate = 0.0
+    if len(recipe.seasons) == 1:
+        constant = recipe.constants.get(season.potential_evaporation)
+        if constant is not None:
+            rate = constant * season.demand_factor / season.days
+        elif demand is not None and demand.low is not None and demand.high is not None:
+            rate = (demand.low + demand.high) / 2 * season.demand_factor / season.days
+    chart = curve_chart(curves, rate, deepest)
+    return chart | {"labels": _spaced(chart["lines"]), "depths": _depths(found, chart)}
+
+
+def _spaced(lines: Sequence[Mapping[str, Any]]) -> list[dict[str, Any]]:
+    """Names at the ends of lines, pushed apart so that they can be read."""
+    ends = sorted((line["end"][1], line["name"]) for line in lines if line["end"])
+    labels: list[dict[str, Any]] = []
+    for y, name in ends:
+        least = labels[-1]["y"] + 12.0 if labels else y
+        labels.append({"y": max(y + 4.0, least), "name": name})
+    return labels
+
+
+def _depths(found: Finished, chart: Mapping[str, Any]) -> list[dict[str, Any]]:
+    figures = region_figures(found.totals.zones, found.plan.recipe.extra_sums)
+    total = figures["assessed_ha"] or 1.0
+    wide = (chart["right"] - chart["left"]) / 6.0
+    edges = (0.0, 1.0, 2.0, 3.0, 6.0)
+    return [
+        {
+            "x": chart["left"] + edges[k] * wide,
+            "width": (edges[k + 1] - edges[k]) * wide,
+            "text": f"{100 * figures[column] / total:.0f} %",
+        }
+        for k, column in enumerate(DEPTH_COLUMNS)
+    ]
+
+
+def _inputs(found: Finished) -> list[dict[str, Any]]:
+    region, settings = found.region, found.region.settings
+    how = alignment(region)
+    rows = []
+    for role, aligned in region.inputs.rasters.items():
+        seen = found.totals.ranges.get(role)
+        rows.append(
+            {
+                "key": key_of(role),
+                "how": f"{len(aligned.mosaic.tiles)} file(s), {how[key_of(role)]}",
+                "valid": f"{seen.valid:,}" if seen else "",
+                "nodata": f"{seen.nodata:,}" if seen else "",
+                "low": f"{seen.low:g}" if seen and seen.low is not None else "",
+                "high": f"{seen.high:g}" if seen and seen.high is not None else "",
+                "unit": region.inputs.unit_of(settings, role),
+                "date": _date(settings, role, [t.file.date for t in aligned.mosaic.tiles]),
+            }
+        )
+    for role, value in region.inputs.constants.items():
+        number = {"low": f"{value:g}", "high": f"{value:g}", "valid": "", "nodata": ""}
+        unit = region.inputs.unit_of(settings, role)
+        where = {"key": key_of(role), "how": "one number", "unit": unit}
+        rows.append(where | number | {"date": _date(settings, role, [])})
+    return rows
+
+
+def _date(settings: Any, role: str, tagged: list[str]) -> str:
+    """Date of an input: the config's, or what its files' tags say."""
+    table = {
+        "texture": settings.soil,
+        "sand": settings.soil,
+        "clay": settings.soil,
+        "silt": settings.soil,
+        "salinity": settings.groundwater,
+        "potential_evaporation": settings.climate,
+        "depth": settings.water_table,
+        "elevation": settings.water_table,
+        "ground": settings.water_table,
+    }.get(base_role(role))
+    if table is not None and table.date:
+        return str(table.date)
+    known = sorted({date for date in tagged if date})
+    return known[0] if len(known) == 1 else f"{known[0]} to {known[-1]}" if known else "not given"
+
+
+def _masked(counts: Mapping[str, int]) -> list[str]:
+    reasons = {
+        "no_depth": "no depth to water table",
+        "no_texture": "no texture",
+        "not_soil": "mapped to not soil",
+        "no_salinity": "no groundwater salinity",
+        "no_potential_evaporation": "no potential evaporation, rain or irrigation",
+        "no_root_depth": "no depth of the root zone",
+    }
+    cells = counts["cells"]
+    gone = cells - counts["assessed"] - counts["at_surface"]
+    lines = [f"{gone:,} of {cells:,} cells have no answer."]
+    for reason, text in reasons.items():
+        if counts.get(reason):
+            lines.append(f"{counts[reason]:,} cells: {text}.")
+    return lines
