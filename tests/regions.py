@@ -115,7 +115,7 @@ def tables(folder: Path, **changes: Any) -> dict[str, dict[str, Any]]:
         "groundwater": {"salinity": "salinity.tif", "unit": "dS/m"},
         "climate": {"potential_evaporation": "demand.tif", "unit": "mm/year"},
         "hazard": {"target_load": 2.0},
-        "output": {"folder": str(folder / "out")},
+        "output": {"folder": str(folder / "out"), "report": False},
         "run": {"tile": 512, "workers": 1},
     }
     for table, content in changes.items():

@@ -44,14 +44,19 @@ def hand_over(found: Finished) -> None:
         )
     if region.zones is not None:
         _columns(folder)
-    for name in region.settings.layers:
-        target = folder / "maps" / f"{name}.png"
+    if region.settings.output.report:
+        _pictures(found)
+    item = _item(region, totals, found.date, folder)
+    durable.write_json(folder / _ITEM, item)
+
+
+def _pictures(found: Finished) -> None:
+    for name in found.region.settings.layers:
+        target = found.folder / "maps" / f"{name}.png"
         if not target.exists():
             target.parent.mkdir(parents=True, exist_ok=True)
             durable.write_whole(target, [draw_map(found, name)])
-    durable.write_whole(folder / "report.html", [draw_page(found).encode()])
-    item = _item(region, totals, found.date, folder)
-    durable.write_json(folder / _ITEM, item)
+    durable.write_whole(found.folder / "report.html", [draw_page(found).encode()])
 
 
 def _text(path: Path, text: str) -> None:

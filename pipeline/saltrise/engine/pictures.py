@@ -302,17 +302,24 @@ def _chart(found: Finished) -> dict[str, Any] | None:
         elif demand is not None and demand.low is not None and demand.high is not None:
             rate = (demand.low + demand.high) / 2 * season.demand_factor / season.days
     chart = curve_chart(curves, rate, deepest)
-    return chart | {"labels": _spaced(chart["lines"]), "depths": _depths(found, chart)}
+    return chart | {
+        "labels": _spaced(chart["lines"], chart["right"]),
+        "depths": _depths(found, chart),
+    }
 
 
-def _spaced(lines: Sequence[Mapping[str, Any]]) -> list[dict[str, Any]]:
+def _spaced(lines: Sequence[Mapping[str, Any]], right: float) -> list[dict[str, Any]]:
     """Names at the ends of lines, pushed apart so that they can be read."""
-    ends = sorted((line["end"][1], line["name"]) for line in lines if line["end"])
-    labels: list[dict[str, Any]] = []
-    for y, name in ends:
-        least = labels[-1]["y"] + 12.0 if labels else y
-        labels.append({"y": max(y + 4.0, least), "name": name})
-    return labels
+    ends = sorted((line["end"][1], line["end"][0], line["name"]) for line in lines if line["end"])
+    beside: list[dict[str, Any]] = []
+    below: list[dict[str, Any]] = []
+    for y, x, name in ends:
+        if x < right - 1.0:  # a curve that falls off the chart before its right end
+            below.append({"x": x + 4.0, "y": y - 6.0 - 13.0 * len(below), "name": name})
+            continue
+        least = beside[-1]["y"] + 12.0 if beside else y
+        beside.append({"x": right + 6.0, "y": max(y + 4.0, least), "name": name})
+    return beside + below
 
 
 def _depths(found: Finished, chart: Mapping[str, Any]) -> list[dict[str, Any]]:

@@ -233,7 +233,7 @@ class ZonesTable(_Table):
 
 
 class OutputTable(_Table):
-    """`[output]`: folder, layers, precision and codec of the rasters."""
+    """`[output]`: folder, layers, precision and codec of the rasters; page and maps or not."""
 
     folder: Text
     layers: Annotated[list[str], Field(min_length=1)] = Field(default_factory=lambda: list(BASIC))
@@ -241,6 +241,7 @@ class OutputTable(_Table):
     compression: Literal["zstd", "deflate"] = "zstd"
     assembly: Literal["copy", "gdal"] = "copy"
     season_layers: bool = False
+    report: bool = True
 
 
 class RunTable(_Table):
