@@ -41,7 +41,7 @@ def pasted(name: str) -> np.ndarray:
 def run_demo(folder: Path, config: str) -> Result:
     found = read_settings(ROOT / "config" / config)
     output = found.tables.output.model_copy(
-        update={"folder": str(folder / "out"), "precision": "full"}
+        update={"folder": str(folder / "out"), "precision": "full", "report": False}
     )
     tables = found.tables.model_copy(update={"output": output})
     return saltrise.run(type(found)(tables, found.source, found.base, found.lines))

@@ -87,6 +87,7 @@ potential_evaporation = "demand.tif"
 unit = "mm/year"
 {table}[output]
 folder = "out"
+report = false
 [run]
 workers = 2
 """,

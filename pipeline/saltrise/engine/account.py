@@ -12,7 +12,7 @@ from typing import Any
 
 from saltrise.engine import findings
 from saltrise.engine.identity import versions
-from saltrise.engine.inputs import key_of
+from saltrise.engine.inputs import base_role, key_of
 from saltrise.engine.merge import Totals
 from saltrise.engine.region import Region
 from saltrise.layers import layer_of
@@ -59,6 +59,8 @@ def layer_tags(region: Region, date: datetime) -> dict[str, str]:
         "TIFFTAG_SOFTWARE": f"saltrise {version('saltrise')}",
         "TIFFTAG_DATETIME": date.strftime("%Y:%m:%d %H:%M:%S"),
         "TITLE": settings.title,
+        **({"ABSTRACT": settings.tables.abstract} if settings.tables.abstract else {}),
+        "LINEAGE": METHOD,
         "SOIL_PARAMETERS": parameters(region, region.sets[:1])["set"],
         "TARGET_LOAD": f"{settings.hazard.target_load!r} t ha-1 year-1",
         "DAYS_PER_YEAR": f"{settings.days_per_year:g}",
@@ -82,8 +84,10 @@ def run_record(
         "program": "saltrise",
         "date": date.strftime("%Y-%m-%dT%H:%M:%SZ"),
         "title": region.settings.title,
+        "abstract": region.settings.tables.abstract,
         "config": region.settings.resolved(),
         "inputs": inputs,
+        "input_dates": input_dates(region),
         "alignment": alignment(region),
         "grid": {
             "crs": grid.crs_wkt,
@@ -103,7 +107,7 @@ def run_record(
             for name in region.settings.layers
         },
         "warnings": doubts,
-        "method": METHOD,
+        "lineage": METHOD,
         "use_limits": list(CAUTIONS),
         "versions": versions(),
     }
@@ -153,6 +157,25 @@ def supply_warnings(table: dict[str, list[Any]], supply: Sequence[float | None])
 def alignment(region: Region) -> dict[str, str]:
     """How each raster input reached the region's grid, by config key."""
     return {key_of(r): aligned.describe() for r, aligned in region.inputs.rasters.items()}
+
+
+def input_dates(region: Region) -> dict[str, str]:
+    """Date of each input by config key: the config's, or what its files' tags say."""
+    settings = region.settings
+    tables = {
+        **dict.fromkeys(("texture", "sand", "clay", "silt"), settings.soil.date),
+        **dict.fromkeys(("depth", "elevation", "ground"), settings.water_table.date),
+        "salinity": settings.groundwater.date,
+        "potential_evaporation": settings.climate.date,
+    }
+    dates = {}
+    for role in (*region.inputs.rasters, *region.inputs.constants):
+        aligned = region.inputs.rasters.get(role)
+        files = aligned.mosaic.tiles if aligned is not None else ()
+        tagged = sorted({tile.file.date for tile in files if tile.file.date})
+        said = " to ".join(dict.fromkeys((tagged[0], tagged[-1]))) if tagged else ""
+        dates[key_of(role)] = tables.get(base_role(role)) or said or "not given"
+    return dates
 
 
 def _numbers(row: SoilRow) -> dict[str, Any]:

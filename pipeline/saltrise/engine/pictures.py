@@ -12,8 +12,8 @@ from typing import Any
 
 import numpy as np
 
-from saltrise.engine.account import CAUTIONS, METHOD, alignment, parameters
-from saltrise.engine.inputs import base_role, key_of
+from saltrise.engine.account import CAUTIONS, METHOD, alignment, input_dates, parameters
+from saltrise.engine.inputs import key_of
 from saltrise.engine.merge import Totals
 from saltrise.engine.plan import Plan
 from saltrise.engine.region import Region
@@ -339,7 +339,7 @@ def _depths(found: Finished, chart: Mapping[str, Any]) -> list[dict[str, Any]]:
 
 def _inputs(found: Finished) -> list[dict[str, Any]]:
     region, settings = found.region, found.region.settings
-    how = alignment(region)
+    how, dates = alignment(region), input_dates(region)
     rows = []
     for role, aligned in region.inputs.rasters.items():
         seen = found.totals.ranges.get(role)
@@ -352,34 +352,15 @@ def _inputs(found: Finished) -> list[dict[str, Any]]:
                 "low": f"{seen.low:g}" if seen and seen.low is not None else "",
                 "high": f"{seen.high:g}" if seen and seen.high is not None else "",
                 "unit": region.inputs.unit_of(settings, role),
-                "date": _date(settings, role, [t.file.date for t in aligned.mosaic.tiles]),
+                "date": dates[key_of(role)],
             }
         )
     for role, value in region.inputs.constants.items():
         number = {"low": f"{value:g}", "high": f"{value:g}", "valid": "", "nodata": ""}
         unit = region.inputs.unit_of(settings, role)
         where = {"key": key_of(role), "how": "one number", "unit": unit}
-        rows.append(where | number | {"date": _date(settings, role, [])})
+        rows.append(where | number | {"date": dates[key_of(role)]})
     return rows
-
-
-def _date(settings: Any, role: str, tagged: list[str]) -> str:
-    """Date of an input: the config's, or what its files' tags say."""
-    table = {
-        "texture": settings.soil,
-        "sand": settings.soil,
-        "clay": settings.soil,
-        "silt": settings.soil,
-        "salinity": settings.groundwater,
-        "potential_evaporation": settings.climate,
-        "depth": settings.water_table,
-        "elevation": settings.water_table,
-        "ground": settings.water_table,
-    }.get(base_role(role))
-    if table is not None and table.date:
-        return str(table.date)
-    known = sorted({date for date in tagged if date})
-    return known[0] if len(known) == 1 else f"{known[0]} to {known[-1]}" if known else "not given"
 
 
 def _masked(counts: Mapping[str, int]) -> list[str]:

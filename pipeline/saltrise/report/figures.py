@@ -134,9 +134,9 @@ def map_png(
     from matplotlib.collections import LineCollection
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(10, 7.5), dpi=200, layout="constrained")
+    figure = Figure(figsize=(10, 7.5), dpi=200)
     FigureCanvasAgg(figure)
-    axes = figure.add_subplot()
+    axes = figure.add_axes((0.02, 0.05, 0.72, 0.88), anchor="NW")
     axes.imshow(
         picture,
         extent=(0, sheet.width, sheet.height, 0),
@@ -159,7 +159,8 @@ def map_png(
     _scale_and_north(axes, sheet)
     figure.text(0.01, 0.005, _plain(caption), fontsize=7, color="#444444")
     buffer = io.BytesIO()
-    figure.savefig(buffer, format="png", metadata={"Software": "saltrise"})
+    quick = {"compress_level": 3}
+    figure.savefig(buffer, format="png", metadata={"Software": "saltrise"}, pil_kwargs=quick)
     return buffer.getvalue()
 
 
@@ -184,7 +185,7 @@ def _legend(axes: object, layer: Layer, scheme: Scheme) -> None:
     handles = [Patch(facecolor=c, edgecolor="#555555", label=_plain(t)) for c, t in pairs]
     handles.append(Patch(facecolor="#e1e1e1", edgecolor="#555555", label="no answer"))
     axes.legend(
-        handles=handles, title=title, loc="upper left", bbox_to_anchor=(1.0, 1.0), fontsize=8
+        handles=handles, title=title, loc="upper left", bbox_to_anchor=(1.01, 1.0), fontsize=8
     )
 
 

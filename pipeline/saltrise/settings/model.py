@@ -256,6 +256,7 @@ class Tables(_Table):
     """A whole config."""
 
     title: Text | None = None
+    abstract: Text | None = None
     grid: GridTable | None = None
     water_table: WaterTable
     soil: SoilTable
