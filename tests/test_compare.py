@@ -104,6 +104,8 @@ def test_the_command_says_what_differs(runs, tmp_path: Path) -> None:
     assert found.exit_code == 0, found.output
     assert "config hazard.target_load: was 2.0, is 3.0" in found.output
     assert "input depth.tif changed" in found.output
+    report = (tmp_path / "change/report.txt").read_text("utf-8")
+    assert report in found.output
     same = CliRunner().invoke(commands, ["diff", one, one, "--out", str(tmp_path / "same")])
     assert "same settings, inputs and software" in same.output
     assert not read(tmp_path / "same/layers/salt_load_change.tif").any()

@@ -214,7 +214,7 @@ def diff(first: Path, second: Path, out: Path, depth_error: float) -> None:
     """Compare two finished runs of one grid: the SECOND folder minus the FIRST."""
     from saltrise.compare import compare
 
-    console.print_change(compare(first, second, out, depth_error), depth_error)
+    console.print_change(compare(first, second, out, depth_error))
 
 
 @commands.command()

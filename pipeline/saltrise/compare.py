@@ -59,6 +59,30 @@ class Comparison:
     better_ha: float
     same_ha: float
     within_error_ha: float
+    depth_error_m: float
+
+    def lines(self) -> list[str]:
+        """The short report."""
+        lines = ["The runs have the same settings, inputs and software."]
+        if self.differing:
+            lines = ["The runs differ in:", *(f"  {text}" for text in self.differing)]
+        before, after = self.load_t_per_year
+        change = f" ({100 * (after - before) / before:+.3g} %)" if before else ""
+        lines += [
+            f"Gross salt rise where both assess: {before:,.0f} to {after:,.0f} t/year{change}",
+            f"  worse by class  {self.worse_ha:>14,.1f} ha",
+            f"  better by class {self.better_ha:>14,.1f} ha",
+            f"  same class      {self.same_ha:>14,.1f} ha",
+        ]
+        if self.depth_error_m > 0:
+            lines.append(
+                f"  of the changed, {self.within_error_ha:,.1f} ha have depths that differ by no "
+                f"more than {self.depth_error_m:g} m, within their error"
+            )
+        caution = (
+            "Screening level; a change of settings or inputs changes the map as the land does."
+        )
+        return [*lines, caution]
 
 
 def compare(first: Path, second: Path, folder: Path, depth_error_m: float = 0.0) -> Comparison:
@@ -111,8 +135,9 @@ def compare(first: Path, second: Path, folder: Path, depth_error_m: float = 0.0)
     )
     areas = found.areas if cover is not None else whole.areas
     write_csv(partial / "class_transitions.csv", _transitions(ids, names, areas))
-    outcome = _outcome(folder, differing, whole)
-    durable.write_json(partial / "change.json", _summary(runs, outcome, depth_error_m))
+    outcome = _outcome(folder, differing, whole, depth_error_m)
+    durable.write_json(partial / "change.json", _summary(runs, outcome))
+    durable.write_whole(partial / "report.txt", ["\n".join(outcome.lines()).encode()])
     partial.rename(folder)
     return outcome
 
@@ -208,7 +233,7 @@ def _transitions(ids: list[str], names: list[str], areas: Array) -> dict[str, li
     return table
 
 
-def _outcome(folder: Path, differing: list[str], whole: _Found) -> Comparison:
+def _outcome(folder: Path, differing: list[str], whole: _Found, depth_error_m: float) -> Comparison:
     square = whole.areas[0].reshape(_CODES, _CODES)[1:, 1:] / 1e4
     upper, lower = float(np.triu(square, 1).sum()), float(np.tril(square, -1).sum())
     return Comparison(
@@ -219,10 +244,11 @@ def _outcome(folder: Path, differing: list[str], whole: _Found) -> Comparison:
         lower,
         float(np.trace(square)),
         whole.doubtful_m2 / 1e4,
+        depth_error_m,
     )
 
 
-def _summary(runs: list[Result], outcome: Comparison, depth_error_m: float) -> dict[str, Any]:
+def _summary(runs: list[Result], outcome: Comparison) -> dict[str, Any]:
     return {
         "first": {"title": runs[0].record["title"], "date": runs[0].record["date"]},
         "second": {"title": runs[1].record["title"], "date": runs[1].record["date"]},
@@ -231,7 +257,7 @@ def _summary(runs: list[Result], outcome: Comparison, depth_error_m: float) -> d
         "worse_ha": outcome.worse_ha,
         "better_ha": outcome.better_ha,
         "same_class_ha": outcome.same_ha,
-        "depth_error_m": depth_error_m,
-        "within_error_ha": outcome.within_error_ha if depth_error_m > 0 else None,
+        "depth_error_m": outcome.depth_error_m,
+        "within_error_ha": outcome.within_error_ha if outcome.depth_error_m > 0 else None,
         "use_limits": runs[1].record["use_limits"],
     }

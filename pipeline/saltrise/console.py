@@ -7,6 +7,8 @@ import sys
 import time
 from typing import TYPE_CHECKING, Any, TextIO
 
+from saltrise.layers import MASK_REASONS
+
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
@@ -16,15 +18,6 @@ if TYPE_CHECKING:
     from saltrise.job import Listener
     from saltrise.physics.soils import SoilSet
     from saltrise.result import Result
-
-_MASK_REASONS = {
-    "no_depth": "no depth to water table",
-    "no_texture": "no texture",
-    "not_soil": "mapped to not soil",
-    "no_salinity": "no groundwater salinity",
-    "no_potential_evaporation": "no potential evaporation, rain or irrigation",
-    "no_root_depth": "no depth of the root zone",
-}
 
 
 class Ears:
@@ -179,7 +172,7 @@ def _print_masked(counts: dict[str, int]) -> None:
     cells = counts["cells"]
     masked = cells - counts["assessed"] - counts["at_surface"]
     print(f"{masked:,} of {cells:,} cells have no answer" + (":" if masked else ""))
-    for reason, text in _MASK_REASONS.items():
+    for reason, text in MASK_REASONS.items():
         if counts.get(reason):
             print(f"  {counts[reason]:>14,}  {text}")
     print(f"{counts['demand_limited']:,} cells are limited by evaporative demand")
@@ -291,26 +284,10 @@ def print_comparison(
         print(f"{texture:<17}{row}")
 
 
-def print_change(found: Comparison, depth_error_m: float) -> None:
+def print_change(found: Comparison) -> None:
     """Print what a comparison of two runs found."""
-    if found.differing:
-        print("The runs differ in:")
-        for text in found.differing:
-            print(f"  {text}")
-    else:
-        print("The runs have the same settings, inputs and software.")
-    before, after = found.load_t_per_year
-    change = f" ({100 * (after - before) / before:+.3g} %)" if before else ""
-    print(f"Gross salt rise on land assessed in both: {before:,.0f} to {after:,.0f} t/year{change}")
-    print(f"  worse by class  {found.worse_ha:>14,.1f} ha")
-    print(f"  better by class {found.better_ha:>14,.1f} ha")
-    print(f"  same class      {found.same_ha:>14,.1f} ha")
-    if depth_error_m > 0:
-        print(
-            f"  of the changed, {found.within_error_ha:,.1f} ha have depths that differ by no more "
-            f"than {depth_error_m:g} m, within their error"
-        )
-    print("Screening level; a change of settings or inputs changes the map as much as the land.")
+    for line in found.lines():
+        print(line)
     print(f"Written to {found.folder}")
 
 

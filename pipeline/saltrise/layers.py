@@ -223,3 +223,14 @@ def layer_of(name: str) -> Layer:
     return replace(
         LAYERS[base], name=name, unit=PER_SEASON[base], meaning=f"{meaning}, season {season}"
     )
+
+
+MASK_REASONS = {
+    "no_depth": "no depth to water table",
+    "no_texture": "no texture",
+    "not_soil": "mapped to not soil",
+    "no_salinity": "no groundwater salinity",
+    "no_potential_evaporation": "no potential evaporation, rain or irrigation",
+    "no_root_depth": "no depth of the root zone",
+}
+"""Why a cell has no answer, by the name of its count."""

@@ -20,7 +20,7 @@ from saltrise.engine.region import Region
 from saltrise.engine.soils import profile_of
 from saltrise.io.finished import read_reduced
 from saltrise.io.regrid import ground_size
-from saltrise.layers import layer_of
+from saltrise.layers import MASK_REASONS, layer_of
 from saltrise.report.figures import (
     Sheet,
     colours_of,
@@ -42,6 +42,8 @@ _LONGEST = 900
 
 _DEPTH_NAMES = ("under 1 m", "1 to under 2 m", "2 to under 3 m", "3 m and more")
 _MOST_CURVES = 12
+_BARS, _SAMPLE = 24, 24
+"""Bars of an input's histogram, and blocks it is taken from at most."""
 
 _COLUMNS = (
     ("zone_id", "id"),
@@ -292,20 +294,32 @@ def _chart(found: Finished) -> dict[str, Any] | None:
         )
         for stack in stacks
     ]
-    demand = found.totals.ranges.get("potential_evaporation")
-    season = recipe.seasons[0]
-    rate = 0.0
-    if len(recipe.seasons) == 1:
-        constant = recipe.constants.get(season.potential_evaporation)
-        if constant is not None:
-            rate = constant * season.demand_factor / season.days
-        elif demand is not None and demand.low is not None and demand.high is not None:
-            rate = (demand.low + demand.high) / 2 * season.demand_factor / season.days
+    figures = region_figures(found.totals.zones, recipe.extra_sums)
+    evaporation = figures["evaporation_mean_mm_per_year"]
+    if not evaporation:
+        return None
+    # Mean salinity of the water that evaporates, and the year's load of 1 mm/day of it.
+    tds = 100.0 * figures["salt_load_mean_t_per_ha_per_year"] / evaporation
+    load = recipe.days * tds / 100.0
+    curves = [(name, depths, rates * load) for name, depths, rates in curves]
+    rate = _mean_demand(found) * load
     chart = curve_chart(curves, rate, deepest)
-    return chart | {
-        "labels": _spaced(chart["lines"], chart["right"]),
-        "depths": _depths(found, chart),
-    }
+    labels = _spaced(chart["lines"], chart["right"])
+    return chart | {"labels": labels, "depths": _depths(found, chart), "tds": f"{tds:.3g}"}
+
+
+def _mean_demand(found: Finished) -> float:
+    """Evaporative demand [mm/day] of the region, midway between its least and greatest; 0 where
+    seasons each have their own."""
+    recipe = found.plan.recipe
+    if len(recipe.seasons) > 1:
+        return 0.0
+    season = recipe.seasons[0]
+    value = recipe.constants.get(season.potential_evaporation)
+    seen = found.totals.ranges.get(season.potential_evaporation)
+    if value is None and seen is not None and seen.low is not None and seen.high is not None:
+        value = (seen.low + seen.high) / 2
+    return 0.0 if value is None else value * season.demand_factor / season.days
 
 
 def _spaced(lines: Sequence[Mapping[str, Any]], right: float) -> list[dict[str, Any]]:
@@ -353,29 +367,39 @@ def _inputs(found: Finished) -> list[dict[str, Any]]:
                 "high": f"{seen.high:g}" if seen and seen.high is not None else "",
                 "unit": region.inputs.unit_of(settings, role),
                 "date": dates[key_of(role)],
+                "bars": _histogram(found, role),
             }
         )
     for role, value in region.inputs.constants.items():
         number = {"low": f"{value:g}", "high": f"{value:g}", "valid": "", "nodata": ""}
         unit = region.inputs.unit_of(settings, role)
         where = {"key": key_of(role), "how": "one number", "unit": unit}
-        rows.append(where | number | {"date": dates[key_of(role)]})
+        rows.append(where | number | {"date": dates[key_of(role)], "bars": []})
     return rows
 
 
+def _histogram(found: Finished, role: str) -> list[float]:
+    """Shares of an input's values in even steps from its least to its greatest, the largest being
+    1, from blocks spread over the region."""
+    seen = found.totals.ranges.get(role)
+    if seen is None or seen.low is None or seen.high is None or seen.low == seen.high:
+        return []
+    blocks = list(found.plan.grid.blocks())
+    picked = blocks[:: max(1, len(blocks) // _SAMPLE)][:_SAMPLE]
+    counts = np.zeros(_BARS)
+    for block in picked:
+        values = found.plan.readers[role].read(block)
+        there = values[np.isfinite(values)]
+        counts += np.histogram(there, _BARS, (seen.low, seen.high))[0]
+    most = counts.max()
+    return [float(count / most) for count in counts] if most > 0 else []
+
+
 def _masked(counts: Mapping[str, int]) -> list[str]:
-    reasons = {
-        "no_depth": "no depth to water table",
-        "no_texture": "no texture",
-        "not_soil": "mapped to not soil",
-        "no_salinity": "no groundwater salinity",
-        "no_potential_evaporation": "no potential evaporation, rain or irrigation",
-        "no_root_depth": "no depth of the root zone",
-    }
     cells = counts["cells"]
     gone = cells - counts["assessed"] - counts["at_surface"]
     lines = [f"{gone:,} of {cells:,} cells have no answer."]
-    for reason, text in reasons.items():
+    for reason, text in MASK_REASONS.items():
         if counts.get(reason):
             lines.append(f"{counts[reason]:,} cells: {text}.")
     return lines

@@ -44,20 +44,20 @@ _LEFT, _TOP, _WIDE, _HIGH = 60.0, 10.0, 560.0, 260.0
 
 
 def curve_chart(
-    curves: Sequence[tuple[str, Floats, Floats]], demand_mm_per_day: float, deepest_m: float
+    curves: Sequence[tuple[str, Floats, Floats]], demand: float, deepest_m: float
 ) -> dict[str, Any]:
-    """Rise curves as lines of an SVG: rate [mm/day], logarithmic, against depth [m].
+    """Rise curves as lines of an SVG: load [t/ha/year], logarithmic, against depth [m].
 
     Parameters
     ----------
-    curves : sequence of (name, depths, rates)
+    curves : sequence of (name, depths, loads)
         One a soil.
-    demand_mm_per_day : float
-        The region's mean evaporative demand, drawn as a line.
+    demand : float
+        Load that the evaporative demand carries, drawn as a line; 0 for none.
     deepest_m : float
         Right end of the axis.
     """
-    low, high = -2.0, 1.5
+    low, high = -1.0, 3.0
 
     def place(depth: float, rate: float) -> tuple[float, float]:
         along = (np.log10(max(rate, 1e-9)) - low) / (high - low)
@@ -66,16 +66,18 @@ def curve_chart(
     lines = []
     for name, depths, rates in curves:
         points = [
-            place(float(d), float(r)) for d, r in zip(depths, rates, strict=True) if r >= 10**low
+            place(float(d), float(r))
+            for d, r in zip(depths, rates, strict=True)
+            if 10**low <= r <= 10**high
         ]
         text = " ".join(f"{x:.1f},{y:.1f}" for x, y in points)
         lines.append({"name": name, "points": text, "end": points[-1] if points else None})
-    ticks_y = [(place(0, r)[1], f"{r:g}") for r in (0.01, 0.1, 1.0, 10.0)]
+    ticks_y = [(place(0, r)[1], f"{r:g}") for r in (0.1, 1.0, 10.0, 100.0, 1000.0)]
     step = 1 if deepest_m <= 8 else 2
     ticks_x = [(place(d, 1.0)[0], f"{d:g}") for d in range(0, int(deepest_m) + 1, step)]
     return {
         "lines": lines,
-        "demand": place(0, demand_mm_per_day)[1] if demand_mm_per_day > 0 else None,
+        "demand": place(0, demand)[1] if demand > 0 else None,
         "ticks_x": ticks_x,
         "ticks_y": ticks_y,
         "left": _LEFT,
