@@ -41,8 +41,8 @@ from saltrise.errors import (
 )
 from saltrise.io import durable
 from saltrise.io.fingerprint import code_print
+from saltrise.io.geopackage import write_zones_gpkg
 from saltrise.io.tables import write_csv
-from saltrise.io.vectors import write_zones_gpkg
 from saltrise.result import Result
 from saltrise.settings import Settings
 from saltrise.zone_table import zone_table

@@ -46,7 +46,6 @@ class Soil(Protocol):
 
     def cells(self, given: Mapping[str, Array]) -> SoilCells:
         """Soils of some cells from inputs by role, in the config's units."""
-        ...  # pragma: no cover
 
 
 @dataclass(frozen=True)

@@ -30,12 +30,6 @@ SIZE = 8192
 CONTENDERS = Path(__file__).with_name("contenders.py")
 
 
-@pytest.fixture(scope="module")
-def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    named = os.environ.get("BENCH_FOLDER")
-    return Path(named) if named else tmp_path_factory.mktemp("bench")
-
-
 def once(name: str, config: Path) -> tuple[float, float]:
     """Wall time [s] and peak memory [GB] of one contender."""
     for left in ("out", "out.unfinished", "out_plain", "out_xarray"):
@@ -59,15 +53,6 @@ def ratio(told, first: tuple[str, Path], second: tuple[str, Path]) -> float:
     span = f"{min(found):.2f} to {max(found):.2f}"
     told(f"{first[0]} {first[1].stem} / {second[0]}: {middle:.2f} ({span})")
     return middle
-
-
-@pytest.fixture
-def told(capsys: pytest.CaptureFixture[str]):
-    def tell(text: str) -> None:
-        with capsys.disabled():
-            sys.stdout.write(f"\n  {text}\n")
-
-    return tell
 
 
 def test_the_floors_own_writer_is_no_slow_one(folder: Path, told) -> None:

@@ -6,7 +6,7 @@ import time
 
 import pytest
 from bench_region import SOILS, make_region
-from test_ratios import SIZE, folder, ratio, told  # noqa: F401
+from test_ratios import SIZE, ratio
 
 pytestmark = pytest.mark.bench
 
@@ -14,13 +14,13 @@ MOST = {"layers": 1.5} | dict.fromkeys(list(SOILS)[2:], 1.3)
 
 
 @pytest.mark.parametrize("soil", MOST)
-def test_soils_against_one_class_raster(folder, told, soil: str) -> None:  # noqa: F811
+def test_soils_against_one_class_raster(folder, told, soil: str) -> None:
     plain = make_region(folder / str(SIZE), SIZE)
     other = make_region(folder / str(SIZE), SIZE, soil=soil)
     assert ratio(told, ("saltrise", other), ("saltrise", plain)) <= MOST[soil]
 
 
-def test_two_thousand_stacks_are_ready_in_a_minute(told) -> None:  # noqa: F811
+def test_two_thousand_stacks_are_ready_in_a_minute(told) -> None:
     import itertools
     from pathlib import Path
 

@@ -11,7 +11,8 @@ from typing import Any
 from saltrise.engine.account import CAUTIONS, METHOD
 from saltrise.engine.identity import versions
 from saltrise.engine.merge import Totals
-from saltrise.engine.pictures import Finished, draw_map, draw_page
+from saltrise.engine.page_content import draw_page
+from saltrise.engine.pictures import Finished, draw_map
 from saltrise.engine.region import Region
 from saltrise.io import durable
 from saltrise.io.fingerprint import fingerprint

@@ -37,15 +37,12 @@ class Heights(Protocol):
 
     def at(self, suction_m: Floats) -> tuple[Floats, Floats]:
         """Height [m] of a suction [m], infinite allowed, and its slope against flux."""
-        ...  # pragma: no cover
 
     def share(self, suction_m: Floats) -> Floats:
         """1 / (1 + E/K): slope of height against suction."""
-        ...  # pragma: no cover
 
     def below(self, suction_m: Floats, distance_m: float) -> Floats:
         """Suction [m] at a distance below the place of another; below zero under water."""
-        ...  # pragma: no cover
 
 
 class QuadratureHeights:

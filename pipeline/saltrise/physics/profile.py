@@ -25,19 +25,15 @@ class Profile(Protocol):
     @property
     def steep(self) -> bool:
         """Whether evaporation falls off faster than any power of depth (needs denser nodes)."""
-        ...  # pragma: no cover
 
     def heights(self, flux_mm_per_day: Floats) -> Heights:
         """Heights of suctions above the water table under fluxes [mm/day] > 0."""
-        ...  # pragma: no cover
 
     def evaporation(self, depth_m: Floats) -> tuple[Floats, Floats]:
         """Maximum steady evaporation [mm/day] and its slope [mm/day/m] at depths [m] > 0."""
-        ...  # pragma: no cover
 
     def depth(self, flux_mm_per_day: Floats) -> tuple[Floats, Floats]:
         """Depth [m] that lifts a flux [mm/day] > 0, and its slope [m/(mm/day)]."""
-        ...  # pragma: no cover
 
 
 @dataclass(frozen=True)

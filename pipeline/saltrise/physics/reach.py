@@ -34,15 +34,12 @@ class Conductor(Protocol):
     @property
     def anchor_m(self) -> float:
         """Suction [m] where the law's slope breaks, or any inside it where none does."""
-        ...  # pragma: no cover
 
     def conductivity(self, suction_m: Floats) -> Floats:
         """Conductivity [mm/day] at suctions [m] > 0."""
-        ...  # pragma: no cover
 
     def __hash__(self) -> int:
         """Equal laws have equal hashes: what is made of one is kept."""
-        ...  # pragma: no cover
 
 
 _GAUSS = np.polynomial.legendre.leggauss(_POINTS)

@@ -26,11 +26,9 @@ class Curves(Protocol[Cells_contra]):
 
     def max_evaporation(self, cells: Cells_contra, depth_m: Floats) -> Floats:
         """Maximum steady evaporation [mm/day] over a rise [m]."""
-        ...  # pragma: no cover
 
     def critical_depth(self, cells: Cells_contra, flux_mm_per_day: Floats) -> Floats:
         """Rise [m] from which a flux [mm/day] is lifted: 0.001 to 30 m."""
-        ...  # pragma: no cover
 
 
 def salt_load(evaporation_mm: Floats, tds_g_per_l: Floats) -> Floats:

@@ -26,7 +26,6 @@ class Retainer(Conductor, Protocol):
 
     def drained(self, suction_m: Floats) -> Floats:
         """Water content below saturation [-] at suctions [m] > 0."""
-        ...  # pragma: no cover
 
 
 class Drainage:
