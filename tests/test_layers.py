@@ -224,3 +224,10 @@ def test_more_keys_than_a_table_holds_are_searched_for(tmp_path: Path, monkeypat
     monkeypatch.setattr(soils, "DENSE", 10)
     sparse = saltrise.run(config, force=True).layer("salt_load")[0]
     np.testing.assert_array_equal(dense.filled(), sparse.filled())
+
+
+def test_one_layer_given_as_a_number(tmp_path: Path) -> None:
+    one = saltrise.run(write(tmp_path / "layer", [{"texture": 3}]))
+    other = saltrise.run(write(tmp_path / "plain", [], soil={"texture": 3}))
+    a, b = (r.layer("salt_load")[0] for r in (one, other))
+    np.testing.assert_allclose(a.filled(1), b.filled(1), rtol=2e-5)

@@ -351,3 +351,15 @@ def test_summary_of_a_leap_year(tmp_path: Path) -> None:
     found = CliRunner().invoke(commands, ["run", str(write(tmp_path, seasons))])
     assert found.exit_code == 0
     assert "land that gets neither" in found.output
+
+
+def test_margin_keeps_its_sign_where_a_mean_depth_is_above_ground(tmp_path: Path) -> None:
+    seasons = [
+        {"name": "flooded", "days": 300, "depth": -0.5, "salinity": 0.05},
+        {"name": "drained", "days": 65, "depth": 0.4, "salinity": 0.05},
+    ]
+    result = saltrise.run(write(tmp_path, seasons))
+    load, margin = (result.layer(n)[0] for n in ("salt_load", "depth_margin"))
+    assert np.ma.all(load < TARGET)
+    assert np.ma.all(margin >= 0)
+    assert not np.any(result.layer("hazard_class")[0] == 6)

@@ -222,9 +222,7 @@ def _answer(
         values["salt_load_lowest_set"] = np.minimum.reduce(loads)
         values["salt_load_highest_set"] = np.maximum.reduce(loads)
     classes = recipe.scheme.classify(values[recipe.scheme.layer])
-    surface = at_surface(waters[0].depth)
-    for water in waters[1:]:
-        surface &= at_surface(water.depth)
+    surface = _flooded(waters)
     classes[surface] = SURFACE_CLASS
     classes[~valid] = 0
     counts["at_surface"] = int(np.count_nonzero(valid & surface))
@@ -250,6 +248,14 @@ def converted(recipe: Recipe, given: Mapping[str, Array]) -> list[_Water]:
         tds = given[season.salinity] * recipe.tds_factor
         waters.append(_Water(depth * recipe.depth_factor, tds, demand, percolation))
     return waters
+
+
+def _flooded(waters: list[_Water]) -> NDArray[np.bool_]:
+    """Where water stands at or above the surface in every season."""
+    surface = at_surface(waters[0].depth)
+    for water in waters[1:]:
+        surface &= at_surface(water.depth)
+    return surface
 
 
 def _any_missing(seasons: list[Array]) -> NDArray[np.bool_]:
@@ -322,7 +328,9 @@ def _layers(
     critical = critical_depth(recipe.curves, cells, parts, recipe.target_load, root)
     effective = depth
     if len(parts) > 1:
-        effective = effective_depth(recipe.curves, cells, parts, year.rises, depth, root)
+        found = effective_depth(recipe.curves, cells, parts, year.rises, depth, root)
+        # Where some season's water lies below ground, no constant depth above it brings the same.
+        effective = np.where(_flooded(waters), depth, np.maximum(found, 0.0))
     values = {
         "max_evaporation": year.maximum,
         "evaporation": year.evaporation,

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from saltrise.engine.inputs import Inputs
+from saltrise.engine.inputs import Inputs, key_of
 from saltrise.engine.survey import BlockScan
 from saltrise.errors import InputError
 from saltrise.physics.column import Column
@@ -121,15 +121,15 @@ def _single(settings: Settings, inputs: Inputs, found: BlockScan) -> set[tuple[i
 
 def _constant_codes(settings: Settings, inputs: Inputs) -> set[float]:
     """The texture code that numbers in the config give, if they do."""
-    given = inputs.constants
-    if "texture" in given:
-        return {given["texture"]}
-    if not {"sand", "clay"} <= given.keys() or "silt" in inputs.rasters:
+    given, end = inputs.constants, inputs.layers[0]
+    if f"texture{end}" in given:
+        return {given[f"texture{end}"]}
+    if not {f"sand{end}", f"clay{end}"} <= given.keys() or f"silt{end}" in inputs.rasters:
         return set()
     try:
-        return {float(inputs.texture_number(given, ""))}
+        return {float(inputs.texture_number(given, end))}
     except InputError as error:
-        raise InputError(settings.fault("soil.sand", str(error))) from error
+        raise InputError(settings.fault(key_of(f"sand{end}"), str(error))) from error
 
 
 def soil_faults(settings: Settings, sets: Sequence[SoilSet], textures: Sequence[str]) -> list[str]:

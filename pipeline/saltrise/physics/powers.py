@@ -23,12 +23,17 @@ def exp2(x: Floats) -> Floats:
     """2 to the power x, for |x| < 1000."""
     whole = np.rint(x)
     part = x - whole
-    value = np.full_like(part, _EXP[-1])
-    for coefficient in _EXP[-2::-1]:
+    value = part * _EXP[-1]
+    value += _EXP[-2]
+    for coefficient in _EXP[-3::-1]:
         value *= part
         value += coefficient
-    result: Floats = np.ldexp(value, whole.astype(np.int64))
-    return result
+    # A whole power of two is an exponent without a mantissa.
+    bits = whole.astype(np.int64)
+    bits += 1023
+    bits <<= 52
+    value *= bits.view(np.float64)
+    return value
 
 
 def log2(x: Floats) -> Floats:
