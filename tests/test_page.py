@@ -135,6 +135,32 @@ def test_equal_runs_give_equal_pages(tmp_path: Path, monkeypatch: pytest.MonkeyP
     assert pages[0] == pages[1]
 
 
+def test_a_run_ended_while_handing_over_goes_on_to_the_same_bytes(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    import runs
+    from saltrise.io import durable
+
+    monkeypatch.setenv("SOURCE_DATE_EPOCH", runs.DATE)
+    whole = runs.hashes(make(tmp_path / "whole").folder)
+    for name in ("salt_load.sld", "salt_load.png", "report.html", "item.json"):
+
+        def end(step: str, name: str = name) -> None:
+            if step == name:
+                raise runs.Stopped(name)
+
+        durable.observers.append(end)
+        try:
+            with pytest.raises(runs.Stopped):
+                make(tmp_path / name)
+        finally:
+            durable.observers.remove(end)
+        again = runs.hashes(make(tmp_path / name).folder)
+        assert {k: v for k, v in again.items() if k != "run.json"} == {
+            k: v for k, v in whole.items() if k != "run.json"
+        }
+
+
 BROWSER = shutil.which("chromium") or shutil.which("google-chrome")
 browser_only = pytest.mark.skipif(BROWSER is None, reason="needs chromium")
 

@@ -71,7 +71,9 @@ def draw_map(found: Finished, name: str) -> bytes:
     )
     scheme = found.region.scheme
     picture = colours_of(values, layer, scheme)
-    return map_png(picture, layer, scheme, sheet, found.plan.zones.shapes, title, caption)
+    shapes, table = found.plan.zones.shapes, found.table
+    names = [drawable(table["name"][k], table["zone_id"][k]) for k in range(len(shapes))]
+    return map_png(picture, layer, scheme, sheet, shapes, names, title, caption)
 
 
 def page_maps(found: Finished) -> list[dict[str, Any]]:

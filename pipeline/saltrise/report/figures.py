@@ -17,6 +17,9 @@ from saltrise.schemes import Scheme
 
 Rgba = NDArray[np.uint8]
 
+_MOST_NAMES = 40
+"""Zones up to which a map shows their names."""
+
 NODATA_GREY = (225, 225, 225, 255)
 
 
@@ -114,6 +117,7 @@ def map_png(
     scheme: Scheme,
     sheet: Sheet,
     outlines: Sequence[BaseGeometry],
+    names: Sequence[str],
     title: str,
     caption: str,
 ) -> bytes:
@@ -127,6 +131,8 @@ def map_png(
         What it shows and how it lies.
     outlines : sequence of polygons
         Zones in cell coordinates.
+    names : sequence of str
+        Of the zones, written inside them while there are few.
     title, caption : str
         Above and below the map.
     """
@@ -151,6 +157,9 @@ def map_png(
         for ring in (polygon.exterior, *polygon.interiors)
     ]
     axes.add_collection(LineCollection(lines, colors="#222222", linewidths=0.6))
+    if len(names) <= _MOST_NAMES:
+        for shape, name in zip(outlines, names, strict=True):
+            _name(axes, shape, name, sheet)
     axes.set_xlim(0, sheet.width)
     axes.set_ylim(sheet.height, 0)
     axes.set_axis_off()
@@ -162,6 +171,26 @@ def map_png(
     quick = {"compress_level": 3}
     figure.savefig(buffer, format="png", metadata={"Software": "saltrise"}, pil_kwargs=quick)
     return buffer.getvalue()
+
+
+def _name(axes: object, shape: BaseGeometry, name: str, sheet: Sheet) -> None:
+    from matplotlib.axes import Axes
+    from matplotlib.patheffects import withStroke
+
+    assert isinstance(axes, Axes)
+    at = shape.representative_point()
+    if shape.area < (0.03 * sheet.width * sheet.cells) ** 2:
+        return  # a zone too small for its name
+    axes.text(
+        at.x / sheet.cells,
+        at.y / sheet.cells,
+        _plain(name)[:28],
+        fontsize=7,
+        ha="center",
+        va="center",
+        clip_on=True,
+        path_effects=[withStroke(linewidth=2, foreground="white")],
+    )
 
 
 def _plain(text: str) -> str:
