@@ -150,3 +150,39 @@ def test_styles_of_a_margin_scheme() -> None:
     rows = [[c.text for c in row.findall("F")] for row in table.iter("Row")]
     assert rows[0][2:4] == ["1.0", None]
     assert rows[4][2:4] == [None, "-0.5"]
+
+
+def test_areas_crossed_by_depth_and_salinity(result: saltrise.Result) -> None:
+    with (result.folder / "depth_by_salinity.csv").open(encoding="utf-8") as file:
+        rows = list(csv.DictReader(file))
+    assert len(rows) == 3 * 16
+    zones = result.zones.set_index("zone_id")
+    for zone in ("a", "b"):
+        mine = [r for r in rows if r["zone_id"] == zone]
+        total = sum(float(r["area_ha"]) for r in mine)
+        assert total == pytest.approx(zones.loc[zone, "assessed_ha"], rel=1e-12)
+        shallow = sum(float(r["area_ha"]) for r in mine if r["depth_from_m"] == "0.0")
+        assert shallow == pytest.approx(zones.loc[zone, "depth_under_1_ha"], rel=1e-12)
+
+
+def test_a_page_of_three_thousand_zones_stays_small(tmp_path: Path) -> None:
+    west, north = regions.WEST, regions.NORTH
+    shapes = {
+        f"z{k:04d}": box(
+            *((west + 25 * (k % 60)), north - 22 * (k // 60 + 1)),
+            *((west + 25 * (k % 60 + 1)), north - 22 * (k // 60)),
+        )
+        for k in range(3000)
+    }
+    regions.write_zones(tmp_path / "zones.gpkg", shapes)
+    output = {
+        "folder": str(tmp_path / "out"),
+        "report": True,
+        "layers": ["hazard_class", "salt_load"],
+    }
+    result = saltrise.run(
+        regions.small_region(tmp_path, zones={"file": "zones.gpkg"}, output=output)
+    )
+    page = (result.folder / "report.html").read_text("utf-8")
+    assert len(page.encode()) < 5e6
+    assert page.count("Zone z") >= 3000

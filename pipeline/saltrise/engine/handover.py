@@ -8,6 +8,8 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from saltrise.engine.account import CAUTIONS, METHOD
 from saltrise.engine.identity import versions
 from saltrise.engine.merge import Totals
@@ -21,7 +23,7 @@ from saltrise.io.tables import write_csv
 from saltrise.layers import layer_of
 from saltrise.report.stac import HandedFile, Place, stac_item
 from saltrise.report.styles import attribute_table, sld
-from saltrise.zonal import REGION
+from saltrise.zonal import DEPTH_EDGES_M, REGION, SALT_EDGES_G_PER_L
 from saltrise.zone_table import MEANINGS
 
 _ITEM = "item.json"
@@ -45,6 +47,7 @@ def hand_over(found: Finished) -> None:
         )
     if region.zones is not None:
         _columns(folder)
+    _crossed(found)
     if region.settings.output.report:
         _pictures(found)
     item = _item(region, totals, found.date, folder)
@@ -84,6 +87,27 @@ def _columns(folder: Path) -> None:
         "meaning": [MEANINGS[name][1] for name in head],
     }
     write_csv(folder / "zones_columns.csv", table)
+
+
+def _crossed(found: Finished) -> None:
+    """Assessed hectares by depth class and salinity class, of the region and each zone."""
+    target = found.folder / "depth_by_salinity.csv"
+    if target.exists():
+        return
+    zones = found.region.zones
+    known = [("", "whole region", REGION)]
+    if zones is not None:
+        known += [
+            (id_, name, k) for k, (id_, name) in enumerate(zip(zones.ids, zones.names, strict=True))
+        ]
+    names = ("zone_id", "name", "depth_from_m", "tds_from_g_per_l", "area_ha")
+    table: dict[str, list[Any]] = {name: [] for name in names}
+    for id_, name, zone in known:
+        for (depth, salt), area in np.ndenumerate(found.totals.zones.depth_by_salinity(zone)):
+            edges = ((0.0, *DEPTH_EDGES_M)[depth], (0.0, *SALT_EDGES_G_PER_L)[salt])
+            for column, cell in zip(table, (id_, name, *edges, float(area) / 1e4), strict=True):
+                table[column].append(cell)
+    write_csv(target, table)
 
 
 def _item(region: Region, totals: Totals, date: datetime, folder: Path) -> dict[str, Any]:

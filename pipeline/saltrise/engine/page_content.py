@@ -20,6 +20,9 @@ from saltrise.zone_table import CLASS_COLUMNS, DEPTH_COLUMNS, region_figures
 
 _DEPTH_NAMES = ("under 1 m", "1 to under 2 m", "2 to under 3 m", "3 m and more")
 _MOST_CURVES = 12
+_MOST_DETAILED, _MOST_WIDE = 400, 2000
+"""Districts with bars and crossed areas, and with every column: beyond, the page would swell."""
+
 _BARS, _SAMPLE = 24, 24
 """Bars of an input's histogram, and blocks it is taken from at most."""
 
@@ -60,11 +63,14 @@ def draw_page(found: Finished) -> str:
             "zones": rows,
             "columns": [
                 {"key": key, "label": label, "text": key in ("zone_id", "name")}
-                for key, label in _COLUMNS
+                for key, label in (_COLUMNS if len(rows) <= _MOST_WIDE else _COLUMNS[:8])
             ],
             "rank_by": settings.hazard.rank_by.replace("_", " "),
-            "bars": [_bar(found, "Region", figures)] + [_bar(found, r["name"], r) for r in rows],
-            "crossed": _crossed(found, rows),
+            "bars": [_bar(found, "Region", figures)]
+            + [_bar(found, r["name"], r) for r in rows[:_MOST_DETAILED]],
+            "crossed": _crossed(found),
+            "districts": _districts_crossed(found, rows[:_MOST_DETAILED]),
+            "detailed": min(len(rows), _MOST_DETAILED),
             "salt_names": _salt_names(),
             "chart": _chart(found),
             "inputs": _inputs(found),
@@ -139,14 +145,24 @@ def _salt_names() -> list[str]:
     return [f"{name} ({span})" for name, span in zip(SALT_NAMES, spans, strict=True)]
 
 
-def _crossed(found: Finished, rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
-    zones = [("Region", REGION)] + [(row["name"], row["zone"]) for row in rows]
-    tables = []
-    for name, zone in zones:
-        areas = found.totals.zones.depth_by_salinity(zone) / 1e4
-        cells = [[float(v) for v in row] for row in areas]
-        tables.append({"name": name, "rows": list(zip(_DEPTH_NAMES, cells, strict=True))})
-    return tables
+def _crossed(found: Finished) -> list[tuple[str, list[float]]]:
+    """Hectares of the region by depth and salinity class, a row a depth class."""
+    areas = found.totals.zones.depth_by_salinity(REGION) / 1e4
+    cells = [[float(v) for v in row] for row in areas]
+    return list(zip(_DEPTH_NAMES, cells, strict=True))
+
+
+def _districts_crossed(found: Finished, rows: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """The same for every district, all classes in one row."""
+    return [
+        {
+            "name": row["name"],
+            "cells": [
+                float(v) for v in found.totals.zones.depth_by_salinity(row["zone"]).ravel() / 1e4
+            ],
+        }
+        for row in rows
+    ]
 
 
 def _chart(found: Finished) -> dict[str, Any] | None:

@@ -31,6 +31,9 @@ from saltrise.report.styles import plain_unit
 
 Table = Mapping[str, list[Any]]
 
+_MOST_OUTLINES = 1000
+"""Zones up to which both maps of the page show them; beyond, only the first does."""
+
 _LONGEST = 900
 """Pixels of a map's longer side at most."""
 
@@ -88,7 +91,7 @@ def page_maps(found: Finished) -> list[dict[str, Any]]:
         for k, shape in enumerate(shapes)
     ]
     length, pixels = sheet.scale_bar()
-    maps = []
+    maps: list[dict[str, Any]] = []
     for name in ("hazard_class", "salt_load"):
         if name not in found.plan.layers:
             continue
@@ -113,7 +116,7 @@ def page_maps(found: Finished) -> list[dict[str, Any]]:
                 "height": sheet.height * sheet.stretch,
                 "stretch": sheet.stretch,
                 "legend": [*legend, ("#e1e1e1", "no answer")],
-                "outlines": outlines,
+                "outlines": outlines if not maps or len(outlines) <= _MOST_OUTLINES else [],
                 "scale": (length_text(length), pixels),
                 "turn": float(np.degrees(np.arctan2(sheet.north[0], -sheet.north[1]))),
             }

@@ -28,6 +28,7 @@ KNOWN = frozenset(
         "zones.gpkg",
         "zones.csv",
         "zones_columns.csv",
+        "depth_by_salinity.csv",
         "item.json",
         "report.html",
         FINISHED,
