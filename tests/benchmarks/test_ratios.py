@@ -1,4 +1,4 @@
-"""Ratios of time and memory, paired in one go: pytest -m bench tests/benchmarks -s.
+"""Ratios of time and memory, paired in one go: pytest -n 0 -m bench tests/benchmarks -s.
 
 Every contender runs in a process of its own, turn by turn, `ROUNDS` times; a ratio is the median
 of the rounds' ratios. Needs the packages of the usual script beside the tests' own:

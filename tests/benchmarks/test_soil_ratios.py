@@ -1,4 +1,4 @@
-"""What other soils cost against one class raster: pytest -m bench tests/benchmarks -s."""
+"""What other soils cost against one class raster: pytest -n 0 -m bench tests/benchmarks -s."""
 
 from __future__ import annotations
 
