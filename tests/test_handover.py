@@ -5,7 +5,9 @@ from __future__ import annotations
 import csv
 import hashlib
 import json
+import shutil
 import sqlite3
+import subprocess
 import xml.etree.ElementTree as ElementTree
 from pathlib import Path
 
@@ -80,6 +82,15 @@ def test_gdal_reads_the_attribute_table(result: saltrise.Result) -> None:
     np.testing.assert_allclose([float(row[8]) for row in rows], [region[k] for k in keys])
     with rasterio.open(result.folder / "layers" / "hazard_class.tif") as dataset:
         assert "aux.xml" in " ".join(dataset.files)
+
+
+@pytest.mark.skipif(shutil.which("gdalinfo") is None, reason="needs GDAL's command line tools")
+def test_gdals_own_tool_reads_the_attribute_table(result: saltrise.Result) -> None:
+    path = result.folder / "layers" / "hazard_class.tif"
+    found = subprocess.run(["gdalinfo", path], capture_output=True, text=True, check=True).stdout
+    table = found[found.index("<GDALRasterAttributeTable") : found.index("</GDALRasterAttribute")]
+    for name in result.record["hazard_scheme"]["names"]:
+        assert f"<F>{name}</F>" in table
 
 
 def test_the_item_is_valid_stac(result: saltrise.Result) -> None:
