@@ -142,11 +142,11 @@ def test_no_soil_lies_beyond_the_tables(method: str) -> None:
     cells, _ = soils(method, 1, seed=1)
     curves = curves_for(method, math.inf)
     many, _ = soils_of_grid(method)
-    axis = curves.flux.axes[0]
+    axis = curves.flux.axis
     assert many.n.min() >= axis.low
     assert many.n.max() <= axis.low + axis.step * (axis.count - 1)
     if curves.middle is not None:
-        axis = curves.middle.axes[0]
+        axis = curves.middle.axis
         assert many.inverse_p.min() >= axis.low
         assert many.inverse_p.max() <= axis.low + axis.step * (axis.count - 1)
     assert cells.n.size == 1

@@ -187,7 +187,9 @@ def _scan(
     if whole:
         return scan(inputs, settings.run.tile, each)
     look = first_look(inputs)
-    soil = [role for role in inputs.rasters if is_soil(role)]
+    # Regressions have no classes to know beforehand; what cannot be a tile finds.
+    by_class = settings.soil.method == "classes"
+    soil = [role for role in inputs.rasters if by_class and is_soil(role)]
     soil += ["root_depth"] if inputs.stacked and "root_depth" in inputs.rasters else []
     if not soil:
         return look

@@ -1,4 +1,4 @@
-"""Tables between whose rows one interpolates: a row a node of some axes, cubic along each."""
+"""Tables between whose rows one interpolates: a row a node of an axis, cubic along it."""
 
 from __future__ import annotations
 
@@ -46,31 +46,32 @@ class Axis:
         )
 
 
+Placed = tuple[NDArray[np.int64], tuple[Floats, ...]]
+"""First node and weights of cells on an axis."""
+
+
 @dataclass(frozen=True)
 class Blend:
-    """A table with a row a node of the axes, the last axis running fastest."""
+    """A table with a row a node of an axis."""
 
     table: Table
-    axes: tuple[Axis, ...]
+    axis: Axis
 
-    def look_up(self, coordinates: tuple[Floats, ...], value: Floats) -> Floats:
-        """Interpolate along the axes between what the rows hold at a value."""
-        placed = [axis.weights(c) for axis, c in zip(self.axes, coordinates, strict=True)]
-        located = self.table.locate(value)
-        return self._sum(placed, np.zeros(value.shape, dtype=np.int64), located)
+    def look_up(self, placed: Placed, value: Floats) -> Floats:
+        """Interpolate between what the rows hold at a value.
 
-    def _sum(
-        self,
-        placed: list[tuple[NDArray[np.int64], tuple[Floats, ...]]],
-        row: NDArray[np.int64],
-        located: tuple[NDArray[np.int64], Floats],
-    ) -> Floats:
-        if not placed:
-            return self.table.at(row, located)
-        axis = self.axes[len(self.axes) - len(placed)]
-        first, weights = placed[0]
-        row = row * axis.count + first
-        total = self._sum(placed[1:], row, located) * weights[0]
-        for k in (1, 2, 3):
-            total += self._sum(placed[1:], row + k, located) * weights[k]
+        Parameters
+        ----------
+        placed : Placed
+            Cells on the axis, by `Axis.weights`; the same for every table with that axis.
+        value : float64 array
+            Argument of the rows.
+        """
+        first, weights = placed
+        index, inside = self.table.locate(value)
+        index += first * self.table.intervals
+        total = self.table.cubics(index, inside) * weights[0]
+        for weight in weights[1:]:
+            index += self.table.intervals
+            total += self.table.cubics(index, inside) * weight
         return total

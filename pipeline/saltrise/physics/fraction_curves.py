@@ -26,7 +26,7 @@ from numpy.typing import NDArray
 from scipy.special import hyp2f1
 
 from saltrise.physics import powers
-from saltrise.physics.blend import Axis, Blend
+from saltrise.physics.blend import Axis, Blend, Placed
 from saltrise.physics.curve import DEEPEST_M, SURFACE_DEPTH_M
 from saltrise.physics.profile import Campbell
 from saltrise.physics.table import tabulate
@@ -121,11 +121,15 @@ class FractionCurves:
             tail_share=powers.power(share, 1.0 / cells.inverse_p),
         )
 
+    def _exponents(self, cells: FractionCells) -> Placed:
+        """Cells on the axis of exponents, which all tables of tails share."""
+        return self.flux.axis.weights(cells.n)
+
     def _guess(self, cells: FractionCells, rise: Floats) -> Floats:
         """E/Ks if the soil were Campbell's with its own tail throughout: exact for Campbell's."""
         if cells.tail_m is None or cells.tail_share is None:
-            return self.flux.look_up((cells.n,), rise / cells.air_entry_m)
-        return self.flux.look_up((cells.n,), rise / cells.tail_m) * cells.tail_share
+            return self.flux.look_up(self._exponents(cells), rise / cells.air_entry_m)
+        return self.flux.look_up(self._exponents(cells), rise / cells.tail_m) * cells.tail_share
 
     def reach(self, cells: FractionCells, rate: Floats) -> tuple[Floats, Floats]:
         """Depth [m] that lifts E/Ks = `rate`, and its slope against log rate [m]."""
@@ -139,8 +143,9 @@ class FractionCurves:
             assert cells.inverse_p is not None
             tail_rate, start = rate / cells.tail_share, cells.tail_m
             span = (start - cells.air_entry_m) / (1.0 - cells.theta_share)
-            whole = self.middle.look_up((cells.inverse_p,), rate)
-            rest = self.middle.look_up((cells.inverse_p,), tail_rate) * cells.theta_share
+            middle = self.middle.axis.weights(cells.inverse_p)
+            whole = self.middle.look_up(middle, rate)
+            rest = self.middle.look_up(middle, tail_rate) * cells.theta_share
             depth = depth + span * (whole - rest)
             # d P / d log q = (P - 1/(1+q)) / p, by parts.
             ends = 1.0 / (1.0 + rate) - cells.theta_share / (1.0 + tail_rate)
@@ -152,11 +157,12 @@ class FractionCurves:
         """Depth beyond the suction where the tail begins, and its slope against log rate [m]."""
         inside = 1.0 / (1.0 + rate)
         if self.limited is None:
-            scaled = self.depth.look_up((cells.n,), rate)
+            scaled = self.depth.look_up(self._exponents(cells), rate)
             return start * (scaled - inside), start * (-scaled / cells.n)
+        exponents = self._exponents(cells)
         dried = rate * powers.power(self.suction_m / start, cells.n)
-        far = self.limited.look_up((cells.n,), dried) * self.suction_m
-        near = self.limited.look_up((cells.n,), rate) * start
+        far = self.limited.look_up(exponents, dried) * self.suction_m
+        near = self.limited.look_up(exponents, rate) * start
         # d V / d log q = (1/(1+q) - V) / n, by parts.
         ends = self.suction_m / (1.0 + dried) - start * inside
         return far - near, (ends - (far - near)) / cells.n
@@ -207,12 +213,12 @@ def fraction_curves(
     limited = middle = None
     if suction_m < math.inf:
         rows = [_limited(float(n)) for n in axis.nodes()]
-        limited = Blend(tabulate(_WIDE_OCTAVES, _RATE_BITS, rows), (axis,))
+        limited = Blend(tabulate(_WIDE_OCTAVES, _RATE_BITS, rows), axis)
     if inverse_p is not None:
         inverse = Axis.over(*inverse_p, _INVERSE_STEP)
         rows = [_middle(float(i)) for i in inverse.nodes()]
-        middle = Blend(tabulate(_WIDE_OCTAVES, _RATE_BITS, rows), (inverse,))
-    return FractionCurves(Blend(flux, (axis,)), Blend(depth, (axis,)), limited, middle, suction_m)
+        middle = Blend(tabulate(_WIDE_OCTAVES, _RATE_BITS, rows), inverse)
+    return FractionCurves(Blend(flux, axis), Blend(depth, axis), limited, middle, suction_m)
 
 
 def _some(which: NDArray[np.bool_], values: Floats) -> Floats:

@@ -63,7 +63,10 @@ class Table:
     ) -> Floats:
         """Values of rows where `locate` has placed the numbers."""
         index, inside = located
-        index = index + row.astype(np.int64) * self.intervals
+        return self.cubics(index + row.astype(np.int64, copy=False) * self.intervals, inside)
+
+    def cubics(self, index: NDArray[np.int64], inside: Floats) -> Floats:
+        """Values of intervals, counted through all rows, at positions in them."""
         result: Floats = self.coefficients[3].take(index)
         for k in (2, 1, 0):
             result *= inside
