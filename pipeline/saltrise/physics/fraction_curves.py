@@ -20,6 +20,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import partial
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,7 +46,8 @@ _LEAST_LOG = -180.0
 class FractionCells:
     """Soils of some cells.
 
-    `air_entry_m` [m], `ks_mm_per_day`, exponent `n` of the tail. For soils with a middle part:
+    `air_entry_m` [m], `ks_mm_per_day`, exponent `n` of the tail and where it lies on the axis of
+    exponents (`placed`, the same for every table). For soils with a middle part:
     `tail_m` [m] where the tail begins, `tail_share` = K/Ks there, `theta_share` r and
     `inverse_p` 1/p; None for Campbell's, whose tail begins at air entry.
     """
@@ -53,18 +55,21 @@ class FractionCells:
     air_entry_m: Floats
     ks_mm_per_day: Floats
     n: Floats
+    placed: Placed
     tail_m: Floats | None = None
     tail_share: Floats | None = None
     theta_share: Floats | None = None
     inverse_p: Floats | None = None
 
-    def each(self, change: Callable[[Floats], Floats]) -> FractionCells:
+    def each(self, change: Callable[[Any], Any]) -> FractionCells:
         """The cells with every array changed alike."""
         middle = (self.tail_m, self.tail_share, self.theta_share, self.inverse_p)
+        first, weights = self.placed
         return FractionCells(
             change(self.air_entry_m),
             change(self.ks_mm_per_day),
             change(self.n),
+            (change(first), tuple(change(weight) for weight in weights)),
             *(None if values is None else change(values) for values in middle),
         )
 
@@ -94,7 +99,12 @@ class FractionCurves:
         """Rise [m] from which a flux [mm/day] is lifted: 0.001 to 30 m; NaN where it is."""
         rate = flux_mm_per_day / cells.ks_mm_per_day
         known = np.clip(np.nan_to_num(rate, nan=1.0), 2.0 ** _RATE_OCTAVES[0], 2.0**60)
-        depth = np.clip(self.reach(self._within(cells), known)[0], SURFACE_DEPTH_M, DEEPEST_M)
+        if self.limited is None and self.middle is None:
+            # Campbell's soil from end to end: the parts add up to its own scaled depth.
+            depth = self.depth.look_up(cells.placed, known) * cells.air_entry_m
+        else:
+            depth = self.reach(self._within(cells), known)[0]
+        depth = np.clip(depth, SURFACE_DEPTH_M, DEEPEST_M)
         depth[np.isnan(rate)] = np.nan
         return depth
 
@@ -121,15 +131,11 @@ class FractionCurves:
             tail_share=powers.power(share, 1.0 / cells.inverse_p),
         )
 
-    def _exponents(self, cells: FractionCells) -> Placed:
-        """Cells on the axis of exponents, which all tables of tails share."""
-        return self.flux.axis.weights(cells.n)
-
     def _guess(self, cells: FractionCells, rise: Floats) -> Floats:
         """E/Ks if the soil were Campbell's with its own tail throughout: exact for Campbell's."""
         if cells.tail_m is None or cells.tail_share is None:
-            return self.flux.look_up(self._exponents(cells), rise / cells.air_entry_m)
-        return self.flux.look_up(self._exponents(cells), rise / cells.tail_m) * cells.tail_share
+            return self.flux.look_up(cells.placed, rise / cells.air_entry_m)
+        return self.flux.look_up(cells.placed, rise / cells.tail_m) * cells.tail_share
 
     def reach(self, cells: FractionCells, rate: Floats) -> tuple[Floats, Floats]:
         """Depth [m] that lifts E/Ks = `rate`, and its slope against log rate [m]."""
@@ -157,12 +163,11 @@ class FractionCurves:
         """Depth beyond the suction where the tail begins, and its slope against log rate [m]."""
         inside = 1.0 / (1.0 + rate)
         if self.limited is None:
-            scaled = self.depth.look_up(self._exponents(cells), rate)
+            scaled = self.depth.look_up(cells.placed, rate)
             return start * (scaled - inside), start * (-scaled / cells.n)
-        exponents = self._exponents(cells)
         dried = rate * powers.power(self.suction_m / start, cells.n)
-        far = self.limited.look_up(exponents, dried) * self.suction_m
-        near = self.limited.look_up(exponents, rate) * start
+        far = self.limited.look_up(cells.placed, dried) * self.suction_m
+        near = self.limited.look_up(cells.placed, rate) * start
         # d V / d log q = (1/(1+q) - V) / n, by parts.
         ends = self.suction_m / (1.0 + dried) - start * inside
         return far - near, (ends - (far - near)) / cells.n
@@ -190,6 +195,11 @@ class FractionCurves:
         return rate.reshape(shape)
 
 
+def exponent_axis(exponents: tuple[float, float]) -> Axis:
+    """Axis of the exponents n within a range."""
+    return Axis.over(*exponents, _EXPONENT_STEP)
+
+
 def fraction_curves(
     exponents: tuple[float, float],
     inverse_p: tuple[float, float] | None,
@@ -206,7 +216,7 @@ def fraction_curves(
     suction_m : float
         Suction at the top of the rise [m]; infinite for a bare surface.
     """
-    axis = Axis.over(*exponents, _EXPONENT_STEP)
+    axis = exponent_axis(exponents)
     soils = [Campbell(1.0, 3.0 / (n - 2.0), 1.0) for n in axis.nodes()]
     flux = tabulate(_SCALED_OCTAVES, _DEPTH_BITS, [soil.evaporation for soil in soils])
     depth = tabulate(_RATE_OCTAVES, _RATE_BITS, [soil.depth for soil in soils])

@@ -9,7 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from saltrise.physics import powers
-from saltrise.physics.fraction_curves import FractionCells, FractionCurves, fraction_curves
+from saltrise.physics.fraction_curves import (
+    FractionCells,
+    FractionCurves,
+    exponent_axis,
+    fraction_curves,
+)
 from saltrise.physics.profile import Campbell, Profile
 from saltrise.physics.regressions import (
     M_PER_KPA,
@@ -58,15 +63,19 @@ def soils_of(method: str, given: Mapping[str, Floats]) -> FractionSoils:
         air_entry, b, ks = campbell(held["sand"], held["clay"], held["bulk_density"])
     else:
         air_entry, b, ks = cosby(held["sand"], held["clay"])
-    return FractionSoils(FractionCells(air_entry, ks, 2.0 + 3.0 / b), outside)
+    n = 2.0 + 3.0 / b
+    placed = exponent_axis(_exponents(method)).weights(n)
+    return FractionSoils(FractionCells(air_entry, ks, n, placed), outside)
 
 
 def _saxton_rawls_cells(found: SaxtonRawlsCells) -> FractionCells:
     share, p = found.theta_33 / found.theta_s, 3.0 + 2.0 * found.b
+    n = 2.0 + 3.0 / found.b
     return FractionCells(
         found.air_entry_m,
         found.ks_mm_per_day,
-        2.0 + 3.0 / found.b,
+        n,
+        exponent_axis(_exponents("saxton-rawls2006")).weights(n),
         np.full(share.shape, MOIST_M),
         powers.power(share, p),
         share,
@@ -74,16 +83,22 @@ def _saxton_rawls_cells(found: SaxtonRawlsCells) -> FractionCells:
     )
 
 
-def curves_for(method: str, suction_m: float) -> FractionCurves:
-    """Curves for all soils that a method can give, to a suction [m] at the top."""
+def _exponents(method: str) -> tuple[float, float]:
+    """Range of the exponents n = 2 + 3/b that a method can give."""
     if method == "saxton-rawls2006":
         low, high = _INDEX_RANGE
-        inverse = tuple(1.0 / (3.0 + 2.0 / index) for index in _INDEX_RANGE)
-        return fraction_curves(
-            (2.0 + 3.0 * low, 2.0 + 3.0 * high), (inverse[0], inverse[1]), suction_m
-        )
+        return 2.0 + 3.0 * low, 2.0 + 3.0 * high
     low, high = _B_RANGES[method]
-    return fraction_curves((2.0 + 3.0 / high, 2.0 + 3.0 / low), None, suction_m)
+    return 2.0 + 3.0 / high, 2.0 + 3.0 / low
+
+
+def curves_for(method: str, suction_m: float) -> FractionCurves:
+    """Curves for all soils that a method can give, to a suction [m] at the top."""
+    inverse = None
+    if method == "saxton-rawls2006":
+        ends = [1.0 / (3.0 + 2.0 / index) for index in _INDEX_RANGE]
+        inverse = (ends[0], ends[1])
+    return fraction_curves(_exponents(method), inverse, suction_m)
 
 
 def profile_of_fractions(method: str, given: Mapping[str, float]) -> Profile:
