@@ -147,8 +147,7 @@ def _work(
     _tiles(plan, region.settings, ears)
     records = [read_record(plan.work, index) for index in range(len(plan.tiles()))]
     totals = merge(plan.work, records, plan.layers)
-    tags = layer_tags(region, identity["inputs"], beginning.date)
-    _assemble(plan, region, records, totals, tags, workdir, ears)
+    _assemble(plan, region, records, totals, beginning.date, workdir, ears)
     extras = plan.recipe.extra_sums
     table = _zones(region, totals, beginning.date, workdir, extras)
     doubts = run_warnings(region, totals, table)
@@ -261,7 +260,7 @@ def _assemble(
     region: Region,
     records: list[Record],
     totals: Totals,
-    tags: dict[str, str],
+    date: datetime,
     workdir: Workdir,
     ears: Listener,
 ) -> None:
@@ -269,7 +268,7 @@ def _assemble(
     folder = workdir.unfinished / "layers"
     missing = [name for name in plan.layers if not (folder / f"{name}.tif").exists()]
     ears.stage("layers", len(plan.layers), 0, len(plan.layers) - len(missing))
-    workers = region.settings.workers
+    tags, workers = layer_tags(region, date), region.settings.workers
 
     def one(name: str) -> None:
         target = folder / f"{name}.tif"

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import os
 import time
 from collections.abc import Sequence
@@ -52,23 +51,10 @@ def run_date() -> datetime:
     return datetime.fromtimestamp(int(epoch) if epoch else int(time.time()), UTC)
 
 
-_MOST_TAGGED = 200
-"""Inputs that a tag lists one by one; more are in run.json alone."""
-
-
-def layer_tags(region: Region, inputs: list[dict[str, Any]], date: datetime) -> dict[str, str]:
+def layer_tags(region: Region, date: datetime) -> dict[str, str]:
     """Dataset tags that every layer carries."""
     settings = region.settings
-    files = (
-        json.dumps([[entry["file"], entry["sha256"]] for entry in inputs], ensure_ascii=False)
-        if len(inputs) <= _MOST_TAGGED
-        else f"{len(inputs)} files, listed with their SHA-256 in run.json"
-    )
     return {
-        "INPUTS": files,
-        "INPUT_DATES": json.dumps(input_dates(region), ensure_ascii=False),
-        "PARAMETERS": json.dumps(parameters(region, region.sets[:1]), ensure_ascii=False),
-        "VERSIONS": json.dumps(versions()),
         "AREA_OR_POINT": "Area",
         "TIFFTAG_SOFTWARE": f"saltrise {version('saltrise')}",
         "TIFFTAG_DATETIME": date.strftime("%Y:%m:%d %H:%M:%S"),
