@@ -130,6 +130,16 @@ def test_without_a_retention_curve(tmp_path: Path, law: str, table: str) -> None
     assert "response_time" not in saltrise.run(config).record["layers"]
 
 
+def test_only_the_first_of_several_sets_needs_a_retention_curve(tmp_path: Path) -> None:
+    rows = [f"{t},7,1.7,504,me" for t in ("sand", "loamy sand", "sandy loam", "loam", "clay")]
+    table = ["texture,air_entry_cm,b,ks_cm_per_day,source", *rows]
+    (tmp_path / "mine.csv").write_text("\n".join(table))
+    seasons = [{"name": "all", "days": 365}]
+    soil = {"parameters": ["rawls1982", "mine.csv"]}
+    result = saltrise.run(regions.small_region(tmp_path, soil=soil, season=seasons))
+    assert result.layer("response_time")[0].count() > 0
+
+
 def zoned(folder: Path, supply: list) -> Path:
     import geopandas
 

@@ -145,7 +145,7 @@ def soil_faults(settings: Settings, sets: Sequence[SoilSet], textures: Sequence[
         except InputError as error:
             faults += [settings.fault("soil.parameters", text) for text in error.faults]
             continue
-        if "response_time" in settings.layers and not retains(row.profile):
+        if _timed(settings) and soils is sets[0] and not retains(row.profile):
             text = (
                 f"holds 'response_time', which needs the retention curve of {texture} in set "
                 f"{soils.name!r}; add columns theta_s and theta_r, or leave the layer out"
@@ -191,7 +191,11 @@ def soil_of(
     """Curves of the region's soils under each set, and how its inputs choose among them."""
     method = settings.soil.method
     if method == "classes":
-        curves = [curves_of(settings, soils, found.stacks) for soils in sets]
+        curves = [
+            # Only the first set gives layers, so only it needs response times.
+            curves_of(settings, soils, found.stacks, response=k == 0 and _timed(settings))
+            for k, soils in enumerate(sets)
+        ]
         return [*curves], class_soil(inputs, found)
     return [curves_for(method, top_suction(settings))], FractionSoil(
         method, inputs.fraction_divisor
@@ -203,9 +207,14 @@ def top_suction(settings: Settings) -> float:
     return math.inf if settings.root_zone is None else settings.root_zone.suction
 
 
-def curves_of(settings: Settings, soils: SoilSet, stacks: Sequence[Stack]) -> RiseCurves:
-    """Rise curves of stacks under one parameter set."""
-    response = "response_time" in settings.layers
+def _timed(settings: Settings) -> bool:
+    return "response_time" in settings.layers
+
+
+def curves_of(
+    settings: Settings, soils: SoilSet, stacks: Sequence[Stack], *, response: bool
+) -> RiseCurves:
+    """Rise curves of stacks under one parameter set, with response times if asked for."""
     return build_curves([profile_of(settings, soils, s) for s in stacks], response=response)
 
 

@@ -79,7 +79,8 @@ class QuadratureHeights:
         """See `Heights.at`."""
         wet = suction_m <= 0.0
         inside = np.where(wet, math.exp(self._first), np.minimum(suction_m, self._end))
-        rows, panel, start = self._place(np.log(inside))
+        panel, start = nodes_in(self._soil)[0].place(np.log(inside))
+        rows = np.arange(inside.size)
         height, rest = self._part(np.log(inside), start)
         heights, rests = self._sums
         height += heights[rows, panel]
@@ -136,11 +137,6 @@ class QuadratureHeights:
 
     def _saturated(self) -> Floats:
         return self.share(np.zeros(self._flux.size))
-
-    def _place(self, log: Floats) -> tuple[NDArray[np.intp], NDArray[np.intp], Floats]:
-        panel = np.clip((log - self._first) // self._width, 0, self._panels - 1).astype(np.intp)
-        start: Floats = self._first + self._width * panel.astype(np.float64)
-        return np.arange(log.size), panel, start
 
     def _part(self, log: Floats, start: Floats) -> tuple[Floats, Floats]:
         """The integrals from a panel's start to a log suction inside it."""

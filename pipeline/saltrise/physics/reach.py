@@ -68,6 +68,12 @@ class Panels:
         steps: Floats = np.arange(self.count + 1, dtype=np.float64)
         return self.first + self.width * steps
 
+    def place(self, log: Floats) -> tuple[NDArray[np.intp], Floats]:
+        """Panel of each log suction, and where that begins."""
+        panel = np.clip((log - self.first) // self.width, 0, self.count - 1).astype(np.intp)
+        start: Floats = self.first + self.width * panel.astype(np.float64)
+        return panel, start
+
     def nodes(self, edges: Floats) -> tuple[Floats, Floats]:
         """Suctions [m] and weights of the quadrature between edges, a row a panel."""
         wide = np.diff(edges)[:, np.newaxis]

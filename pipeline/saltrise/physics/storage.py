@@ -38,9 +38,9 @@ class Drainage:
     def __init__(self, soil: Retainer, flux_mm_per_day: Floats) -> None:
         self._soil, self._flux = soil, flux_mm_per_day
         panels, head, area, conductivity = nodes_in(soil)
-        self._first, self._width, self._panels = panels.first, panels.width, panels.count
+        self._panels = panels
         drained = area * soil.drained(head)
-        self._sum = np.zeros((flux_mm_per_day.size, self._panels + 1))
+        self._sum = np.zeros((flux_mm_per_day.size, panels.count + 1))
         with np.errstate(divide="ignore", over="ignore"):
             for k, flux in enumerate(flux_mm_per_day):
                 part = (drained / (1.0 + flux / conductivity)).sum(axis=1)
@@ -49,10 +49,9 @@ class Drainage:
     def to(self, suction_m: Floats, row: NDArray[np.intp]) -> Floats:
         """Water [m] drained between the water table and suctions [m] under the fluxes of some
         rows; none below it."""
-        end = math.exp(self._first + self._width * self._panels)
-        inside = np.log(np.clip(suction_m, math.exp(self._first), end))
-        panel = np.clip((inside - self._first) // self._width, 0, self._panels - 1).astype(np.intp)
-        start = self._first + self._width * panel
+        edges = self._panels.edges()
+        inside = np.log(np.clip(suction_m, math.exp(edges[0]), math.exp(edges[-1])))
+        panel, start = self._panels.place(inside)
         width = (inside - start)[:, np.newaxis]
         head = np.exp(start[:, np.newaxis] + width * POINTS)
         with np.errstate(divide="ignore", over="ignore"):

@@ -19,7 +19,6 @@ Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 Text = Annotated[str, Field(min_length=1)]
 
 BLOCK = 512
-TEXTURES_AND_MASK = "a USDA texture class or 'not soil'"
 
 
 class _Table(BaseModel):
