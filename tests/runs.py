@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import hashlib
 import os
+import re
 import subprocess
 import sys
 from pathlib import Path
 
 import numpy as np
+import rasterio
 from shapely.geometry import box
 
 import regions
@@ -59,6 +61,39 @@ def hashes(folder: Path) -> dict[str, str]:
     return {
         p.relative_to(folder).as_posix(): hashlib.sha256(p.read_bytes()).hexdigest() for p in files
     }
+
+
+def data(folder: Path) -> dict[str, str]:
+    """SHA-256 of what a finished run says, apart from which files its inputs came from.
+
+    Of a layer: every level's stored numbers, its profile, colours and all tags but the names of
+    rasters (and their SHA-256). Of the catalogue item: all but the checksums and sizes of files.
+    """
+    found = {name: digest for name, digest in hashes(folder).items() if name != "run.json"}
+    for name in found:
+        if name.endswith(".tif"):
+            found[name] = _layer_digest(folder / name)
+        elif name == "item.json":
+            item = re.sub(r'"file:(checksum|size)": [^,}]*', "", (folder / name).read_text())
+            found[name] = hashlib.sha256(item.encode()).hexdigest()
+    return found
+
+
+def _layer_digest(path: Path) -> str:
+    digest = hashlib.sha256()
+    with rasterio.open(path) as layer:
+        tags = {name: text for name, text in layer.tags().items() if name != "INPUTS"}
+        tags["SETTINGS"] = re.sub(r'"[^"]*\.tif"', "raster", tags["SETTINGS"])
+        told = (tags, layer.tags(1), layer.profile, layer.units, layer.descriptions)
+        digest.update(repr(told).encode())
+        if layer.count == 1 and layer.dtypes[0] == "uint8":
+            digest.update(repr(layer.colormap(1)).encode())
+        levels = len(layer.overviews(1))
+    for level in range(-1, levels):
+        options = {} if level < 0 else {"overview_level": level}
+        with rasterio.open(path, **options) as stored:
+            digest.update(stored.read(1).tobytes())
+    return digest.hexdigest()
 
 
 def stop_at(step: int, seen: list[str]):

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import tempfile
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -14,6 +15,7 @@ from hypothesis import strategies as st
 from shapely.geometry import Polygon, box
 
 import regions
+import runs
 import saltrise
 from saltrise.engine.config import read_settings
 
@@ -38,6 +40,7 @@ def run(
     workers: int,
     scheduler: str = "threads",
     block: int = 16,
+    told: Callable[[Path], dict[str, str]] = hashes,
     **tables,
 ) -> dict[str, str]:
     output = {"folder": str(folder / name)} | tables.pop("output", {})
@@ -49,7 +52,7 @@ def run(
     found = type(found)(
         found.tables.model_copy(update={"run": table}), found.source, found.base, found.lines
     )
-    return hashes(saltrise.run(found, block=block).folder)
+    return told(saltrise.run(found, block=block).folder)
 
 
 def stars(random: np.random.Generator, size: float) -> dict[str, Polygon]:
@@ -118,14 +121,15 @@ def test_a_mosaic_of_tiles_is_the_raster(tmp_path: Path) -> None:
     values = regions.fields((50, 60), random)
     regions.write_fields(tmp_path, values)
     regions.write_zones(tmp_path / "zones.gpkg", stars(random, 1800.0))
-    whole = run(tmp_path, "whole", tile=32, workers=1)
+    whole = run(tmp_path, "whole", tile=32, workers=1, told=runs.data)
     for i, rows in enumerate((slice(0, 23), slice(23, 50))):
         for j, cols in enumerate((slice(0, 17), slice(17, 60))):
             corner = regions.place(regions.WEST + 30 * cols.start, regions.NORTH - 30 * rows.start)
             regions.write_raster(
                 tmp_path / f"part_{i}{j}.tif", values["depth"][rows, cols], corner, nodata=-9999
             )
-    assert run(tmp_path, "parts", tile=32, workers=1, water_table={"depth": "part_*.tif"}) == whole
+    mosaic = {"depth": "part_*.tif"}
+    assert run(tmp_path, "parts", 32, 1, told=runs.data, water_table=mosaic) == whole
 
 
 def test_the_assembled_layer_holds_what_gdals_own_driver_writes(tmp_path: Path) -> None:

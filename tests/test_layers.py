@@ -155,6 +155,9 @@ def test_explain_a_cell(tmp_path: Path) -> None:
         for name in ("max_evaporation", "salt_load", "critical_depth", "depth_margin"):
             assert answer[name] == result.layer(name)[0][row, col]
     assert len(answer["soil_layers"]) == 3
+    keys = {f"soil.layer[{k}].texture" for k in (1, 2, 3)}
+    assert keys < {told["key"] for told in answer["inputs"].values()}
+    assert keys < set(result.record["input_dates"])
     assert [layer["top_m"] for layer in answer["soil_layers"]] == [0.0, 0.4, 1.3]
     assert answer["max_evaporation_exact"] == pytest.approx(answer["max_evaporation"], rel=1e-4)
 

@@ -12,7 +12,7 @@ import pytest
 
 import regions
 import runs
-from runs import hashes, make_region, run_small
+from runs import data, make_region, run_small
 from saltrise.errors import InputError
 from saltrise.io.fingerprint import PART, WHOLE, fingerprint, stamp
 
@@ -44,15 +44,11 @@ def far(config: Path, address: str, *names: str) -> Path:
     return target
 
 
-def layers(folder: Path) -> dict[str, str]:
-    return {k: v for k, v in hashes(folder).items() if k != "run.json"}
-
-
-def test_remote_inputs_give_the_same_bytes(tmp_path: Path, address: str) -> None:
+def test_remote_inputs_give_the_same_layers(tmp_path: Path, address: str) -> None:
     config = make_region(tmp_path)
     near = run_small(config)
     result = run_small(far(config, address))
-    assert layers(result.folder) == layers(near.folder)
+    assert data(result.folder) == data(near.folder)
     entry = next(e for e in result.record["inputs"] if "depth" in e["file"])
     assert entry["file"] == f"{address}/depth.tif"
     assert entry["covers"] == PART
@@ -76,19 +72,19 @@ def test_a_small_cut_of_a_large_remote_file_is_read_by_blocks(tmp_path: Path, ad
 
 def test_a_server_that_stumbles_is_asked_again(tmp_path: Path, address: str) -> None:
     config = make_region(tmp_path)
-    near = layers(run_small(config).folder)
+    near = data(run_small(config).folder)
     (tmp_path / "fail_next").write_text("2")
     done = runs.child(far(config, address, "salinity"))
     assert done.returncode == 0, done.stderr
     assert (tmp_path / "fail_next").read_text() == "0"
-    assert layers(tmp_path / "far") == near
+    assert data(tmp_path / "far") == near
 
 
 def test_a_server_that_fails_under_way_is_a_clear_resumable_error(
     tmp_path: Path, address: str
 ) -> None:
     config = make_region(tmp_path)
-    near = layers(run_small(config).folder)
+    near = data(run_small(config).folder)
     # Larger than one request, so that tiles have to ask again.
     random = np.random.default_rng(1)
     large = random.uniform(0.5, 20, (70, 60_000)).astype(np.float32)
@@ -116,7 +112,7 @@ def test_a_server_that_fails_under_way_is_a_clear_resumable_error(
     (tmp_path / "fail").unlink()
     again = runs.child(tmp_path / "far.toml")
     assert again.returncode == 0, again.stderr
-    assert layers(tmp_path / "far") == near
+    assert data(tmp_path / "far") == near
 
 
 def test_a_remote_file_that_is_not_there(tmp_path: Path, address: str) -> None:
@@ -145,10 +141,10 @@ def test_inputs_inside_an_archive(tmp_path: Path) -> None:
     import zipfile
 
     config = make_region(tmp_path)
-    near = layers(run_small(config).folder)
+    near = data(run_small(config).folder)
     with zipfile.ZipFile(tmp_path / "inputs.zip", "w") as archive:
         archive.write(tmp_path / "salinity.tif", "salinity.tif")
     inside = f"/vsizip/{tmp_path / 'inputs.zip'}/salinity.tif"
     text = config.read_text().replace('"salinity.tif"', f'"{inside}"')
     config.with_name("far.toml").write_text(text.replace("/out", "/far"))
-    assert layers(run_small(tmp_path / "far.toml").folder) == near
+    assert data(run_small(tmp_path / "far.toml").folder) == near

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import doctest
+import json
 from pathlib import Path
 
 import rasterio
@@ -47,6 +48,13 @@ def test_provenance_in_record_and_tags(tmp_path: Path) -> None:
     assert tags["ABSTRACT"] == "For a test."
     assert tags["LINEAGE"] == result.record["lineage"]
     assert "Buckingham-Darcy" in tags["LINEAGE"]
+    assert json.loads(tags["INPUTS"]) == [[i["file"], i["sha256"]] for i in result.record["inputs"]]
+    assert json.loads(tags["INPUT_DATES"]) == result.record["input_dates"]
+    assert json.loads(tags["PARAMETERS"]) == result.record["parameters"]
+    config = result.record["config"]
+    tables = ("water_table", "soil", "groundwater", "climate", "surface", "hazard")
+    assert json.loads(tags["SETTINGS"]) == {name: config[name] for name in tables}
+    assert json.loads(tags["VERSIONS"]) == result.record["versions"]
 
 
 def test_names_a_picture_can_show() -> None:

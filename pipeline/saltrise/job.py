@@ -147,7 +147,8 @@ def _work(
     _tiles(plan, region.settings, ears)
     records = [read_record(plan.work, index) for index in range(len(plan.tiles()))]
     totals = merge(plan.work, records, plan.layers)
-    _assemble(plan, region, records, totals, beginning.date, workdir, ears)
+    tags = layer_tags(region, identity["inputs"], beginning.date)
+    _assemble(plan, region, records, totals, tags, workdir, ears)
     extras = plan.recipe.extra_sums
     table = _zones(region, totals, beginning.date, workdir, extras)
     doubts = run_warnings(region, totals, table)
@@ -260,7 +261,7 @@ def _assemble(
     region: Region,
     records: list[Record],
     totals: Totals,
-    date: datetime,
+    tags: dict[str, str],
     workdir: Workdir,
     ears: Listener,
 ) -> None:
@@ -268,7 +269,7 @@ def _assemble(
     folder = workdir.unfinished / "layers"
     missing = [name for name in plan.layers if not (folder / f"{name}.tif").exists()]
     ears.stage("layers", len(plan.layers), 0, len(plan.layers) - len(missing))
-    tags, workers = layer_tags(region, date), region.settings.workers
+    workers = region.settings.workers
 
     def one(name: str) -> None:
         target = folder / f"{name}.tif"

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 import time
 from collections.abc import Sequence
@@ -51,9 +52,30 @@ def run_date() -> datetime:
     return datetime.fromtimestamp(int(epoch) if epoch else int(time.time()), UTC)
 
 
-def layer_tags(region: Region, date: datetime) -> dict[str, str]:
-    """Dataset tags that every layer carries."""
+_MOST_TAGGED = 200
+"""Inputs that a tag lists one by one; more are in run.json alone."""
+
+_NO_SETTINGS = ("title", "abstract", "zones", "output")
+"""Parts of the config that decide no cell of a layer, or have a tag of their own."""
+
+
+def layer_tags(region: Region, inputs: list[dict[str, Any]], date: datetime) -> dict[str, str]:
+    """Dataset tags that every layer carries: what it is, and all that its numbers came from."""
     settings = region.settings
+    first, *others = [parameters(region, (soils,)) for soils in region.sets] or [
+        parameters(region, ())
+    ]
+    resolved = settings.resolved()
+    provenance = {
+        "INPUTS": [[entry["file"], entry["sha256"]] for entry in inputs]
+        if len(inputs) <= _MOST_TAGGED
+        else f"{len(inputs)} files, listed with their SHA-256 in run.json",
+        "INPUT_DATES": input_dates(region),
+        "SETTINGS": {key: table for key, table in resolved.items() if key not in _NO_SETTINGS},
+        "PARAMETERS": first,
+        **({"OTHER_PARAMETERS": others} if others else {}),
+        "VERSIONS": versions(),
+    }
     return {
         "AREA_OR_POINT": "Area",
         "TIFFTAG_SOFTWARE": f"saltrise {version('saltrise')}",
@@ -61,11 +83,12 @@ def layer_tags(region: Region, date: datetime) -> dict[str, str]:
         "TITLE": settings.title,
         **({"ABSTRACT": settings.tables.abstract} if settings.tables.abstract else {}),
         "LINEAGE": METHOD,
-        "SOIL_PARAMETERS": parameters(region, region.sets[:1])["set"],
+        "SOIL_PARAMETERS": first["set"],
         "TARGET_LOAD": f"{settings.hazard.target_load!r} t ha-1 year-1",
         "DAYS_PER_YEAR": f"{settings.days_per_year:g}",
         "PRECISION": settings.output.precision,
         "USE_LIMITS": " ".join(CAUTIONS),
+        **{name: json.dumps(told, ensure_ascii=False) for name, told in provenance.items()},
     }
 
 

@@ -49,11 +49,12 @@ def base_role(role: str) -> str:
 
 
 def key_of(role: str) -> str:
-    """The config key that names an input, as `Settings.fault` takes it."""
+    """The config key that names an input, entries of lists counted from 1: `season[2].depth`."""
     base, _, number = role.partition("@")
     if not number:
         return _KEYS[base]
-    return f"soil.layer.{number}.{base}" if base in _OF_LAYERS else f"season.{number}.{base}"
+    table = "soil.layer" if base in _OF_LAYERS else "season"
+    return f"{table}[{int(number) + 1}].{base}"
 
 
 def is_soil(role: str) -> bool:

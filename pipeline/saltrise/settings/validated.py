@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import os
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -206,9 +207,13 @@ class Settings:
         return replace(self, tables=self.tables.model_copy(update={"run": run}))
 
     def fault(self, key: str, message: str) -> str:
-        """`file:line: key: message`, the line being the key's, its table's or the first."""
-        parts = (int(part) if part.isdecimal() else part for part in key.split("."))
-        return fault_text(self.source, self.lines, tuple(parts), message)
+        """`file:line: key: message`, the line being the key's, its table's or the first.
+
+        Entries of lists are counted from 1, in keys as in messages: `season[2].days`.
+        """
+        parts = re.findall(r"[^.\[\]]+", key)
+        found = (int(part) - 1 if part.isdecimal() else part for part in parts)
+        return fault_text(self.source, self.lines, tuple(found), message)
 
     def shown(self, path: str) -> str:
         """A file's path for the record: relative to the config's folder where it is below it."""
