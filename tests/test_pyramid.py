@@ -11,7 +11,6 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as arrays
 
 from saltrise.layers import NODATA
-from saltrise.mantissa import round_mantissa
 from saltrise.pyramid import halve, level_sizes
 
 SHAPES = st.tuples(st.integers(1, 9), st.integers(1, 9))
@@ -33,9 +32,11 @@ def by_hand(stored: np.ndarray, cell) -> np.ndarray:
 
 def mean_of_valid(four: np.ndarray) -> np.float32:
     valid = [float(v) for v in four if v != NODATA]
-    mean = np.array([sum(valid) / len(valid) if valid else 0.0], dtype=np.float32)
-    round_mantissa(mean)
-    return mean[0] if valid else np.float32(NODATA)
+    if not valid:
+        return np.float32(NODATA)
+    # Twelve bits after the leading one; Python rounds ties to even.
+    mantissa, exponent = np.frexp(np.float32(sum(valid) / len(valid)))
+    return np.float32(np.ldexp(round(float(mantissa) * 2**13), int(exponent) - 13))
 
 
 def most_frequent(four: np.ndarray) -> int:

@@ -17,7 +17,6 @@ from saltrise.engine.soils import Occurring, occurring, profile_of
 from saltrise.engine.survey import BlockScan, Sighting
 from saltrise.errors import InputError
 from saltrise.io.align import BlockReader
-from saltrise.io.encode import store
 from saltrise.io.regrid import crs_text, point_in
 from saltrise.layers import BASIC
 from saltrise.physics.column import Column
@@ -31,6 +30,7 @@ from saltrise.physics.stacks import stack_keys
 from saltrise.physics.texture import fractions_in_percent
 from saltrise.recipe import CellResult, Recipe, compute_cells, converted
 from saltrise.settings import Settings
+from saltrise.stored import single
 
 Answer = dict[str, Any]
 Array = NDArray[np.float64]
@@ -264,7 +264,7 @@ class Explainer:
     def _stored(self, result: CellResult) -> Answer:
         rounded = self._settings.output.precision == "rounded"
         layers: Answer = {
-            name: float(store(values, result.valid, rounded=rounded)[0, 0])
+            name: float(single(values, result.valid, rounded=rounded)[0, 0])
             for name, values in result.values.items()
             if name in BASIC or name in self._settings.layers
         }

@@ -18,7 +18,8 @@ from saltrise.io.durable import append
 from saltrise.io.encode import encode
 from saltrise.io.strips import read_strips
 from saltrise.layers import Layer
-from saltrise.pyramid import Stored, halve, level_sizes
+from saltrise.pyramid import halve, level_sizes
+from saltrise.stored import Stored
 
 
 def coarse_levels(plan: Plan, records: list[Record], layer: Layer) -> list[Level]:

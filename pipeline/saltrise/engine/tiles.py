@@ -20,15 +20,16 @@ from saltrise.engine.survey import Range, add_ranges, block_ranges
 from saltrise.errors import UnusableInputError
 from saltrise.grid import Window, block_areas
 from saltrise.io.align import Floats
-from saltrise.io.encode import encode, store
+from saltrise.io.encode import encode
 from saltrise.layers import layer_of
-from saltrise.pyramid import Stored, halve
+from saltrise.pyramid import halve
 from saltrise.recipe import CellResult, compute_cells
 from saltrise.soil_cells import UnmappedCodeError
+from saltrise.stored import Stored, store
 from saltrise.zonal import ZonePartial, pack
 
 Array = NDArray[np.float64]
-StoredLayers = dict[str, NDArray[np.float32] | NDArray[np.uint8]]
+StoredLayers = dict[str, Stored]
 
 _STRIP_CELLS = 1 << 17
 """Cells computed at a time: fewer fit the caches better, but then threads mostly hand the
@@ -130,8 +131,7 @@ def _add_block(
         after = min(first + step, block.height)
         strip = {role: values[first:after] for role, values in inputs.items()}
         result = compute_cells(plan.recipe, strip, (after - first, block.width))
-        here = (slice(top + first, top + after), slice(left, left + block.width))
-        _place(plan, gathered, result, here)
+        _place(plan, gathered, result, (top + first, left))
         area = areas.rows(first, after).ravel()
         sums.add(first * block.width, area, result.zone_values())
     gathered.partials.append(sums.partial())
@@ -145,32 +145,14 @@ def _sound_ranges(plan: Plan, inputs: dict[str, Floats], block: Window) -> dict[
     return found
 
 
-def _place(plan: Plan, gathered: _Gathered, result: CellResult, here: tuple[slice, slice]) -> None:
+def _place(plan: Plan, gathered: _Gathered, result: CellResult, corner: tuple[int, int]) -> None:
     """Store a strip's layers and note their moments and counts."""
-    everywhere = bool(result.valid.all())
-    for name, target in gathered.layers.items():
-        stored = (
-            store(result.values[name], result.valid, rounded=plan.rounded)
-            if layer_of(name).continuous
-            else result.hazard_class
-        )
-        target[here] = stored
-        gathered.statistics[name].append(_moments(stored if everywhere else stored[result.valid]))
+    for name, layer in gathered.layers.items():
+        values = result.values[name] if layer_of(name).continuous else result.hazard_class
+        moments = store(values, result.valid, layer, corner, rounded=plan.rounded)
+        gathered.statistics[name].append(moments)
     for reason, count in result.counts.items():
         gathered.counts[reason] = gathered.counts.get(reason, 0) + count
-
-
-def _moments(stored: NDArray[np.float32] | NDArray[np.uint8]) -> Array:
-    """Count, least, greatest, mean and sum of squared deviations of a strip's valid cells."""
-    flat = stored.ravel()
-    if flat.size == 0:
-        return np.array([0.0, np.inf, -np.inf, 0.0, 0.0])
-    # About the first value, which keeps the squares small; one pass in float64.
-    first = float(flat[0])
-    apart = flat - np.float64(first)
-    shift = float(apart.sum()) / flat.size
-    spread = float(np.einsum("i,i->", apart, apart)) - flat.size * shift * shift
-    return np.array([flat.size, flat.min(), flat.max(), first + shift, max(spread, 0.0)])
 
 
 def _numbers(gathered: _Gathered) -> dict[str, NDArray[np.generic]]:

@@ -1,41 +1,15 @@
-"""Layer values as stored numbers, and stored numbers as compressed bytes."""
+"""Stored numbers as compressed bytes."""
 
 from __future__ import annotations
 
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 from rasterio.io import MemoryFile
 from rasterio.transform import Affine
 
-from saltrise.layers import NODATA, Layer
-from saltrise.mantissa import round_mantissa
-
-
-def store(
-    values: NDArray[np.float64], valid: NDArray[np.bool_], *, rounded: bool
-) -> NDArray[np.float32]:
-    """Values of a continuous layer as they are stored.
-
-    Parameters
-    ----------
-    values : float64 array
-        Values in the layer's unit.
-    valid : bool array, same shape
-        Cells that have a value; the others become nodata.
-    rounded : bool
-        Keep 12 explicit mantissa bits (rounded to nearest, ties to even) instead of all 23.
-
-    Returns
-    -------
-    float32 array, same shape
-    """
-    stored = values.astype(np.float32)
-    if rounded:
-        round_mantissa(stored)
-    stored[~valid] = NODATA
-    return stored
+from saltrise.layers import Layer
+from saltrise.stored import Stored
 
 
 def creation_options(layer: Layer, compression: str) -> dict[str, Any]:
@@ -46,9 +20,7 @@ def creation_options(layer: Layer, compression: str) -> dict[str, Any]:
     return options
 
 
-def encode(
-    stored: NDArray[np.float32] | NDArray[np.uint8], layer: Layer, compression: str, block: int
-) -> bytes:
+def encode(stored: Stored, layer: Layer, compression: str, block: int) -> bytes:
     """One layer of one tile as a GeoTIFF in memory, whole blocks, padded with nodata."""
     height, width = (-(-n // block) * block for n in stored.shape)
     padded = stored

@@ -11,7 +11,7 @@ from rasterio.windows import Window as RasterWindow
 from saltrise.grid import Window
 from saltrise.io.vrt import dataset_xml, plain_band_xml
 from saltrise.layers import Layer
-from saltrise.pyramid import Stored
+from saltrise.stored import Stored
 
 
 def read_strips(
