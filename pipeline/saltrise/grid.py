@@ -12,6 +12,7 @@ import pyproj
 from numpy.typing import NDArray
 
 from saltrise.errors import InputError
+from saltrise.kernels.sums import areas
 
 Floats = NDArray[np.float64]
 _Local = Callable[[Floats, Floats], tuple[Floats, Floats]]
@@ -115,7 +116,9 @@ class BlockAreas:
 
     def rows(self, first: int, after: int) -> Floats:
         """Areas of rows `first` to before `after`: float64 (rows, columns)."""
-        return _weighted_sum(self.down[first:after], self.across)
+        area = np.empty((after - first, self.across.shape[1]))
+        areas(self.down[first:after], self.across, area)
+        return area
 
 
 def block_areas(grid: Grid, window: Window) -> BlockAreas:

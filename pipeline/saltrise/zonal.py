@@ -44,7 +44,7 @@ CODES = CLASSES * DEPTHS * 2 * SALTS
 COLUMNS = CODES + len(SUMS)
 """Columns of a row of sums; extras follow."""
 
-BIN_SHIFT = np.int64(44)
+BIN_SHIFT = 44
 """A bin is a number's sign, exponent and eight mantissa bits: at most 0.4 % wide."""
 
 _COMPACT = 2_000_000

@@ -31,9 +31,9 @@ from saltrise.zonal import ZonePartial, pack
 Array = NDArray[np.float64]
 StoredLayers = dict[str, Stored]
 
-_STRIP_CELLS = 1 << 17
-"""Cells computed at a time: fewer fit the caches better, but then threads mostly hand the
-interpreter's lock to and fro (measured: 1 << 14 takes half as long again on two threads)."""
+_STRIP_CELLS = 1 << 15
+"""Cells computed at a time: few enough for the caches, enough that what the interpreter does
+between loops weighs little."""
 
 
 @dataclass

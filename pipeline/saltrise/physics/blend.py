@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.tables import AxisOf, TableOf, blend
 from saltrise.physics.table import Table
 
 Floats = NDArray[np.float64]
@@ -31,24 +32,6 @@ class Axis:
         steps: Floats = np.arange(self.count, dtype=np.float64)
         return self.low + self.step * steps
 
-    def weights(self, values: Floats) -> tuple[NDArray[np.int64], tuple[Floats, ...]]:
-        """First of the four nodes about each value, and their weights (Lagrange)."""
-        at = np.clip((values - self.low) * (1.0 / self.step), 0.0, self.count - 1.0)
-        first = np.clip(at.astype(np.int64) - 1, 0, self.count - 4)
-        t = at - first
-        a, b, c = t - 1.0, t - 2.0, t - 3.0
-        outer, inner = a * b, t * c
-        return first, (
-            outer * c * (-1.0 / 6.0),
-            b * inner * 0.5,
-            a * inner * -0.5,
-            outer * t * (1.0 / 6.0),
-        )
-
-
-Placed = tuple[NDArray[np.int64], tuple[Floats, ...]]
-"""First node and weights of cells on an axis."""
-
 
 @dataclass(frozen=True)
 class Blend:
@@ -57,21 +40,20 @@ class Blend:
     table: Table
     axis: Axis
 
-    def look_up(self, placed: Placed, value: Floats) -> Floats:
-        """Interpolate between what the rows hold at a value.
+    def parts(self) -> tuple[TableOf, AxisOf]:
+        """The table and its axis as compiled loops take them."""
+        return self.table.parts(), (self.axis.low, 1.0 / self.axis.step, self.axis.count)
+
+    def look_up(self, along: Floats, value: Floats) -> Floats:
+        """Interpolate between what the rows hold at a value, by four rows (Lagrange).
 
         Parameters
         ----------
-        placed : Placed
-            Cells on the axis, by `Axis.weights`; the same for every table with that axis.
+        along : float64 array
+            Position of each cell on the axis.
         value : float64 array
             Argument of the rows.
         """
-        first, weights = placed
-        index, inside = self.table.locate(value)
-        index += first * self.table.intervals
-        total = self.table.cubics(index, inside) * weights[0]
-        for weight in weights[1:]:
-            index += self.table.intervals
-            total += self.table.cubics(index, inside) * weight
-        return total
+        found = np.empty(value.size)
+        blend(*self.parts(), along.ravel(), value.ravel(), found)
+        return found.reshape(value.shape)

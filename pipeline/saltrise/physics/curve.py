@@ -12,6 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.pieces import place_by_flux, place_by_start
+from saltrise.kernels.tables import held_look_up
 from saltrise.physics.column import Column
 from saltrise.physics.pieces import Piece, marched
 from saltrise.physics.profile import Profile
@@ -45,31 +47,33 @@ class Pieces:
     See `pieces.Piece`; pieces that a profile lacks start nowhere.
     """
 
-    count: int
     start_m: Floats
     flux: Floats
     shift_m: Floats
     sign: Floats
-    evaporation: Indices
-    depth: Indices
+    row: Indices
 
     def at_depth(self, profile: Indices, depth_m: Floats) -> tuple[Indices, Floats]:
-        """Row of the evaporation table and argument for cells."""
-        place = profile * np.int32(self.count)
-        first = place
-        for k in range(1, self.count):
-            place = place + (depth_m >= self.start_m.take(first + k))
-        argument = depth_m * self.sign.take(place)
-        argument += self.shift_m.take(place)
-        return self.evaporation.take(place), argument
+        """Row of the evaporation table and argument for cells; masked ones stay negative."""
+        place, argument = np.empty(depth_m.size, dtype=np.int32), np.empty(depth_m.size)
+        place_by_start(
+            profile.ravel(),
+            depth_m.ravel(),
+            SURFACE_DEPTH_M,
+            self.start_m,
+            self.row,
+            self.sign,
+            self.shift_m,
+            place,
+            argument,
+        )
+        return place.reshape(depth_m.shape), argument.reshape(depth_m.shape)
 
     def at_flux(self, profile: Indices, flux: Floats) -> Indices:
         """Row of the depth table for cells."""
-        place = profile * np.int32(self.count)
-        first = place
-        for k in range(1, self.count):
-            place = place + (flux < self.flux.take(first + k))
-        return self.depth.take(place)
+        place = np.empty(flux.size, dtype=np.int32)
+        place_by_flux(profile.ravel(), flux.ravel(), self.flux, self.row, place)
+        return place.reshape(flux.shape)
 
 
 @dataclass(frozen=True)
@@ -99,15 +103,12 @@ class RiseCurves:
             Within 1 % where it exceeds a day; NaN where masked or NaN.
         """
         assert self.response is not None
-        row, depth = self._place(profile, depth_m)
-        days = self.response.look_up(row, depth)
-        days[(profile < 0) | np.isnan(depth_m)] = np.nan
-        return days
+        return self._by_depth(self.response, profile, depth_m)
 
-    def _place(self, profile: Indices, depth_m: Floats) -> tuple[Indices, Floats]:
-        """Row and argument of the tables by depth."""
-        row, depth = np.maximum(profile, 0), np.maximum(depth_m, SURFACE_DEPTH_M)
-        return (row, depth) if self.pieces is None else self.pieces.at_depth(row, depth)
+    def _by_depth(self, table: Table, profile: Indices, depth_m: Floats) -> Floats:
+        if self.pieces is None:
+            return table.look_up(profile, depth_m, SURFACE_DEPTH_M)
+        return table.look_up(*self.pieces.at_depth(profile, depth_m))
 
     def max_evaporation(self, profile: Indices, depth_m: Floats) -> Floats:
         """Maximum steady evaporation [mm/day] of cells.
@@ -126,10 +127,7 @@ class RiseCurves:
             Within a relative 1e-5 of exact from 0.001 to 30 m (6e-5 under the exponential law,
             where the flux exceeds 1e-6 mm/day); NaN where masked or NaN.
         """
-        row, depth = self._place(profile, depth_m)
-        flux = self.evaporation.look_up(row, depth)
-        flux[(profile < 0) | np.isnan(depth_m)] = np.nan
-        return flux
+        return self._by_depth(self.evaporation, profile, depth_m)
 
     def critical_depth(self, profile: Indices, flux_mm_per_day: Floats) -> Floats:
         """Depth to water table [m] from which a profile lifts a flux: 0.001 to 30 m.
@@ -147,15 +145,20 @@ class RiseCurves:
             Within a relative 1e-5 of exact; 0.001 for more than the profile lifts from there, 30
             for less than it lifts from 30 m; NaN where masked or NaN.
         """
-        known = np.maximum(profile, 0)
-        row = known if self.pieces is None else self.pieces.at_flux(known, flux_mm_per_day)
-        depth = self.depth.look_up(row, flux_mm_per_day)
-        most, least = (self.limits[:, k].take(known) for k in (0, 1))
-        depth[flux_mm_per_day <= least] = DEEPEST_M
-        depth[flux_mm_per_day >= most] = SURFACE_DEPTH_M
-        np.clip(depth, SURFACE_DEPTH_M, DEEPEST_M, out=depth)
-        depth[(profile < 0) | np.isnan(flux_mm_per_day)] = np.nan
-        return depth
+        row = profile
+        if self.pieces is not None:
+            row = self.pieces.at_flux(profile, flux_mm_per_day)
+        depth = np.empty(flux_mm_per_day.size)
+        held_look_up(
+            self.depth.parts(),
+            profile.ravel(),
+            row.ravel(),
+            flux_mm_per_day.ravel(),
+            self.limits,
+            (SURFACE_DEPTH_M, DEEPEST_M),
+            depth,
+        )
+        return depth.reshape(flux_mm_per_day.shape)
 
 
 def build_curves(profiles: Sequence[Profile | Column], *, response: bool = False) -> RiseCurves:
@@ -234,17 +237,14 @@ def _arranged(made: list[list[Piece]], number: dict[object, int]) -> Pieces:
     count = max(len(pieces) for pieces in made)
 
     def spread(values: list[list[float]], missing: float) -> Floats:
-        return np.array([row + [missing] * (count - len(row)) for row in values]).ravel()
+        return np.array([row + [missing] * (count - len(row)) for row in values])
 
-    rows = spread([[float(number[p.key]) for p in pieces] for pieces in made], 0.0)
     return Pieces(
-        count,
         spread([[p.start_m for p in pieces] for pieces in made], np.inf),
         spread([[p.flux for p in pieces] for pieces in made], -np.inf),
         spread([[p.shift_m for p in pieces] for pieces in made], 0.0),
         spread([[p.sign for p in pieces] for pieces in made], 1.0),
-        rows.astype(np.int32),
-        rows.astype(np.int32),
+        spread([[float(number[p.key]) for p in pieces] for pieces in made], 0.0).astype(np.int32),
     )
 
 

@@ -19,15 +19,14 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from functools import partial
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.special import hyp2f1
 
+from saltrise.kernels.tables import MOST_STEPS, AxisOf, CellsOf, FractionTables, reach, solve
 from saltrise.physics import powers
-from saltrise.physics.blend import Axis, Blend, Placed
+from saltrise.physics.blend import Axis, Blend
 from saltrise.physics.curve import DEEPEST_M, SURFACE_DEPTH_M
 from saltrise.physics.profile import Campbell
 from saltrise.physics.table import tabulate
@@ -37,7 +36,6 @@ Floats = NDArray[np.float64]
 _SCALED_OCTAVES, _RATE_OCTAVES, _WIDE_OCTAVES = (-14, 17), (-60, 30), (-70, 100)
 _DEPTH_BITS, _RATE_BITS = 5, 4
 _EXPONENT_STEP, _INVERSE_STEP = 0.0175, 0.004
-_NEWTON_LIMIT, _NEWTON_STEP = 60, 1e-7
 _LEAST_LOG = -180.0
 """Base-2 logarithm of a flux that counts as none."""
 
@@ -46,8 +44,7 @@ _LEAST_LOG = -180.0
 class FractionCells:
     """Soils of some cells.
 
-    `air_entry_m` [m], `ks_mm_per_day`, exponent `n` of the tail and where it lies on the axis of
-    exponents (`placed`, the same for every table). For soils with a middle part:
+    `air_entry_m` [m], `ks_mm_per_day`, exponent `n` of the tail. For soils with a middle part:
     `tail_m` [m] where the tail begins, `tail_share` = K/Ks there, `theta_share` r and
     `inverse_p` 1/p; None for Campbell's, whose tail begins at air entry.
     """
@@ -55,23 +52,17 @@ class FractionCells:
     air_entry_m: Floats
     ks_mm_per_day: Floats
     n: Floats
-    placed: Placed
     tail_m: Floats | None = None
     tail_share: Floats | None = None
     theta_share: Floats | None = None
     inverse_p: Floats | None = None
 
-    def each(self, change: Callable[[Any], Any]) -> FractionCells:
-        """The cells with every array changed alike."""
+    def parts(self) -> CellsOf:
+        """The cells as compiled loops take them; what is missing stands for itself unused."""
         middle = (self.tail_m, self.tail_share, self.theta_share, self.inverse_p)
-        first, weights = self.placed
-        return FractionCells(
-            change(self.air_entry_m),
-            change(self.ks_mm_per_day),
-            change(self.n),
-            (change(first), tuple(change(weight) for weight in weights)),
-            *(None if values is None else change(values) for values in middle),
-        )
+        given = [self.air_entry_m if values is None else values for values in middle]
+        air_entry, *rest, n = (v.ravel() for v in (self.air_entry_m, *given, self.n))
+        return (air_entry, rest[0], rest[1], rest[2], rest[3], n)
 
 
 @dataclass(frozen=True)
@@ -88,10 +79,18 @@ class FractionCurves:
         """Maximum steady evaporation [mm/day] over a rise [m]; NaN where it is."""
         rise = np.maximum(depth_m, SURFACE_DEPTH_M)
         cells = self._within(cells)
-        guess = self._guess(cells, rise)
+        rate = self._guess(cells, rise)
         if self.limited is not None or self.middle is not None:
-            guess = self._solved(cells, rise, guess)
-        flux = guess * cells.ks_mm_per_day
+            steps = solve(
+                cells.parts(),
+                self.suction_m,
+                *self._tables(),
+                rise.ravel(),
+                _LEAST_LOG,
+                rate.reshape(-1),
+            )
+            assert steps < MOST_STEPS
+        flux = rate * cells.ks_mm_per_day
         flux[np.isnan(depth_m)] = np.nan
         return flux
 
@@ -101,12 +100,23 @@ class FractionCurves:
         known = np.clip(np.nan_to_num(rate, nan=1.0), 2.0 ** _RATE_OCTAVES[0], 2.0**60)
         if self.limited is None and self.middle is None:
             # Campbell's soil from end to end: the parts add up to its own scaled depth.
-            depth = self.depth.look_up(cells.placed, known) * cells.air_entry_m
+            depth = self.depth.look_up(cells.n, known) * cells.air_entry_m
         else:
-            depth = self.reach(self._within(cells), known)[0]
+            depth = np.empty(known.shape)
+            parts = self._within(cells).parts()
+            reach(parts, self.suction_m, *self._tables(), known.ravel(), depth.reshape(-1))
         depth = np.clip(depth, SURFACE_DEPTH_M, DEEPEST_M)
         depth[np.isnan(rate)] = np.nan
         return depth
+
+    def _tables(self) -> tuple[FractionTables, tuple[AxisOf, AxisOf]]:
+        """Tables and their axes as compiled loops take them; a missing one is not looked at."""
+        depth, on_n = self.depth.parts()
+        limited = depth if self.limited is None else self.limited.parts()[0]
+        if self.middle is None:
+            return (depth, limited, depth, False), (on_n, on_n)
+        middle, on_inverse = self.middle.parts()
+        return (depth, limited, middle, True), (on_n, on_inverse)
 
     def _within(self, cells: FractionCells) -> FractionCells:
         """The cells with no part of their curve beyond the suction at the top."""
@@ -134,70 +144,8 @@ class FractionCurves:
     def _guess(self, cells: FractionCells, rise: Floats) -> Floats:
         """E/Ks if the soil were Campbell's with its own tail throughout: exact for Campbell's."""
         if cells.tail_m is None or cells.tail_share is None:
-            return self.flux.look_up(cells.placed, rise / cells.air_entry_m)
-        return self.flux.look_up(cells.placed, rise / cells.tail_m) * cells.tail_share
-
-    def reach(self, cells: FractionCells, rate: Floats) -> tuple[Floats, Floats]:
-        """Depth [m] that lifts E/Ks = `rate`, and its slope against log rate [m]."""
-        wet = cells.air_entry_m / (1.0 + rate)
-        depth, slope = wet, -wet * (rate / (1.0 + rate))
-        start, tail_rate = cells.air_entry_m, rate
-        if self.middle is not None:
-            assert cells.tail_m is not None
-            assert cells.tail_share is not None
-            assert cells.theta_share is not None
-            assert cells.inverse_p is not None
-            tail_rate, start = rate / cells.tail_share, cells.tail_m
-            span = (start - cells.air_entry_m) / (1.0 - cells.theta_share)
-            middle = self.middle.axis.weights(cells.inverse_p)
-            whole = self.middle.look_up(middle, rate)
-            rest = self.middle.look_up(middle, tail_rate) * cells.theta_share
-            depth = depth + span * (whole - rest)
-            # d P / d log q = (P - 1/(1+q)) / p, by parts.
-            ends = 1.0 / (1.0 + rate) - cells.theta_share / (1.0 + tail_rate)
-            slope = slope + span * cells.inverse_p * (whole - rest - ends)
-        tail, tilt = self._tail(cells, start, tail_rate)
-        return depth + tail, slope + tilt
-
-    def _tail(self, cells: FractionCells, start: Floats, rate: Floats) -> tuple[Floats, Floats]:
-        """Depth beyond the suction where the tail begins, and its slope against log rate [m]."""
-        inside = 1.0 / (1.0 + rate)
-        if self.limited is None:
-            scaled = self.depth.look_up(cells.placed, rate)
-            return start * (scaled - inside), start * (-scaled / cells.n)
-        dried = rate * powers.power(self.suction_m / start, cells.n)
-        far = self.limited.look_up(cells.placed, dried) * self.suction_m
-        near = self.limited.look_up(cells.placed, rate) * start
-        # d V / d log q = (1/(1+q) - V) / n, by parts.
-        ends = self.suction_m / (1.0 + dried) - start * inside
-        return far - near, (ends - (far - near)) / cells.n
-
-    def _solved(self, cells: FractionCells, rise: Floats, guess: Floats) -> Floats:
-        """E/Ks by Newton's method on logarithms; a cell that has settled is left alone."""
-        shape = rise.shape
-        cells = cells.each(np.ravel)
-        target = np.nan_to_num(rise, nan=1.0).ravel()
-        ends = target >= self.suction_m
-        target = np.where(ends, 0.5 * self.suction_m, target) if ends.any() else target
-        log = powers.log2(np.maximum(np.nan_to_num(guess, nan=1.0).ravel(), 2.0**_LEAST_LOG))
-        open_cells = np.arange(target.size)
-        for _ in range(_NEWTON_LIMIT):
-            depth, slope = self.reach(cells, powers.exp2(log[open_cells]))
-            step = powers.log2(depth / target[open_cells]) * depth / slope
-            step = np.clip(step, -12.0, 12.0)
-            log[open_cells] = np.clip(log[open_cells] - step, _LEAST_LOG, 60.0)
-            moving = (np.abs(step) > _NEWTON_STEP) & (log[open_cells] > _LEAST_LOG)
-            if not moving.any():
-                break
-            open_cells, cells = open_cells[moving], cells.each(partial(_some, moving))
-        rate = powers.exp2(log)
-        rate[ends] = 0.0
-        return rate.reshape(shape)
-
-
-def exponent_axis(exponents: tuple[float, float]) -> Axis:
-    """Axis of the exponents n within a range."""
-    return Axis.over(*exponents, _EXPONENT_STEP)
+            return self.flux.look_up(cells.n, rise / cells.air_entry_m)
+        return self.flux.look_up(cells.n, rise / cells.tail_m) * cells.tail_share
 
 
 def fraction_curves(
@@ -216,7 +164,7 @@ def fraction_curves(
     suction_m : float
         Suction at the top of the rise [m]; infinite for a bare surface.
     """
-    axis = exponent_axis(exponents)
+    axis = Axis.over(*exponents, _EXPONENT_STEP)
     soils = [Campbell(1.0, 3.0 / (n - 2.0), 1.0) for n in axis.nodes()]
     flux = tabulate(_SCALED_OCTAVES, _DEPTH_BITS, [soil.evaporation for soil in soils])
     depth = tabulate(_RATE_OCTAVES, _RATE_BITS, [soil.depth for soil in soils])
@@ -229,10 +177,6 @@ def fraction_curves(
         rows = [_middle(float(i)) for i in inverse.nodes()]
         middle = Blend(tabulate(_WIDE_OCTAVES, _RATE_BITS, rows), inverse)
     return FractionCurves(Blend(flux, axis), Blend(depth, axis), limited, middle, suction_m)
-
-
-def _some(which: NDArray[np.bool_], values: Floats) -> Floats:
-    return values[which]
 
 
 _Row = Callable[[Floats], tuple[Floats, Floats]]

@@ -12,7 +12,6 @@ from saltrise.physics import powers
 from saltrise.physics.fraction_curves import (
     FractionCells,
     FractionCurves,
-    exponent_axis,
     fraction_curves,
 )
 from saltrise.physics.profile import Campbell, Profile
@@ -64,8 +63,7 @@ def soils_of(method: str, given: Mapping[str, Floats]) -> FractionSoils:
     else:
         air_entry, b, ks = cosby(held["sand"], held["clay"])
     n = 2.0 + 3.0 / b
-    placed = exponent_axis(_exponents(method)).weights(n)
-    return FractionSoils(FractionCells(air_entry, ks, n, placed), outside)
+    return FractionSoils(FractionCells(air_entry, ks, n), outside)
 
 
 def _saxton_rawls_cells(found: SaxtonRawlsCells) -> FractionCells:
@@ -75,7 +73,6 @@ def _saxton_rawls_cells(found: SaxtonRawlsCells) -> FractionCells:
         found.air_entry_m,
         found.ks_mm_per_day,
         n,
-        exponent_axis(_exponents("saxton-rawls2006")).weights(n),
         np.full(share.shape, MOIST_M),
         powers.power(share, p),
         share,

@@ -11,44 +11,26 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels import tables
+
 Floats = NDArray[np.float64]
 
-_EXP = [math.log(2.0) ** k / math.factorial(k) for k in range(14)]
-_LOG = [2.0 / math.log(2.0) / (2 * k + 1) for k in range(12)]
 LOG2_OF_10 = math.log2(10.0)
 LOG2_OF_E = math.log2(math.e)
 
 
 def exp2(x: Floats) -> Floats:
     """2 to the power x, for |x| < 1000."""
-    whole = np.rint(x)
-    part = x - whole
-    value = part * _EXP[-1]
-    value += _EXP[-2]
-    for coefficient in _EXP[-3::-1]:
-        value *= part
-        value += coefficient
-    # A whole power of two is an exponent without a mantissa.
-    bits = whole.astype(np.int64)
-    bits += 1023
-    bits <<= 52
-    value *= bits.view(np.float64)
-    return value
+    found = np.empty(x.size)
+    tables.exp2(x.ravel(), found)
+    return found.reshape(x.shape)
 
 
 def log2(x: Floats) -> Floats:
-    """Logarithm to base 2, for x > 0."""
-    mantissa, exponent = np.frexp(x)
-    low = mantissa < math.sqrt(0.5)
-    mantissa = np.where(low, 2.0 * mantissa, mantissa)
-    t = (mantissa - 1.0) / (mantissa + 1.0)
-    square = t * t
-    value = np.full_like(t, _LOG[-1])
-    for coefficient in _LOG[-2::-1]:
-        value *= square
-        value += coefficient
-    result: Floats = value * t + (exponent - low)
-    return result
+    """Logarithm to base 2, for x > 0 (subnormal numbers excepted)."""
+    found = np.empty(x.size)
+    tables.log2(x.ravel(), found)
+    return found.reshape(x.shape)
 
 
 def ten_to(x: Floats) -> Floats:

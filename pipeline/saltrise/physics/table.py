@@ -12,6 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.tables import TableOf, look_up
+
 Floats = NDArray[np.float64]
 Indices = NDArray[np.int32]
 
@@ -19,59 +21,45 @@ Solved = Callable[[Floats], tuple[Floats, Floats]]
 """A row of a table before it is one: values and slopes at numbers."""
 
 _PLUNGE = 0.1
-_MANTISSA = 52
-_ONE = np.int64(1023 << _MANTISSA)
 
 
 @dataclass(frozen=True)
 class Table:
     """Cubics of all rows over the same nodes.
 
-    `coefficients` is (4, rows x intervals), constant first, in the interval's own position
-    from 0 to 1; numbers from 2^`octaves[0]` to below 2^`octaves[1]`, 2^`bits` intervals an octave.
+    `cubics` is (rows x intervals, 4), constant first, in the interval's own position from 0 to 1;
+    numbers from 2^`octaves[0]` to below 2^`octaves[1]`, 2^`bits` intervals an octave.
     """
 
     octaves: tuple[int, int]
     bits: int
-    coefficients: Floats
+    cubics: Floats
 
     @property
     def intervals(self) -> int:
         """Intervals of one row."""
         return (self.octaves[1] - self.octaves[0]) << self.bits
 
-    def look_up(self, row: Indices, value: Floats) -> Floats:
-        """Interpolate; numbers beyond the table count as its ends, NaN as its low end."""
-        return self.at(row, self.locate(value))
-
-    def locate(self, value: Floats) -> tuple[NDArray[np.int64], Floats]:
-        """Interval of each number in any row, and its position there from 0 to 1."""
+    def parts(self) -> TableOf:
+        """The table as compiled loops take it."""
         low, high = (2.0**octave for octave in self.octaves)
-        inside = np.where(value > low, value, low)
-        np.minimum(inside, np.nextafter(high, 0.0), out=inside)
-        bits = inside.view(np.int64)
-        index = bits >> np.int64(_MANTISSA - self.bits)
-        index -= np.int64((self.octaves[0] + 1023) << self.bits)
-        bits &= np.int64((1 << (_MANTISSA - self.bits)) - 1)
-        bits <<= np.int64(self.bits)
-        bits |= _ONE
-        inside -= 1.0
-        return index, inside
+        return (
+            self.cubics,
+            self.intervals,
+            self.octaves[0],
+            self.bits,
+            low,
+            float(np.nextafter(high, 0.0)),
+        )
 
-    def at(
-        self, row: Indices | NDArray[np.int64], located: tuple[NDArray[np.int64], Floats]
-    ) -> Floats:
-        """Values of rows where `locate` has placed the numbers."""
-        index, inside = located
-        return self.cubics(index + row.astype(np.int64, copy=False) * self.intervals, inside)
+    def look_up(self, row: Indices, value: Floats, least: float = 0.0) -> Floats:
+        """Interpolate; numbers below `least` or beyond the table count as the ends.
 
-    def cubics(self, index: NDArray[np.int64], inside: Floats) -> Floats:
-        """Values of intervals, counted through all rows, at positions in them."""
-        result: Floats = self.coefficients[3].take(index)
-        for k in (2, 1, 0):
-            result *= inside
-            result += self.coefficients[k].take(index)
-        return result
+        NaN where the row is negative or the number is NaN.
+        """
+        found = np.empty(value.size)
+        look_up(self.parts(), row.ravel(), value.ravel(), least, found)
+        return found.reshape(value.shape)
 
 
 def nodes_of(octaves: tuple[int, int], bits: int) -> Floats:
@@ -96,4 +84,4 @@ def tabulate(octaves: tuple[int, int], bits: int, rows: Sequence[Solved]) -> Tab
         plunge = (value[1:] < _PLUNGE * value[:-1]) & (value[1:] >= 0.0)
         cubic[1, plunge], cubic[2:, plunge] = rise[plunge], 0.0
         columns.append(cubic)
-    return Table(octaves, bits, np.ascontiguousarray(np.hstack(columns)))
+    return Table(octaves, bits, np.ascontiguousarray(np.hstack(columns).T))
