@@ -26,7 +26,7 @@ from saltrise.physics.laws import closed_form_evaporation, gardner_limiting_rate
 from saltrise.physics.profile import Campbell, GardnerPower, Profile
 from saltrise.physics.regressions import METHODS
 from saltrise.physics.soils import NOT_SOIL, TEXTURES, soil_for
-from saltrise.physics.stacks import stack_keys
+from saltrise.physics.stacks import stack_key
 from saltrise.physics.texture import fractions_in_percent
 from saltrise.recipe import CellResult, Recipe, compute_cells, converted
 from saltrise.settings import Settings
@@ -187,8 +187,8 @@ class Explainer:
             seen = BlockScan({}, {}, 1)
             soils = Occurring((), {})
             return Region(self._settings, inputs, seen, (), soils, opened.scheme, None, ())
-        numbers = [np.array([TEXTURES.index(name)], dtype=np.int64) for name in names]
-        seen = BlockScan({}, {}, 1, {}, {(int(stack_keys(numbers)[0]), root_m): 1})
+        key = stack_key([TEXTURES.index(name) for name in names])
+        seen = BlockScan({}, {}, 1, {}, {(key, root_m): 1})
         if not inputs.stacked:
             code = float(next(c for c, name in self._settings.soil.codes.items() if name in names))
             seen = BlockScan({}, {("", code): Sighting(1, 0, 0)}, 1)

@@ -1,6 +1,6 @@
 """The job on arrays of cells: inputs and parameters in, layer values out.
 
-Pure NumPy: no files, no grid, no tiles. Each layer's values are bound to their function here and
+Arrays alone: no files, no grid, no tiles. Each layer's values are bound to their function here and
 nowhere else.
 """
 
@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.cells import mark
 from saltrise.layers import season_layer
 from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, capped
@@ -148,7 +149,7 @@ class _Year:
     load: Array
     limited: NDArray[np.bool_]
     maxima: list[Array]
-    response: Array
+    response: Array | None
     slow: NDArray[np.bool_]
 
 
@@ -183,15 +184,15 @@ def compute_cells(
     soil = recipe.soil.cells(given)
     waters = converted(recipe, given)
     root = given.get("root_depth")
-    missing = {
-        "no_depth": _any_missing([water.depth for water in waters]),
+    missing: dict[str, list[Array] | NDArray[np.bool_]] = {
+        "no_depth": [water.depth for water in waters],
         "no_texture": soil.missing,
         "not_soil": soil.not_soil,
-        "no_salinity": _any_missing([water.tds for water in waters]),
-        "no_potential_evaporation": _any_missing([water.demand for water in waters]),
+        "no_salinity": [water.tds for water in waters],
+        "no_potential_evaporation": [water.demand for water in waters],
     }
     if root is not None:
-        missing["no_root_depth"] = ~np.isfinite(root)
+        missing["no_root_depth"] = [root]
     valid, counts = _masked(missing, shape)
     counts |= soil.counts
     if not valid.all():
@@ -258,24 +259,25 @@ def _flooded(waters: list[_Water]) -> NDArray[np.bool_]:
     return surface
 
 
-def _any_missing(seasons: list[Array]) -> NDArray[np.bool_]:
-    missing = ~np.isfinite(seasons[0])
-    for values in seasons[1:]:
-        missing |= ~np.isfinite(values)
-    return missing
-
-
 def _masked(
-    missing: dict[str, NDArray[np.bool_]], shape: tuple[int, int]
+    missing: dict[str, list[Array] | NDArray[np.bool_]], shape: tuple[int, int]
 ) -> tuple[NDArray[np.bool_], dict[str, int]]:
-    """Valid cells, and how many each reason masks; a cell counts under its first reason."""
-    valid = np.ones(shape, dtype=bool)
-    counts = {"cells": valid.size}
-    for reason, where in missing.items():
-        counts[reason] = int(np.count_nonzero(valid & where))
-        if counts[reason]:
-            valid &= ~where
-    return valid, counts
+    """Valid cells, and how many each reason masks; a cell counts under its first reason.
+
+    A reason is where it holds, or values of which some is not finite.
+    """
+    reasons = np.zeros(shape, dtype=np.uint8)
+    counts = {"cells": reasons.size}
+    for number, (name, where) in enumerate(missing.items(), start=1):
+        if isinstance(where, list):
+            counts[name] = sum(mark(v.ravel(), number, reasons.reshape(-1)) for v in where)
+            continue
+        counts[name] = 0
+        if where.any():
+            found = where & (reasons == 0)
+            counts[name] = int(np.count_nonzero(found))
+            reasons[found] = number
+    return reasons == 0, counts
 
 
 def _mean(recipe: Recipe, seasons: list[Array]) -> Array:
@@ -294,14 +296,14 @@ def _year(
     maxima, rises = [], []
     shape = waters[0].depth.shape
     limited, slow = np.ones(shape, dtype=bool), np.zeros(shape, dtype=bool)
-    response = np.zeros(shape)
+    response = None
     for season, water in zip(recipe.seasons, waters, strict=True):
         rise_m = water.depth if root is None else water.depth - root
         maximum = curves.max_evaporation(cells, rise_m)
         if isinstance(curves, RiseCurves) and curves.response is not None:
             days = curves.response_days(cells, rise_m)
             slow |= (days > season.days) & ~at_surface(water.depth)
-            response = np.maximum(response, days)
+            response = days if response is None else np.maximum(response, days)
         rise = capped(maximum * season.days, water.demand, water.depth)
         limited &= rise >= water.demand
         maxima.append(maximum)
@@ -338,7 +340,7 @@ def _layers(
         "critical_depth": critical,
         "depth_margin": effective - critical,
     }
-    if "response_time" in recipe.layers:
+    if year.response is not None and "response_time" in recipe.layers:
         values["response_time"] = year.response
     if recipe.seasonal:
         values["net_demand"] = np.add.reduce([water.demand for water in waters])

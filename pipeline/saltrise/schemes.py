@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from saltrise.errors import InputError
+from saltrise.kernels.cells import classify
 
 CLASS_COUNT = 5
 SURFACE_CLASS = 6
@@ -57,10 +58,9 @@ class Scheme:
 
     def classify(self, values: NDArray[np.float64]) -> NDArray[np.uint8]:
         """Class 1 to 5 of each value, any shape; a NaN falls into class 1 (mask it yourself)."""
-        classes = np.ones(values.shape, dtype=np.uint8)
-        for edge in self.breaks:
-            classes += (values < edge) if self.falls else (values >= edge)
-        return classes
+        classes = np.empty(values.size, dtype=np.uint8)
+        classify(values.ravel(), np.array(self.breaks), self.falls, classes)
+        return classes.reshape(values.shape)
 
     @property
     def falls(self) -> bool:

@@ -9,12 +9,22 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.cells import settle
 from saltrise.physics.fraction_soils import soils_of
 from saltrise.physics.regressions import METHODS
-from saltrise.physics.stacks import BASE, MASK, MISSING, UNKNOWN, ClassCodes, Numbers, stack_keys
+from saltrise.physics.stacks import (
+    BASE,
+    NO_SOIL,
+    NO_VALUE,
+    NOT_MAPPED,
+    ClassCodes,
+    Flags,
+    Numbers,
+)
 from saltrise.physics.texture import class_of_fractions, fractions_in_percent
 
 Array = NDArray[np.float64]
+Profiles = NDArray[np.int32]
 
 UNKNOWN_STACK = -1
 """Profile of keys that the survey did not see."""
@@ -71,7 +81,7 @@ class ClassSoil:
     codes: ClassCodes
     layers: tuple[str, ...]
     keys: Numbers | None
-    profiles: NDArray[np.int32]
+    profiles: Profiles
     roots_m: Array
     fraction_divisor: float
 
@@ -83,30 +93,21 @@ class ClassSoil:
         UnmappedCodeError
             A code or stack has no profile, or fractions do not add up.
         """
-        numbers = [self.codes.numbers(self._texture(given, end)) for end in self.layers]
-        missing, masked = numbers[0] == MISSING, numbers[0] >= MASK
-        for layer in numbers[1:]:
-            missing |= layer == MISSING
-            masked |= layer >= MASK
-        key = stack_keys(numbers)
+        key, flags = self.codes.stacks([self._texture(given, end) for end in self.layers])
         if self.roots_m.size:
             key = key + self._root_key(given["root_depth"])
-            masked |= np.isnan(given["root_depth"])
+            flags |= np.isnan(given["root_depth"]) * np.uint8(NO_SOIL)
         profile = self._look_up(key)
-        unknown = (profile < 0) & ~masked
-        for layer in numbers:
-            unknown |= layer == UNKNOWN
-        if unknown.any():
-            raise UnmappedCodeError(self._unknown(given, unknown))
-        profile[masked] = 0
-        return SoilCells(profile, missing, masked, {})
+        if settle(profile.reshape(-1), flags.ravel()):
+            raise UnmappedCodeError(self._unknown(given, profile, flags))
+        return SoilCells(profile, (flags & NO_VALUE) > 0, (flags & NO_SOIL) > 0, {})
 
-    def _look_up(self, key: Numbers) -> NDArray[np.int32]:
+    def _look_up(self, key: Numbers) -> Profiles:
         if self.keys is None:
-            profile: NDArray[np.int32] = self.profiles.take(key)
+            profile: Profiles = self.profiles.take(key)
             return profile
         place = np.minimum(np.searchsorted(self.keys, key), self.keys.size - 1)
-        found: NDArray[np.int32] = self.profiles.take(place)
+        found: Profiles = self.profiles.take(place)
         found[self.keys.take(place) != key] = UNKNOWN_STACK
         return found
 
@@ -124,7 +125,8 @@ class ClassSoil:
             raise UnmappedCodeError("sand, clay and silt do not add up")
         return classes
 
-    def _unknown(self, given: Mapping[str, Array], unknown: NDArray[np.bool_]) -> str:
+    def _unknown(self, given: Mapping[str, Array], profile: Profiles, flags: Flags) -> str:
+        unknown = ((flags & NOT_MAPPED) > 0) | ((profile < 0) & ((flags & NO_SOIL) == 0))
         codes = [self._texture(given, end)[unknown].flat[0] for end in self.layers]
         shown = ", ".join(f"{code:g}" for code in codes)
         return f"texture code {shown} is not mapped or was not there when the run began"

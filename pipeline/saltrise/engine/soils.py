@@ -116,7 +116,7 @@ def _single(settings: Settings, inputs: Inputs, found: BlockScan) -> set[tuple[i
     """Keys of soils without layers, from the codes that occur."""
     codes = {code for _, code in found.codes} | _constant_codes(settings, inputs)
     known = [code for code in codes if code in settings.soil.codes]
-    return {(int(n), 0.0) for n in inputs.codes.numbers(np.array(known, dtype=np.float64))}
+    return {(int(n), 0.0) for n in inputs.codes.stacks([np.array(known, dtype=np.float64)])[0]}
 
 
 def _constant_codes(settings: Settings, inputs: Inputs) -> set[float]:

@@ -20,7 +20,6 @@ from saltrise.engine.inputs import FRACTIONS, Inputs
 from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.align import BlockReader, Floats
-from saltrise.physics.stacks import stack_keys
 from saltrise.physics.texture import class_of_fractions
 from saltrise.soil_cells import fractions
 
@@ -209,7 +208,7 @@ def _scan_block(values: dict[str, Floats], inputs: Inputs, block: Window) -> Blo
         complete &= np.isfinite(read)
     codes: dict[tuple[str, float], Sighting] = {}
     wrong: dict[str, Sighting] = {}
-    numbers = []
+    textures = []
     for end in inputs.layers:
         texture, bad = _texture(values, inputs, end, block)
         if bad is not None and bad.any():
@@ -219,11 +218,11 @@ def _scan_block(values: dict[str, Floats], inputs: Inputs, block: Window) -> Blo
         if f"texture{end}" not in inputs.constants and np.isfinite(texture).any():
             codes |= {(end, code): seen for code, seen in _codes(texture, block).items()}
         if inputs.stacked:
-            numbers.append(inputs.codes.numbers(texture.astype(np.float64)))
+            textures.append(texture)
     ranges = block_ranges(values, inputs.constants, block)
     stacks = {}
-    if len(numbers) == len(inputs.layers) > 1:
-        stacks = _stacks(stack_keys(numbers), values.get("root_depth"))
+    if len(textures) == len(inputs.layers) > 1:
+        stacks = _stacks(inputs.codes.stacks(textures)[0], values.get("root_depth"))
     return BlockScan(ranges, codes, int(complete.sum()), wrong, stacks)
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.cells import cap
 from saltrise.physics.curve import SURFACE_DEPTH_M
 
 Floats = NDArray[np.float64]
@@ -30,4 +31,6 @@ def capped(most: Floats, demand: Floats, depth_m: Floats) -> Floats:
     float64 array
         In the unit of its arguments; NaN where one of them is.
     """
-    return np.where(at_surface(depth_m), demand, np.minimum(most, demand))
+    rise = np.empty(most.size)
+    cap(most.ravel(), demand.ravel(), depth_m.ravel(), SURFACE_DEPTH_M, rise)
+    return rise.reshape(most.shape)

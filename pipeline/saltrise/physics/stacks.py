@@ -8,16 +8,23 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.cells import add_layer
 from saltrise.physics.soils import NOT_SOIL, TEXTURES
 
 Floats = NDArray[np.float64]
 Numbers = NDArray[np.int64]
+Flags = NDArray[np.uint8]
+Codes = NDArray[np.float32] | NDArray[np.float64]
 
 MASK, MISSING, UNKNOWN = len(TEXTURES), len(TEXTURES) + 1, len(TEXTURES) + 2
 """Numbers of a layer that is no soil, has no value, or has a code that is not mapped; the others
 are places in `TEXTURES`."""
 
 BASE = len(TEXTURES) + 3
+
+NO_SOIL, NO_VALUE, NOT_MAPPED = 1, 2, 4
+"""Flags of a cell: some layer is no soil, has no value or is not mapped (then also `NO_SOIL`), has
+no value, or has a code that is not mapped."""
 
 
 @dataclass(frozen=True)
@@ -36,28 +43,22 @@ class ClassCodes:
             number[code - first] = MASK if name == NOT_SOIL else TEXTURES.index(name)
         return cls(first, number)
 
-    def numbers(self, codes: Floats) -> Numbers:
-        """Number of each cell; a code that is not mapped is `UNKNOWN`, NaN is `MISSING`."""
-        missing = np.isnan(codes)
-        known = np.where(missing, self.first, codes)
-        position = known.astype(np.int64)
-        wrong = position != known
-        position -= self.first
-        if position.min() < 0 or position.max() >= self.number.size:
-            wrong |= (position < 0) | (position >= self.number.size)
-            position = np.clip(position, 0, self.number.size - 1)
-        numbers = self.number.take(position)
-        numbers[wrong] = UNKNOWN
-        numbers[missing] = MISSING
-        return numbers
+    def stacks(self, layers: Sequence[Codes]) -> tuple[Numbers, Flags]:
+        """One key a cell from the codes of its layers, the top one counting least; and its flags.
+
+        A code that is not mapped has the number `UNKNOWN`, NaN `MISSING`.
+        """
+        key = np.zeros(layers[0].size, dtype=np.int64)
+        flags = np.zeros(layers[0].size, dtype=np.uint8)
+        marks = (MASK, MISSING, UNKNOWN)
+        for codes in reversed(layers):
+            add_layer(codes.ravel(), self.first, self.number, marks, BASE, key, flags)
+        return key.reshape(layers[0].shape), flags.reshape(layers[0].shape)
 
 
-def stack_keys(layers: Sequence[Numbers]) -> Numbers:
-    """One key a cell from the numbers of its layers, the top one counting least."""
-    key = layers[-1]
-    for numbers in reversed(layers[:-1]):
-        key = key * BASE + numbers
-    return key
+def stack_key(numbers: Sequence[int]) -> int:
+    """Key of a stack from the numbers of its layers, from the top down."""
+    return sum(number * BASE**k for k, number in enumerate(numbers))
 
 
 def stack_of(key: int, layers: int) -> tuple[int, ...]:

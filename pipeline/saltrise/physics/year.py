@@ -13,6 +13,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels import cells
+
 Floats = NDArray[np.float64]
 
 
@@ -33,7 +35,7 @@ def net_demand(
     Parameters
     ----------
     potential_mm : float64 array
-        Evaporative demand over the season [mm], coefficient and mulch applied.
+        Evaporative demand over the season [mm], >= 0, coefficient and mulch applied.
     rain_mm, irrigation_mm : float64 arrays or None
         Effective depths over the season [mm].
 
@@ -42,6 +44,8 @@ def net_demand(
     demand, percolation : float64 arrays
         [mm] over the season, >= 0; one of them is 0.
     """
+    if rain_mm is None and irrigation_mm is None:
+        return potential_mm, np.zeros_like(potential_mm)
     balance = potential_mm
     for water in (rain_mm, irrigation_mm):
         if water is not None:
@@ -76,21 +80,20 @@ def flux_of_load(parts: Sequence[Part], load: Floats | float) -> Floats:
     float64 array
         Infinite where no flux brings the load.
     """
-    breaks = [part.demand_mm / part.days for part in parts]
-    low, reached = np.zeros_like(breaks[0]), np.zeros_like(breaks[0])
-    if len(parts) > 1:
-        for flux in breaks:
-            brought = _load_at(parts, flux)
-            higher = (brought <= load) & (flux > low)
-            low, reached = np.where(higher, flux, low), np.where(higher, brought, reached)
-    rate = np.zeros_like(low)
-    for part, flux in zip(parts, breaks, strict=True):
-        salt = part.days * part.tds_g_per_l
-        rate = rate + (salt if len(parts) == 1 else np.where(flux > low, salt, 0.0))
-    with np.errstate(divide="ignore", invalid="ignore"):
-        flux = low + (load - reached) / rate
-    # Where nothing more can come the line is flat: 0/0 where the load is just reached.
-    return np.where(rate > 0.0, flux, np.inf)
+    shape = parts[0].demand_mm.shape
+    days = np.array([part.days for part in parts])
+    demand, tds = _stacked([p.demand_mm for p in parts]), _stacked([p.tds_g_per_l for p in parts])
+    wanted = np.broadcast_to(load, shape).ravel()
+    flux = np.empty(wanted.size)
+    cells.flux_of_load(days, demand, tds, wanted, flux)
+    return flux.reshape(shape)
+
+
+def _stacked(seasons: Sequence[Floats]) -> Floats:
+    """A row a season."""
+    if len(seasons) == 1:
+        return seasons[0].reshape(1, -1)
+    return np.array([values.ravel() for values in seasons])
 
 
 def last_break(parts: Sequence[Part]) -> Floats:
@@ -99,10 +102,3 @@ def last_break(parts: Sequence[Part]) -> Floats:
     for part in parts:
         found = np.maximum(found, np.where(part.tds_g_per_l > 0, part.demand_mm / part.days, 0.0))
     return found
-
-
-def _load_at(parts: Sequence[Part], flux: Floats) -> Floats:
-    total = np.zeros_like(flux)
-    for part in parts:
-        total += np.minimum(flux * part.days, part.demand_mm) * part.tds_g_per_l
-    return total
