@@ -20,6 +20,7 @@ from saltrise.engine.inputs import FRACTIONS, Inputs
 from saltrise.engine.stop import check_stop
 from saltrise.grid import Window
 from saltrise.io.align import BlockReader, Floats
+from saltrise.kernels.survey import extent, tally
 from saltrise.physics.texture import class_of_fractions
 from saltrise.soil_cells import fractions
 
@@ -271,16 +272,12 @@ MANY_STACKS = 200_000
 
 
 def _range(values: Floats, block: Window) -> Range:
-    # fmin and fmax pass over NaN.
-    low, high = float(np.fmin.reduce(values, None)), float(np.fmax.reduce(values, None))
-    if not (np.isfinite(low) and np.isfinite(high)):
-        values = np.where(np.isfinite(values), values, np.nan)
-        low, high = float(np.fmin.reduce(values, None)), float(np.fmax.reduce(values, None))
-    valid = values.size - int(np.count_nonzero(np.isnan(values)))
+    valid, low, high, negative, first = extent(values.ravel())
     if valid == 0:
         return Range(0, values.size, None, None, None)
-    negative = _sighting(values < 0, block) if low < 0 else None
-    return Range(valid, values.size - valid, low, high, negative)
+    row, col = divmod(first, block.width)
+    below = Sighting(negative, block.row + row, block.col + col) if negative else None
+    return Range(valid, values.size - valid, low, high, below)
 
 
 def _sighting(found: NDArray[np.bool_], block: Window) -> Sighting:
@@ -301,16 +298,11 @@ def _distinct(
     flat: Floats,
 ) -> tuple[NDArray[np.float64], NDArray[np.int64], NDArray[np.int64]]:
     """Distinct numbers that are not NaN, where each comes first, and how often it comes."""
-    low, high = np.fmin.reduce(flat), np.fmax.reduce(flat)
-    if low >= 0 and high < _FEW_CODES:
-        # Counting beats sorting by ten for the small codes that class maps have.
-        whole = np.where(np.isnan(flat), np.float32(_FEW_CODES), flat)
-        places = whole.astype(np.int32)
-        if np.array_equal(places, whole):
-            counts = np.bincount(places, minlength=_FEW_CODES + 1)[:_FEW_CODES]
-            few = np.flatnonzero(counts)
-            first = np.array([int(np.argmax(places == code)) for code in few], dtype=np.int64)
-            return few.astype(np.float64), first, counts[few].astype(np.int64)
+    counts, first = np.zeros(_FEW_CODES, dtype=np.int64), np.zeros(_FEW_CODES, dtype=np.int64)
+    # Counting beats sorting by far for the small codes that class maps have.
+    if tally(flat, counts, first):
+        few = np.flatnonzero(counts)
+        return few.astype(np.float64), first[few], counts[few]
     seen = np.flatnonzero(~np.isnan(flat))
     codes, at, counts = np.unique(flat[seen], return_index=True, return_counts=True)
     return codes.astype(np.float64), seen[at].astype(np.int64), counts.astype(np.int64)

@@ -31,7 +31,7 @@ from saltrise.zonal import ZonePartial, pack
 Array = NDArray[np.float64]
 StoredLayers = dict[str, Stored]
 
-_STRIP_CELLS = 1 << 15
+_STRIP_CELLS = 1 << 16
 """Cells computed at a time: few enough for the caches, enough that what the interpreter does
 between loops weighs little."""
 
