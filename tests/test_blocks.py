@@ -13,7 +13,7 @@ from rio_cogeo.cogeo import cog_validate
 import regions
 import saltrise
 from saltrise.grid import Grid
-from saltrise.io import blocks
+from saltrise.io import tiff
 from saltrise.io.blocks import Level, block_places, template, write_assembled
 from saltrise.io.encode import encode
 from saltrise.layers import LAYERS, NODATA
@@ -70,7 +70,7 @@ def test_beyond_four_gigabytes_it_is_a_bigtiff(
     monkeypatch.setenv("SOURCE_DATE_EPOCH", "1767225600")
     config = noisy_region(tmp_path, (1100, 900), output={"compression": compression})
     plain = saltrise.run(config)
-    monkeypatch.setattr(blocks, "_CLASSIC_LIMIT", 100_000)
+    monkeypatch.setattr(tiff, "CLASSIC_LIMIT", 100_000)
     kept = tmp_path / "kept"
     plain.folder.rename(kept)
     big = saltrise.run(config)

@@ -19,9 +19,6 @@ from saltrise.io import durable, tiff
 from saltrise.io.encode import creation_options
 from saltrise.layers import Layer
 
-_CLASSIC_LIMIT = 4_000_000_000
-"""Bytes a classic TIFF's 32-bit offsets reach, with room to spare."""
-
 _LEADER = struct.Struct("<I")
 _FRAME = 8
 """Bytes around each block: its size before it, its last four bytes again after it."""
@@ -125,7 +122,7 @@ def write_assembled(
         The disk is full, or a block's file is gone or shorter than it was.
     """
     data = sum(int(level.size.sum()) + _FRAME * level.size.size for level in levels)
-    big = data + 64 * sum(level.size.size for level in levels) > _CLASSIC_LIMIT
+    big = data + 64 * sum(level.size.size for level in levels) > tiff.CLASSIC_LIMIT
     empty = [np.zeros(level.size.size, dtype=np.int64) for level in levels]
     start = len(tiff.write_head(_directories(base, levels, empty, big), _GHOST, big=big))
     offsets: list[NDArray[np.int64]] = [np.empty(0)] * len(levels)  # type: ignore[list-item]

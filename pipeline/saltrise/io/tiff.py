@@ -15,6 +15,9 @@ from numpy.typing import NDArray
 NEW_SUBFILE_TYPE, IMAGE_WIDTH, IMAGE_LENGTH = 254, 256, 257
 TILE_OFFSETS, TILE_BYTE_COUNTS = 324, 325
 
+CLASSIC_LIMIT = 4_000_000_000
+"""Bytes a classic TIFF's 32-bit offsets reach, with room to spare."""
+
 _SIZES = {1: 1, 2: 1, 3: 2, 4: 4, 5: 8, 6: 1, 7: 1, 8: 2, 9: 4, 10: 8, 11: 4, 12: 8, 16: 8}
 _SHORT, _LONG, _LONG8 = 3, 4, 16
 _NUMBERS = {_SHORT: "<u2", _LONG: "<u4", _LONG8: "<u8"}
