@@ -16,6 +16,7 @@ from saltrise.engine.merge import Totals
 from saltrise.engine.page_content import draw_page
 from saltrise.engine.pictures import Finished, draw_map
 from saltrise.engine.region import Region
+from saltrise.engine.schedule import on_threads
 from saltrise.io import durable
 from saltrise.io.fingerprint import fingerprint
 from saltrise.io.regrid import epsg_of, outline_in_degrees
@@ -134,19 +135,27 @@ def _item(region: Region, totals: Totals, date: datetime, folder: Path) -> dict[
         place,
         region.scheme,
         statistics,
-        _files(folder),
+        _files(folder, region.settings.workers),
         METHOD,
         versions(),
     )
 
 
-def _files(folder: Path) -> list[HandedFile]:
+def _files(folder: Path, workers: int) -> list[HandedFile]:
     """Every file so far but the item itself, in one order."""
-    found = []
-    for path in sorted(p for p in folder.rglob("*") if p.is_file()):
-        name = path.relative_to(folder).as_posix()
-        if name.startswith("work/") or name in (_ITEM, "run.json") or name.endswith(".xml"):
-            continue
-        print_ = fingerprint(str(path))
-        found.append(HandedFile(name, print_.size, print_.sha256))
-    return found
+    names = {
+        path.relative_to(folder).as_posix(): path for path in folder.rglob("*") if path.is_file()
+    }
+    own = sorted(
+        name
+        for name in names
+        if not name.startswith("work/")
+        and name not in (_ITEM, "run.json")
+        and not name.endswith(".xml")
+    )
+    prints = on_threads(lambda name: fingerprint(str(names[name])), own, workers, _unheard)
+    return [HandedFile(name, p.size, p.sha256) for name, p in zip(own, prints, strict=True)]
+
+
+def _unheard(_: object) -> None:
+    """Nobody asks how far the hashing is."""

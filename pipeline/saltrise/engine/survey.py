@@ -272,7 +272,7 @@ MANY_STACKS = 200_000
 
 
 def _range(values: Floats, block: Window) -> Range:
-    valid, low, high, negative, first = extent(values.ravel())
+    valid, low, high, negative, first = extent(values)
     if valid == 0:
         return Range(0, values.size, None, None, None)
     row, col = divmod(first, block.width)

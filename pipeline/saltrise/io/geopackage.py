@@ -9,10 +9,6 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
-import geopandas
-import pandas as pd
-import pyogrio
-from pyogrio.errors import DataSourceError
 from shapely.geometry import MultiPolygon
 
 from saltrise.errors import RunError
@@ -31,6 +27,12 @@ def write_zones_gpkg(path: Path, zones: Zones, table: dict[str, list[Any]], date
     RunError
         The file cannot be written.
     """
+    # Taken in here, with all they bring, for runs with zones alone.
+    import geopandas
+    import pandas as pd
+    import pyogrio
+    from pyogrio.errors import DataSourceError
+
     columns = {
         name: pd.array(values, dtype="Int64") if name == "rank" else values
         for name, values in table.items()

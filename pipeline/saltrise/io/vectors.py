@@ -8,13 +8,9 @@ from difflib import get_close_matches
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import geopandas
 import numpy as np
-import pandas as pd
-import pyogrio
 import pyproj
 import shapely
-from pyogrio.errors import DataSourceError
 from shapely.geometry.base import BaseGeometry
 
 from saltrise.errors import InputError
@@ -22,6 +18,8 @@ from saltrise.grid import Grid
 from saltrise.io.ground import ellipsoid_area, on_grid, outside_area
 
 if TYPE_CHECKING:
+    import geopandas
+
     from saltrise.settings import Settings
 
 _SHOWN = 10
@@ -113,6 +111,11 @@ def read_zones(settings: Settings, grid: Grid) -> Zones:
 def _read(settings: Settings, path: Path, layer: str | None) -> geopandas.GeoDataFrame:
     if not path.exists():
         raise InputError(settings.fault("zones.file", f"no such file: {path}"))
+    # Taken in here, with all they bring, for runs with zones alone.
+    import geopandas
+    import pyogrio
+    from pyogrio.errors import DataSourceError
+
     try:
         layers = [str(name) for name, _ in pyogrio.list_layers(path)]
         if layer is None and len(layers) > 1:
@@ -148,6 +151,8 @@ def _supply(
     """Values of the field `SUPPLY`, None where empty; nothing where there is no such field."""
     if SUPPLY not in frame.columns:
         return (), []
+    import pandas as pd
+
     values = pd.to_numeric(frame[SUPPLY], errors="coerce").to_numpy(dtype=np.float64)
     text = frame[SUPPLY].notna().to_numpy() & np.isnan(values)
     wrong = [id_ for id_, bad in zip(ids, text | (values < 0), strict=True) if bad]
@@ -193,7 +198,9 @@ def _labels(
 
 
 def _text(value: Any) -> str:
-    if value is None or value is pd.NaT or (isinstance(value, float) and np.isnan(value)):
+    import pandas as pd
+
+    if pd.isna(value):
         return ""
     if isinstance(value, float | np.floating) and float(value).is_integer():
         return str(int(value))

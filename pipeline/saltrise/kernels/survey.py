@@ -17,22 +17,28 @@ Whole = NDArray[np.int64]
 
 @compiled
 def extent(values: Cells) -> tuple[int, float, float, int, int]:
-    """How many values are finite, the least and greatest of them, how many are negative and where
-    the first of those is."""
-    valid, low, high, negative, first = 0, np.inf, -np.inf, 0, -1
-    for i in range(values.size):
-        held = math.isfinite(values[i])
-        valid += held
-        value = np.float64(values[i])
-        low = min(low, value if held else np.inf)
-        high = max(high, value if held else -np.inf)
-    if low < 0.0:
-        for i in range(values.size):
-            if math.isfinite(values[i]) and values[i] < 0.0:
+    """Of a block's values (rows, columns): how many are finite, the least and greatest of them,
+    how many are negative and where the first of those is, row by row."""
+    height, width = values.shape
+    # By column, not one after the other: columns are compared side by side.
+    valid = np.zeros(width, dtype=np.int64)
+    low, high = np.full(width, np.inf), np.full(width, -np.inf)
+    for i in range(height):
+        for j in range(width):
+            value = np.float64(values[i, j])
+            held = value - value == 0.0
+            valid[j] += held
+            low[j] = min(low[j], value if held else np.inf)
+            high[j] = max(high[j], value if held else -np.inf)
+    negative, first = 0, -1
+    if low.min() < 0.0:
+        for i in range(height * width):
+            value = np.float64(values[i // width, i % width])
+            if -np.inf < value < 0.0:
                 negative += 1
                 if first < 0:
                     first = i
-    return valid, low, high, negative, first
+    return valid.sum(), low.min(), high.max(), negative, first
 
 
 @compiled

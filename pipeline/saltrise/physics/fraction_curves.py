@@ -22,7 +22,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import hyp2f1
 
 from saltrise.kernels.tables import MOST_STEPS, AxisOf, CellsOf, FractionTables, reach, solve
 from saltrise.physics import powers
@@ -184,6 +183,7 @@ _Row = Callable[[Floats], tuple[Floats, Floats]]
 
 def _limited(n: float) -> _Row:
     """V(q; n) and its slope."""
+    from scipy.special import hyp2f1
 
     def solved(q: Floats) -> tuple[Floats, Floats]:
         value = hyp2f1(1.0, 1.0 / n, 1.0 + 1.0 / n, -q)
@@ -194,6 +194,7 @@ def _limited(n: float) -> _Row:
 
 def _middle(inverse: float) -> _Row:
     """P(q; 1/inverse) and its slope."""
+    from scipy.special import hyp2f1
 
     def solved(q: Floats) -> tuple[Floats, Floats]:
         # 1 - V(1/q) of the same form: P = 1 - q-part, each where nothing cancels.

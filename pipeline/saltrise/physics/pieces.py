@@ -14,7 +14,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import CubicHermiteSpline, PchipInterpolator
 
 from saltrise.physics.column import Column, March, from_top, through, water_table
 from saltrise.physics.heights import Heights
@@ -193,6 +192,8 @@ class Marches:
                 stored -= moving.to(self._march(column, j + 1).suction_m[pick], pick)
                 rest -= resting.to(depth[pick] - tops[j + 1], still)
         days = response_days(stored, rest, self._flux[pick])
+        from scipy.interpolate import PchipInterpolator
+
         spline = PchipInterpolator(np.log(depth[pick]), days)
         least, most = depth[pick[0]], depth[pick[-1]]
 
@@ -220,6 +221,8 @@ class Marches:
 def _evaporation(known: Floats, shift: float, sign: float) -> Solved:
     """Flux at an argument, from depths, fluxes and slopes dL/dE by falling depth."""
     depth, flux, slope = known[::-1].T
+    from scipy.interpolate import CubicHermiteSpline
+
     spline = CubicHermiteSpline(np.log(depth), np.log(flux), depth / (flux * slope))
 
     def solved(argument: Floats) -> tuple[Floats, Floats]:
