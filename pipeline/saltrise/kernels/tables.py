@@ -6,7 +6,8 @@ would not agree on a map.
 
 A table is handed over as a tuple: `cubics` (rows x intervals, 4; constant first), intervals of a
 row, octave of its low end, bits that number the intervals of an octave, least and greatest number
-it holds. An axis, between whose nodes rows are blended, as another: low end, nodes per unit, count.
+it holds. Where rows are blended, `cubics` is (intervals x rows, 4), with the number of rows for
+that of intervals; the axis whose nodes they are is another tuple: low end, nodes per unit, count.
 """
 
 from __future__ import annotations
@@ -30,12 +31,14 @@ Placed = tuple[int, tuple[float, float, float, float]]
 CellsOf = tuple[Floats, Floats, Floats, Floats, Floats, Floats]
 """Air-entry suction [m], suction where the tail begins [m], K/Ks there, water content there over
 that at saturation, 1/p of the middle part, exponent n of the tail."""
-SoilOf = tuple[float, float, float, float, float, float, Placed, Placed]
+SoilOf = tuple[float, float, float, float, float, float, float, Placed, Placed]
+"""Of one cell, with the third and the last inverted and the span of the middle part [m]."""
 FractionTables = tuple[TableOf, TableOf, TableOf, bool]
 """Of unlimited tails, limited tails and middle parts; whether soils have a middle part."""
-Reached = tuple[float, float]
+Reached = tuple[float, float, float]
 
-MOST_STEPS, _LAST_STEP = 60, 1e-4
+MOST_STEPS, _LAST_STEP = 60, 5e-3
+_LN2 = math.log(2.0)
 _MANTISSA = 52
 _ONE = np.int64(1023 << _MANTISSA)
 _FRACTION = np.int64((1 << _MANTISSA) - 1)
@@ -107,14 +110,15 @@ def held_look_up(
 
 @compiled
 def _blended(table: TableOf, placed: Placed, value: float) -> float:
-    cubics, intervals = table[0], table[1]
+    cubics, rows = table[0], table[1]
     first, weights = placed
     index, inside = _interval(table, value)
-    index += first * intervals
+    # Rows side by side: four far apart would be four waits for memory.
+    index = index * rows + first
     total = _cubic(cubics, index, inside) * weights[0]
-    total += _cubic(cubics, index + intervals, inside) * weights[1]
-    total += _cubic(cubics, index + 2 * intervals, inside) * weights[2]
-    return total + _cubic(cubics, index + 3 * intervals, inside) * weights[3]
+    total += _cubic(cubics, index + 1, inside) * weights[1]
+    total += _cubic(cubics, index + 2, inside) * weights[2]
+    return total + _cubic(cubics, index + 3, inside) * weights[3]
 
 
 @compiled
@@ -180,32 +184,39 @@ def log2(x: Floats, found: Floats) -> None:
 
 @compiled
 def _reach(soil: SoilOf, suction: float, tables: FractionTables, rate: float) -> Reached:
-    """Depth that lifts E/Ks = `rate`, and its slope against log rate."""
-    air_entry, tail, tail_share, theta_share, inverse, n, on_n, on_inverse = soil
+    """Depth that lifts E/Ks = `rate`, and its first and second slope against log rate."""
+    air_entry, tail, per_share, theta_share, span, inverse, per_n, on_n, on_inverse = soil
     depth_table, limited_table, middle_table, has_middle = tables
+    # d q/(1+q) / d log q = q/(1+q)^2, and that of 1/(1+q) is the same with its sign turned.
     inside = 1.0 / (1.0 + rate)
+    bend = rate * inside * inside
     depth = air_entry * inside
-    slope = -depth * (rate * inside)
-    start, tail_rate = air_entry, rate
+    slope, second = -air_entry * bend, air_entry * bend * (rate - 1.0) * inside
+    start, tail_rate, tail_inside, tail_bend = air_entry, rate, inside, bend
     if has_middle:
-        start, tail_rate = tail, rate / tail_share
-        span = (tail - air_entry) / (1.0 - theta_share)
+        start, tail_rate = tail, rate * per_share
+        tail_inside = 1.0 / (1.0 + tail_rate)
+        tail_bend = tail_rate * tail_inside * tail_inside
         whole = _blended(middle_table, on_inverse, rate)
         rest = _blended(middle_table, on_inverse, tail_rate) * theta_share
-        depth += span * (whole - rest)
         # d P / d log q = (P - 1/(1+q)) / p, by parts.
-        ends = inside - theta_share / (1.0 + tail_rate)
-        slope += span * inverse * (whole - rest - ends)
-    inside = 1.0 / (1.0 + tail_rate)
+        tilt = inverse * (whole - rest - (inside - theta_share * tail_inside))
+        depth += span * (whole - rest)
+        slope += span * tilt
+        second += span * inverse * (tilt + bend - theta_share * tail_bend)
     if suction == np.inf:
         scaled = _blended(depth_table, on_n, tail_rate)
-        return depth + start * (scaled - inside), slope - start * scaled / n
-    dried = tail_rate * _exp2(_log2(suction / start) * n)
+        depth += start * (scaled - tail_inside)
+        tilt = start * scaled * per_n
+        return depth, slope - tilt, second + (tilt + start * tail_bend) * per_n
+    dried = tail_rate * _exp2(_log2(suction / start) / per_n)
     far = _blended(limited_table, on_n, dried) * suction
     near = _blended(limited_table, on_n, tail_rate) * start
     # d V / d log q = (1/(1+q) - V) / n, by parts.
-    ends = suction / (1.0 + dried) - start * inside
-    return depth + (far - near), slope + (ends - (far - near)) / n
+    dry = 1.0 / (1.0 + dried)
+    tilt = (suction * dry - start * tail_inside - (far - near)) * per_n
+    curl = -(suction * dried * dry * dry - start * tail_bend + tilt) * per_n
+    return depth + (far - near), slope + tilt, second + curl
 
 
 @compiled
@@ -215,10 +226,11 @@ def _soil(cells: CellsOf, axes: tuple[AxisOf, AxisOf], i: int) -> SoilOf:
     return (
         air_entry[i],
         tail[i],
-        tail_share[i],
+        1.0 / tail_share[i],
         theta_share[i],
+        (tail[i] - air_entry[i]) / (1.0 - theta_share[i]),
         inverse[i],
-        n[i],
+        1.0 / n[i],
         _placed(axes[0], n[i]),
         _placed(axes[1], inverse[i]),
     )
@@ -239,6 +251,36 @@ def reach(
 
 
 @compiled
+def _log_ratio(a: float, b: float) -> float:
+    """log(a/b); near 1 by the first terms of its series, which is nought where a is b."""
+    z = (a - b) / (a + b)
+    if abs(z) > 0.2:
+        return _log2(a / b) * _LN2
+    square = z * z
+    return 2.0 * z * (1.0 + square * (1.0 / 3.0 + square * (0.2 + square * (1.0 / 7.0))))
+
+
+@compiled
+def _exp(x: float) -> float:
+    """e to the power x; near 0 by a quotient that is 1 at 0."""
+    if abs(x) > 0.2:
+        return _exp2(x / _LN2)
+    square = x * x / 12.0
+    return (1.0 + 0.5 * x + square) / (1.0 - 0.5 * x + square)
+
+
+@compiled
+def _by_exponential(soil: SoilOf, target: float) -> float:
+    """E/Ks of a rise, roughly, if conductivity fell exponentially through the middle part."""
+    air_entry, tail, per_share = soil[0], soil[1], soil[2]
+    fall = _log2(per_share) * _LN2 / (tail - air_entry)
+    deep = fall * (target - air_entry)
+    if deep > 0.3:
+        return 1.0 / (_exp2(min(deep, 100.0) / _LN2) - 1.0)
+    return (1.0 + fall * air_entry) / (fall * target)
+
+
+@compiled
 def solve(
     cells: CellsOf,
     suction: float,
@@ -248,28 +290,38 @@ def solve(
     least_log: float,
     rate: Floats,
 ) -> int:
-    """E/Ks of a rise by Newton's method on logarithms, from a guess in `rate`; most steps taken.
+    """E/Ks of a rise by Halley's method on logarithms, from a guess in `rate`; steps taken.
 
     0 where the rise reaches up to the suction at its top; NaN where it is.
     """
-    most = 0
+    least, greatest = 2.0**least_log, 2.0**60
+    moving, count = np.empty(rise.size, dtype=np.int64), 0
     for i in range(rise.size):
-        target = rise[i]
-        if math.isnan(target):
-            rate[i] = np.nan
+        if math.isnan(rise[i]) or rise[i] >= suction:
+            rate[i] = rise[i] if math.isnan(rise[i]) else 0.0
             continue
-        if target >= suction:
-            rate[i] = 0.0
-            continue
-        soil = _soil(cells, axes, i)
-        log = max(_log2(max(rate[i], 2.0**least_log)), least_log)
-        for k in range(MOST_STEPS):
-            depth, slope = _reach(soil, suction, tables, _exp2(log))
-            step = min(max(_log2(depth / target) * depth / slope, -12.0), 12.0)
-            log = min(max(log - step, least_log), 60.0)
-            most = max(most, k + 1)
-            # The error left is of the order of the step squared.
-            if abs(step) < _LAST_STEP or log == least_log:
-                break
-        rate[i] = _exp2(log)
-    return most
+        rate[i] = max(rate[i], least)
+        if tables[3]:
+            rate[i] = max(rate[i], _by_exponential(_soil(cells, axes, i), rise[i]))
+        moving[count] = i
+        count += 1
+    # One step of all cells after another: the processor works on many cells at once.
+    for step in range(MOST_STEPS):
+        if count == 0:
+            return step
+        left, count = count, 0
+        for k in range(left):
+            i = moving[k]
+            depth, slope, second = _reach(_soil(cells, axes, i), suction, tables, rate[i])
+            # Of log depth against log rate, and how far it is from its target.
+            per_depth = 1.0 / depth
+            tilt = slope * per_depth
+            bend = second * per_depth - tilt * tilt
+            away = _log_ratio(depth, rise[i]) / tilt
+            away /= min(max(1.0 - 0.5 * away * bend / tilt, 0.5), 2.0)
+            here = rate[i] * _exp(-min(max(away, -8.0), 8.0))
+            rate[i] = min(max(here, least), greatest)
+            # The error left is of the order of the step cubed.
+            moving[count] = i
+            count += abs(away) >= _LAST_STEP and rate[i] > least
+    return MOST_STEPS

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -42,7 +43,15 @@ class Blend:
 
     def parts(self) -> tuple[TableOf, AxisOf]:
         """The table and its axis as compiled loops take them."""
-        return self.table.parts(), (self.axis.low, 1.0 / self.axis.step, self.axis.count)
+        _, _, octave, bits, low, high = self.table.parts()
+        axis = (self.axis.low, 1.0 / self.axis.step, self.axis.count)
+        return (self._side_by_side, self.axis.count, octave, bits, low, high), axis
+
+    @cached_property
+    def _side_by_side(self) -> Floats:
+        """The table's cubics with the rows of an interval next to each other."""
+        cubics = self.table.cubics.reshape(self.axis.count, self.table.intervals, 4)
+        return np.ascontiguousarray(cubics.transpose(1, 0, 2)).reshape(-1, 4)
 
     def look_up(self, along: Floats, value: Floats) -> Floats:
         """Interpolate between what the rows hold at a value, by four rows (Lagrange).

@@ -96,18 +96,19 @@ def through(heights: Heights, march: March, bottom_m: float) -> March:
     differentiation.
     """
     suction = heights.below(march.suction_m, bottom_m - march.top_m)
-    slope = _carried(heights, march) - heights.at(suction)[1]
+    slope = _place(heights, march)[1] - heights.at(suction)[1]
     return March(bottom_m, suction, slope / heights.share(suction))
 
 
 def water_table(heights: Heights, march: March) -> tuple[Floats, Floats]:
     """Depth [m] of the water table if the layer went on, and its slope against flux."""
-    return march.top_m + heights.at(march.suction_m)[0], _carried(heights, march)
+    height, slope = _place(heights, march)
+    return march.top_m + height, slope
 
 
-def _carried(heights: Heights, march: March) -> Floats:
-    """Slope of F(h(E); E) at the top of a layer."""
-    own = heights.at(march.suction_m)[1]
+def _place(heights: Heights, march: March) -> tuple[Floats, Floats]:
+    """Height F(h(E); E) [m] of the top of a layer, and its slope against flux."""
+    height, own = heights.at(march.suction_m)
     finite = np.isfinite(march.suction_m)
     moved = np.where(finite, march.suction_m, 1.0)
-    return own + np.where(finite, heights.share(moved) * march.slope, 0.0)
+    return height, own + np.where(finite, heights.share(moved) * march.slope, 0.0)

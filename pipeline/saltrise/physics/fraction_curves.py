@@ -10,7 +10,7 @@ and, after Saxton & Rawls, a middle part in which water content is linear in suc
 with x Campbell's scaled depth (`laws.rise_depth`), P(q; p) the integral of u^p/(u^p + q) and
 V(q; n) that of 1/(1 + q u^n) over u from 0 to 1, r the water content at t over that at saturation
 and p = 3 + 2B. Each of the three depends on one number and one exponent, so a table with a row an
-exponent serves every cell and no fraction is rounded. The flux of a depth follows by Newton's
+exponent serves every cell and no fraction is rounded. The flux of a depth follows by Halley's
 method.
 """
 

@@ -22,6 +22,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.panels import running_sums
 from saltrise.physics.reach import POINTS, WEIGHTS, Conductor, nodes_in, tail
 
 Floats = NDArray[np.float64]
@@ -66,13 +67,7 @@ class QuadratureHeights:
         _, _, area, conductivity = nodes_in(self._soil)
         shape = (self._flux.size, self._panels + 1)
         height, rest = np.zeros(shape), np.zeros(shape)
-        with np.errstate(divide="ignore", over="ignore"):
-            for k, flux in enumerate(self._flux):
-                share = 1.0 / (1.0 + flux / conductivity)
-                part = area * share
-                np.cumsum(part.sum(axis=1), out=height[k, 1:])
-                part *= 1.0 - share
-                np.cumsum(part.sum(axis=1), out=rest[k, 1:])
+        running_sums(self._flux, area, conductivity, height, rest)
         return height, rest
 
     def at(self, suction_m: Floats) -> tuple[Floats, Floats]:
