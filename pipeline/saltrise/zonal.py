@@ -98,7 +98,7 @@ class ZonePartial:
 
 @dataclass(frozen=True)
 class ZoneTotals:
-    """Merged sums by zone number, and merged histograms."""
+    """Merged sums by zone number, and merged histograms, in the order of `compact`."""
 
     sums: dict[int, Floats]
     histogram: Histogram
@@ -149,13 +149,22 @@ def compact(histogram: Histogram) -> Histogram:
     """The same histograms with one row a (zone, quantity, bin), in that order."""
     if histogram.zone.size == 0:
         return histogram
-    order = np.lexsort((histogram.bin, histogram.quantity, histogram.zone))
-    keys = [getattr(histogram, name)[order] for name in ("zone", "quantity", "bin")]
-    new = np.ones(order.size, dtype=bool)
-    new[1:] = np.any([key[1:] != key[:-1] for key in keys], axis=0)
-    first = np.flatnonzero(new)
-    zone, quantity, bin_ = (key[first] for key in keys)
-    return Histogram(zone, quantity, bin_, np.add.reduceat(histogram.weight[order], first))
+    # One number sorts ten times as fast as three.
+    key = (histogram.zone - REGION) << _KEY_BITS | histogram.quantity << _BIN_BITS | histogram.bin
+    order = np.argsort(key)
+    key = key[order]
+    first = np.flatnonzero(np.append(True, key[1:] != key[:-1]))
+    rows = order[first]
+    return Histogram(
+        histogram.zone[rows],
+        histogram.quantity[rows],
+        histogram.bin[rows],
+        np.add.reduceat(histogram.weight[order], first),
+    )
+
+
+_BIN_BITS = 64 - BIN_SHIFT
+_KEY_BITS = _BIN_BITS + len(QUANTITIES).bit_length()
 
 
 def pack(partials: list[ZonePartial]) -> dict[str, NDArray[np.generic]]:

@@ -228,12 +228,19 @@ def histogram_percentile(
     The middle of the first bin whose cumulative weight reaches the share; 0 for the bin of zero.
     """
     histogram = totals.histogram
-    mine = (histogram.zone == zone) & (histogram.quantity == QUANTITIES.index(quantity))
+    mine = _run(histogram.zone, zone, slice(0, histogram.zone.size))
+    mine = _run(histogram.quantity, QUANTITIES.index(quantity), mine)
     weight = np.cumsum(histogram.weight[mine])
     if weight.size == 0:
         return None
     first = int(np.searchsorted(weight, share * weight[-1], side="left"))
     return _middle(histogram.bin[mine][min(first, weight.size - 1)])
+
+
+def _run(ordered: NDArray[np.int64], wanted: int, among: slice) -> slice:
+    """Where a number stands in a part of an array that is in order."""
+    first, after = np.searchsorted(ordered[among], (wanted, wanted + 1)) + among.start
+    return slice(int(first), int(after))
 
 
 def _middle(bin_: np.int64) -> float:
