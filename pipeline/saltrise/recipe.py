@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from saltrise.kernels.cells import mark
+from saltrise.kernels.cells import mark, scale
 from saltrise.layers import season_layer
 from saltrise.physics.curve import RiseCurves
 from saltrise.physics.demand import at_surface, capped
@@ -24,6 +24,7 @@ from saltrise.soil_cells import Soil
 from saltrise.zonal import ZoneValues
 
 Array = NDArray[np.float64]
+Values = NDArray[np.float32] | NDArray[np.float64]
 
 
 @dataclass(frozen=True)
@@ -155,7 +156,7 @@ class _Year:
 
 def compute_cells(
     recipe: Recipe,
-    inputs: Mapping[str, NDArray[np.float32] | Array],
+    inputs: Mapping[str, Values],
     shape: tuple[int, int],
 ) -> CellResult:
     """Every layer of some cells.
@@ -179,11 +180,11 @@ def compute_cells(
     UnmappedCodeError
         A texture code has no profile, or fractions do not add up.
     """
-    given: dict[str, Array] = {role: values.astype(np.float64) for role, values in inputs.items()}
+    given: dict[str, Values] = dict(inputs)
     given |= {role: np.full(shape, value) for role, value in recipe.constants.items()}
     soil = recipe.soil.cells(given)
     waters = converted(recipe, given)
-    root = given.get("root_depth")
+    root = _doubled(given.get("root_depth"))
     missing: dict[str, list[Array] | NDArray[np.bool_]] = {
         "no_depth": [water.depth for water in waters],
         "no_texture": soil.missing,
@@ -236,19 +237,34 @@ def _answer(
     return CellResult(values, classes, valid, depth, tds, counts, (*others, *waters_sums))
 
 
-def converted(recipe: Recipe, given: Mapping[str, Array]) -> list[_Water]:
+def converted(recipe: Recipe, given: Mapping[str, Values]) -> list[_Water]:
     """Depth [m], TDS [g/L], demand and percolation [mm] of each season from the config's units."""
     waters = []
     for season in recipe.seasons:
-        depth = given[season.depth] if season.depth else given["ground"] - given["elevation"]
+        if season.depth:
+            depth = _scaled(given[season.depth], recipe.depth_factor)
+        else:
+            apart = np.subtract(given["ground"], given["elevation"], dtype=np.float64)
+            depth = apart * recipe.depth_factor
         demand, percolation = net_demand(
-            given[season.potential_evaporation] * season.demand_factor,
-            given.get(season.rain),
-            given.get(season.irrigation),
+            _scaled(given[season.potential_evaporation], season.demand_factor),
+            _doubled(given.get(season.rain)),
+            _doubled(given.get(season.irrigation)),
         )
-        tds = given[season.salinity] * recipe.tds_factor
-        waters.append(_Water(depth * recipe.depth_factor, tds, demand, percolation))
+        tds = _scaled(given[season.salinity], recipe.tds_factor)
+        waters.append(_Water(depth, tds, demand, percolation))
     return waters
+
+
+def _scaled(values: Values, factor: float) -> Array:
+    scaled = np.empty(values.size)
+    scale(values.ravel(), factor, scaled)
+    return scaled.reshape(values.shape)
+
+
+def _doubled(values: Values | None) -> Array | None:
+    """A copy in float64 that may be changed."""
+    return None if values is None else values.astype(np.float64)
 
 
 def _flooded(waters: list[_Water]) -> NDArray[np.bool_]:

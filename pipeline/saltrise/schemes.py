@@ -51,7 +51,7 @@ class Scheme:
     title: str
     layer: str
     unit: str
-    breaks: tuple[float, ...]
+    breaks: tuple[float, float, float, float]
     names: tuple[str, ...]
     colours: tuple[str, ...]
     citation: str
@@ -59,7 +59,7 @@ class Scheme:
     def classify(self, values: NDArray[np.float64]) -> NDArray[np.uint8]:
         """Class 1 to 5 of each value, any shape; a NaN falls into class 1 (mask it yourself)."""
         classes = np.empty(values.size, dtype=np.uint8)
-        classify(values.ravel(), np.array(self.breaks), self.falls, classes)
+        classify(values.ravel(), self.breaks, self.falls, classes)
         return classes.reshape(values.shape)
 
     @property
@@ -138,12 +138,13 @@ def _build(raw: dict[str, Any], name: str) -> Scheme:
     layer = raw.get("layer", "salt_load")
     surface = (raw.get("surface_name", _SURFACE[0]), raw.get("surface_colour", _SURFACE[1]))
     names, colours = list(raw["names"]), list(raw["colours"])
+    first, second, third, fourth = raw["breaks"]
     return Scheme(
         name=name,
         title=raw.get("title", name),
         layer=layer,
         unit=_UNITS[layer],
-        breaks=tuple(float(edge) for edge in raw["breaks"]),
+        breaks=(float(first), float(second), float(third), float(fourth)),
         names=tuple(names if len(names) > CLASS_COUNT else [*names, surface[0]]),
         colours=tuple(colours if len(colours) > CLASS_COUNT else [*colours, surface[1]]),
         citation=raw["citation"],

@@ -24,6 +24,7 @@ from saltrise.physics.stacks import (
 from saltrise.physics.texture import class_of_fractions, fractions_in_percent
 
 Array = NDArray[np.float64]
+Values = NDArray[np.float32] | NDArray[np.float64]
 Profiles = NDArray[np.int32]
 
 UNKNOWN_STACK = -1
@@ -54,7 +55,7 @@ class SoilCells:
 class Soil(Protocol):
     """How a region's soil inputs are read."""
 
-    def cells(self, given: Mapping[str, Array]) -> SoilCells:
+    def cells(self, given: Mapping[str, Values]) -> SoilCells:
         """Soils of some cells from inputs by role, in the config's units."""
 
 
@@ -85,7 +86,7 @@ class ClassSoil:
     roots_m: Array
     fraction_divisor: float
 
-    def cells(self, given: Mapping[str, Array]) -> SoilCells:
+    def cells(self, given: Mapping[str, Values]) -> SoilCells:
         """See `Soil.cells`.
 
         Raises
@@ -111,12 +112,12 @@ class ClassSoil:
         found[self.keys.take(place) != key] = UNKNOWN_STACK
         return found
 
-    def _root_key(self, root: Array) -> Numbers:
+    def _root_key(self, root: Values) -> Numbers:
         place = np.minimum(np.searchsorted(self.roots_m, root), self.roots_m.size - 1)
         key: Numbers = place.astype(np.int64) * np.int64(BASE ** len(self.layers))
         return key
 
-    def _texture(self, given: Mapping[str, Array], end: str) -> Array:
+    def _texture(self, given: Mapping[str, Values], end: str) -> Values:
         """Texture codes of a layer: as given, or the number of the class its fractions make."""
         if f"texture{end}" in given:
             return given[f"texture{end}"]
@@ -125,7 +126,7 @@ class ClassSoil:
             raise UnmappedCodeError("sand, clay and silt do not add up")
         return classes
 
-    def _unknown(self, given: Mapping[str, Array], profile: Profiles, flags: Flags) -> str:
+    def _unknown(self, given: Mapping[str, Values], profile: Profiles, flags: Flags) -> str:
         unknown = ((flags & NOT_MAPPED) > 0) | ((profile < 0) & ((flags & NO_SOIL) == 0))
         codes = [self._texture(given, end)[unknown].flat[0] for end in self.layers]
         shown = ", ".join(f"{code:g}" for code in codes)
@@ -143,7 +144,7 @@ class FractionSoil:
     method: str
     fraction_divisor: float
 
-    def cells(self, given: Mapping[str, Array]) -> SoilCells:
+    def cells(self, given: Mapping[str, Values]) -> SoilCells:
         """See `Soil.cells`.
 
         Raises
@@ -159,7 +160,7 @@ class FractionSoil:
         inputs = {"sand": sand, "clay": clay}
         needs = METHODS[self.method].needs
         if needs:
-            inputs[needs] = given[needs]
+            inputs[needs] = given[needs].astype(np.float64)
         missing = np.isnan(sand) | np.isnan(clay)
         for values in inputs.values():
             missing |= np.isnan(values)
@@ -173,7 +174,7 @@ class FractionSoil:
 _ANY_SOIL = {"sand": 40.0, "clay": 20.0, "organic_matter": 2.0, "bulk_density": 1.4}
 
 
-def fractions(given: Mapping[str, Array], end: str) -> dict[str, Array]:
+def fractions(given: Mapping[str, Values], end: str) -> dict[str, Values]:
     """Sand, clay and perhaps silt of one layer."""
     roles = ("sand", "clay", "silt")
     return {role: given[f"{role}{end}"] for role in roles if f"{role}{end}" in given}

@@ -2,7 +2,7 @@
 
 The record's existence is the journal of an unfinished run: it is written after its tile's file,
 names the run it belongs to and holds the file's checksum, so that nothing half-written or
-foreign counts as done.
+foreign counts as done. Neither is forced to the disk: what a power cut takes is computed anew.
 """
 
 from __future__ import annotations
@@ -71,7 +71,7 @@ def _record_file(work: Path, index: int) -> Path:
 
 
 def write_tile(work: Path, run: str, index: int, window: Window, tile: ComputedTile) -> None:
-    """Make one tile durable: its file first, then the small record that says it is whole."""
+    """Keep one tile: its file first, then the small record that says it is whole."""
     buffer = io.BytesIO()
     np.savez(buffer, **tile.numbers)  # type: ignore[arg-type]
     parts = tile.sections | {_NUMBERS: buffer.getvalue()}
@@ -82,11 +82,12 @@ def write_tile(work: Path, run: str, index: int, window: Window, tile: ComputedT
         if name != _NUMBERS:
             blocks[name] = [(start + int(a), int(n)) for a, n in block_places(part)]
         start += len(part)
-    durable.write_whole(tile_file(work, index), parts.values())
+    durable.write_whole(tile_file(work, index), parts.values(), sync=False)
     place = (window.row, window.col, window.height, window.width)
     record = Record(index, run, checksum, place, tile.counts, tile.ranges, places, blocks)
     ranges = {role: (r.valid, r.nodata, r.low, r.high) for role, r in tile.ranges.items()}
-    durable.write_json(_record_file(work, index), vars(record) | {"ranges": ranges}, indent=None)
+    content = vars(record) | {"ranges": ranges}
+    durable.write_json(_record_file(work, index), content, indent=None, sync=False)
 
 
 def read_record(work: Path, index: int) -> Record:

@@ -15,6 +15,14 @@ Bytes = NDArray[np.uint8]
 Whole = NDArray[np.int64]
 Cells = NDArray[Any]
 """float32 or float64"""
+Breaks = tuple[float, float, float, float]
+
+
+@compiled
+def scale(values: Cells, factor: float, scaled: Floats) -> None:
+    """Values times a factor."""
+    for i in range(values.size):
+        scaled[i] = values[i] * factor
 
 
 @compiled
@@ -97,11 +105,22 @@ def cap(most: Floats, demand: Floats, depth: Floats, surface: float, rise: Float
 
 
 @compiled
-def classify(values: Floats, breaks: Floats, falls: bool, classes: Bytes) -> None:
+def classify(values: Floats, breaks: Breaks, falls: bool, classes: Bytes) -> None:
     """Class from 1: one more for every break that a value reaches, or lies below where breaks
     fall."""
+    a, b, c, d = breaks
     for i in range(values.size):
-        found = 1
-        for edge in breaks:
-            found += (values[i] < edge) if falls else (values[i] >= edge)
-        classes[i] = found
+        value = values[i]
+        reached = 1 + (value >= a) + (value >= b) + (value >= c) + (value >= d)
+        below = 1 + (value < a) + (value < b) + (value < c) + (value < d)
+        classes[i] = below if falls else reached
+
+
+@compiled
+def settle_critical(most: Floats, target: float, depth: Floats) -> None:
+    """Critical depths: 0 where even the most load keeps within the target, NaN where it is."""
+    for i in range(most.size):
+        if math.isnan(most[i]):
+            depth[i] = np.nan
+        elif most[i] <= target:
+            depth[i] = 0.0

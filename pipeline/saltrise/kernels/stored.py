@@ -11,10 +11,8 @@ from saltrise.kernels.compiled import compiled
 
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
-Singles = NDArray[Any]
-"""float32"""
-Bytes = NDArray[Any]
-"""uint8"""
+Cells = NDArray[Any]
+"""float32, or uint8 for classes"""
 
 KEPT_BITS = 12
 """Explicit mantissa bits a rounded layer keeps: relative error at most 2^-13 (1.25e-4)."""
@@ -37,17 +35,31 @@ def _rounded(value: np.float32) -> np.float32:
 
 
 @compiled
-def _moments(columns: Floats, first: float, count: int) -> Moments:
-    """Moments from sums by column, of deviations from a first value."""
+def _add_moments(row: Cells, valid: Flags, first: float, sums: Floats, ends: Cells) -> None:
+    """Add a row of cells to sums by column: of deviations from `first` and their squares, and
+    the least and greatest of the valid."""
+    # By column, not one after the other: columns are added side by side.
+    for j in range(row.size):
+        held, value = valid[j], np.float64(row[j])
+        apart = value - first if held else 0.0
+        sums[0, j] += apart
+        sums[1, j] += apart * apart
+        ends[0, j] = min(ends[0, j], row[j] if held else np.float32(np.inf))
+        ends[1, j] = max(ends[1, j], row[j] if held else np.float32(-np.inf))
+
+
+@compiled
+def _moments(sums: Floats, ends: Cells, first: float, count: int) -> Moments:
+    """Moments from sums by column."""
     if count == 0:
         return 0, np.inf, -np.inf, 0.0, 0.0
-    total, square, low, high = 0.0, 0.0, np.inf, -np.inf
-    for j in range(columns.shape[1]):
-        total += columns[0, j]
-        square += columns[1, j]
-        low, high = min(low, columns[2, j]), max(high, columns[3, j])
+    total, square = 0.0, 0.0
+    for j in range(sums.shape[1]):
+        total += sums[0, j]
+        square += sums[1, j]
     shift = total / count
-    return count, low, high, first + shift, max(square - count * shift * shift, 0.0)
+    spread = max(square - count * shift * shift, 0.0)
+    return count, np.float64(ends[0].min()), np.float64(ends[1].max()), first + shift, spread
 
 
 @compiled
@@ -56,15 +68,14 @@ def store(
     valid: Flags,
     rounded: bool,
     nodata: float,
-    layer: Singles,
+    layer: Cells,
     top: int,
     left: int,
 ) -> Moments:
-    """Store values into part of a layer from (top, left) on; their moments as stored."""
+    """Store values into part of a float32 layer from (top, left) on; their moments as stored."""
     height, width = values.shape
-    # Sums by column, not one sum: columns are added side by side.
-    columns = np.zeros((4, width))
-    columns[2], columns[3] = np.inf, -np.inf
+    sums, ends = np.zeros((2, width)), np.empty((2, width), dtype=np.float32)
+    ends[0], ends[1] = np.inf, -np.inf
     first, count, empty = 0.0, 0, np.float32(nodata)
     for i in range(height):
         for j in range(width):
@@ -74,42 +85,34 @@ def store(
             first = np.float64(np.float32(values[i // width, i % width]))
             break
     for i in range(height):
+        row = layer[top + i, left : left + width]
         for j in range(width):
-            held = valid[i, j]
             value = np.float32(values[i, j])
             if rounded:
                 value = _rounded(value)
-            layer[top + i, left + j] = value if held else empty
-            apart = np.float64(value) - first if held else 0.0
-            columns[0, j] += apart
-            columns[1, j] += apart * apart
-            columns[2, j] = min(columns[2, j], np.float64(value) if held else np.inf)
-            columns[3, j] = max(columns[3, j], np.float64(value) if held else -np.inf)
-    return _moments(columns, first, count)
+            row[j] = value if valid[i, j] else empty
+        _add_moments(row, valid[i], first, sums, ends)
+    return _moments(sums, ends, first, count)
 
 
 @compiled
-def store_classes(classes: Bytes, valid: Flags, layer: Bytes, top: int, left: int) -> Moments:
+def store_classes(classes: Cells, valid: Flags, layer: Cells, top: int, left: int) -> Moments:
     """Store classes, 0 where not valid, into part of a layer; moments of the valid ones."""
     height, width = classes.shape
-    columns = np.zeros((4, width))
-    columns[2], columns[3] = np.inf, -np.inf
-    count = 0
+    sums, ends = np.zeros((2, width)), np.empty((2, width), dtype=np.float32)
+    ends[0], ends[1] = np.inf, -np.inf
+    count, row = 0, np.empty(width, dtype=np.float32)
     for i in range(height):
         for j in range(width):
-            held, value = valid[i, j], classes[i, j]
-            layer[top + i, left + j] = value
-            count += held
-            weight = np.float64(value) if held else 0.0
-            columns[0, j] += weight
-            columns[1, j] += weight * weight
-            columns[2, j] = min(columns[2, j], np.float64(value) if held else np.inf)
-            columns[3, j] = max(columns[3, j], np.float64(value) if held else -np.inf)
-    return _moments(columns, 0.0, count)
+            layer[top + i, left + j] = classes[i, j]
+            row[j] = classes[i, j]
+            count += valid[i, j]
+        _add_moments(row, valid[i], 0.0, sums, ends)
+    return _moments(sums, ends, 0.0, count)
 
 
 @compiled
-def halve_means(fine: Singles, rounded: bool, nodata: float, coarse: Singles) -> None:
+def halve_means(fine: Cells, rounded: bool, nodata: float, coarse: Cells) -> None:
     """Mean of the valid cells among four, for every cell of `coarse`."""
     empty = np.float32(nodata)
     for i in range(coarse.shape[0]):
@@ -128,7 +131,7 @@ def halve_means(fine: Singles, rounded: bool, nodata: float, coarse: Singles) ->
 
 
 @compiled
-def halve_classes(fine: Bytes, coarse: Bytes) -> None:
+def halve_classes(fine: Cells, coarse: Cells) -> None:
     """Most frequent valid (not 0) class of four, ties to the greater."""
     for i in range(coarse.shape[0]):
         for j in range(coarse.shape[1]):

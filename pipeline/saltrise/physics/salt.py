@@ -8,6 +8,7 @@ from typing import Protocol, TypeVar
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from saltrise.kernels.cells import settle_critical
 from saltrise.physics.curve import DEEPEST_M, SURFACE_DEPTH_M
 from saltrise.physics.year import Part, flux_of_load, full_load, last_break
 
@@ -67,8 +68,7 @@ def critical_depth(
     """
     most, target = full_load(seasons), target_load * PER_HUNDRED
     depth = depth_of_flux(curves, cells, flux_of_load(seasons, target), root_depth_m)
-    depth[most <= target] = 0.0
-    depth[np.isnan(most)] = np.nan
+    settle_critical(most.ravel(), target, depth.reshape(-1))
     return depth
 
 

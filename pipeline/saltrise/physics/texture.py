@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from saltrise.physics.soils import TEXTURES
 
 Floats = NDArray[np.float64]
+Values = NDArray[np.float32] | NDArray[np.float64]
 
 _DIGITS = 9
 """Digits kept [%] where sums are compared with an edge, so that 0.1 + 0.2 does not miss it."""
@@ -99,15 +100,15 @@ def _by_rules(sand: Floats, clay: Floats) -> Floats:
 
 
 def fractions_in_percent(
-    sand: Floats, clay: Floats, silt: Floats | None, divisor: float
+    sand: Values, clay: Values, silt: Values | None, divisor: float
 ) -> tuple[Floats, Floats, NDArray[np.bool_]]:
     """Sand and clay [%] and where fractions cannot be.
 
     Parameters
     ----------
-    sand, clay : float64 arrays
+    sand, clay : float32 or float64 arrays
         Fractions, in % times `divisor`.
-    silt : float64 array or None
+    silt : float32 or float64 array, or None
         The third fraction, if it is given: sums within 2 % of 100 are scaled to 100.
     divisor : float
         1 for %, 10 for g/kg.
@@ -119,25 +120,30 @@ def fractions_in_percent(
     wrong : bool array
         Cells with a negative fraction, sand and clay over 100 %, or a sum beyond 2 % of 100.
     """
-    sand, clay = sand / divisor, clay / divisor
+    sand, clay = _percent(sand, divisor), _percent(clay, divisor)
     with np.errstate(invalid="ignore", divide="ignore"):
         wrong = (sand < 0) | (clay < 0)
         if silt is None:
             return sand, clay, wrong | (np.round(sand + clay, _DIGITS) > 100)
-        silt = silt / divisor
+        silt = _percent(silt, divisor)
         total = sand + clay + silt
         wrong |= (silt < 0) | (np.abs(np.round(total - 100, _DIGITS)) > _SUM_TOLERANCE)
         return sand * 100 / total, clay * 100 / total, wrong
 
 
+def _percent(fraction: Values, divisor: float) -> Floats:
+    percent: Floats = np.divide(fraction, divisor, dtype=np.float64)
+    return percent
+
+
 def class_of_fractions(
-    given: Mapping[str, Floats], divisor: float
+    given: Mapping[str, Values], divisor: float
 ) -> tuple[Floats, NDArray[np.bool_]]:
     """Texture class of each cell from its fractions, and where these cannot be.
 
     Parameters
     ----------
-    given : mapping of float64 arrays
+    given : mapping of float32 or float64 arrays
         `sand`, `clay` and perhaps `silt`, in % times `divisor`; other keys are ignored.
     divisor : float
         1 for %, 10 for g/kg.
