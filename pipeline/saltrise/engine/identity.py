@@ -13,7 +13,17 @@ import rasterio
 SHARED = ("config", "inputs", "versions")
 """The parts of an identity that run.json holds too."""
 
-_PACKAGES = ("saltrise", "numpy", "scipy", "rasterio", "pyproj", "shapely", "dask")
+_PACKAGES = (
+    "saltrise",
+    "numpy",
+    "numba",
+    "scipy",
+    "rasterio",
+    "zstandard",
+    "pyproj",
+    "shapely",
+    "dask",
+)
 _WORDS = {"config": "config", "versions": "version of", "cut": "run"}
 
 
