@@ -14,6 +14,7 @@ from functools import cache
 import numpy as np
 from numpy.typing import NDArray
 
+from saltrise.kernels.fractions import percent, squares
 from saltrise.physics.soils import TEXTURES
 
 Floats = NDArray[np.float64]
@@ -40,21 +41,15 @@ def texture_class(sand: Floats, clay: Floats) -> Floats:
     float64 array
         Whole numbers; NaN where a fraction is NaN.
     """
-    with np.errstate(invalid="ignore"):
-        inside = (sand >= 0.0) & (clay >= 0.0) & (sand + clay <= _WHOLE)
-        row = np.where(inside, clay * _SQUARES, 0.0).astype(np.int32)
-        col = np.where(inside, sand * _SQUARES, 0.0).astype(np.int32)
-    row *= _ACROSS
-    row += col
-    classes: Floats = _squares().take(row)
-    near = np.isnan(classes) | ~inside
-    if near.any():
-        classes[near] = _by_rules(sand[near], clay[near])
-    return classes
+    classes, near = np.empty(sand.size), np.empty(sand.size, dtype=bool)
+    flat = (sand.ravel(), clay.ravel())
+    if squares(*flat, _squares(), _SQUARES, _ACROSS, classes, near):
+        classes[near] = _by_rules(flat[0][near], flat[1][near])
+    return classes.reshape(sand.shape)
 
 
-_SQUARES, _ACROSS, _WHOLE = 4, 402, 100.0
-"""Squares of the table in one percent, its width, and where the triangle ends."""
+_SQUARES, _ACROSS = 4, 402
+"""Squares of the table in one percent, and its width."""
 
 
 @cache
@@ -120,20 +115,11 @@ def fractions_in_percent(
     wrong : bool array
         Cells with a negative fraction, sand and clay over 100 %, or a sum beyond 2 % of 100.
     """
-    sand, clay = _percent(sand, divisor), _percent(clay, divisor)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        wrong = (sand < 0) | (clay < 0)
-        if silt is None:
-            return sand, clay, wrong | (np.round(sand + clay, _DIGITS) > 100)
-        silt = _percent(silt, divisor)
-        total = sand + clay + silt
-        wrong |= (silt < 0) | (np.abs(np.round(total - 100, _DIGITS)) > _SUM_TOLERANCE)
-        return sand * 100 / total, clay * 100 / total, wrong
-
-
-def _percent(fraction: Values, divisor: float) -> Floats:
-    percent: Floats = np.divide(fraction, divisor, dtype=np.float64)
-    return percent
+    found = (np.empty(sand.size), np.empty(sand.size), np.empty(sand.size, dtype=bool))
+    third = np.empty(0) if silt is None else silt.ravel()
+    percent(sand.ravel(), clay.ravel(), third, divisor, _SUM_TOLERANCE, found)
+    shape = sand.shape
+    return found[0].reshape(shape), found[1].reshape(shape), found[2].reshape(shape)
 
 
 def class_of_fractions(
