@@ -111,18 +111,19 @@ def campbell(sand: Floats, clay: Floats, bulk_density: Floats) -> tuple[Floats, 
     standard deviation s: psi_es = 0.5 d^-1/2 J/kg, b = 2 psi_es + 0.2 s, psi_e = psi_es
     (rho/1.3)^(0.67 b), Ks = 0.004 (1.3/rho)^(1.3 b) exp(-6.9 clay - 3.7 silt) kg s m^-3.
     """
-    sand, clay = sand / 100.0, clay / 100.0
-    silt = 1.0 - sand - clay
-    logs = [math.log(0.001), math.log(0.026), math.log(1.025)]
-    mean = clay * logs[0] + silt * logs[1] + sand * logs[2]
-    square = clay * logs[0] ** 2 + silt * logs[1] ** 2 + sand * logs[2] ** 2
-    spread = powers.exp(np.sqrt(np.maximum(square - mean * mean, 0.0)))
+    # Sums over the three fractions, silt being what sand and clay leave.
+    small, middle, large = (math.log(d) for d in (0.001, 0.026, 1.025))
+    mean = middle + (small - middle) / 100.0 * clay + (large - middle) / 100.0 * sand
+    square = middle**2 + (small**2 - middle**2) / 100.0 * clay
+    square += (large**2 - middle**2) / 100.0 * sand
+    square -= mean * mean
+    np.maximum(square, 0.0, out=square)
     loose = 0.5 * powers.exp(-0.5 * mean)
-    b = 2.0 * loose + 0.2 * spread
-    dense = powers.log(bulk_density / 1.3)
-    air_entry = loose * powers.exp(0.67 * b * dense) / GRAVITY
-    ks = 0.004 * powers.exp(-1.3 * b * dense - 6.9 * clay - 3.7 * silt)
-    return air_entry, b, ks * (GRAVITY / 1000.0 * _MM_PER_DAY_OF_M_PER_S)
+    b = 2.0 * loose + 0.2 * powers.exp(np.sqrt(square))
+    dense = b * powers.log(bulk_density / 1.3)
+    air_entry = loose * powers.exp(0.67 * dense) / GRAVITY
+    ks = powers.exp(-1.3 * dense - 0.032 * clay + 0.037 * sand - 3.7)
+    return air_entry, b, ks * (0.004 * GRAVITY / 1000.0 * _MM_PER_DAY_OF_M_PER_S)
 
 
 @dataclass(frozen=True)
