@@ -16,17 +16,20 @@ def running_sums(
 ) -> None:
     """Integrals of s = 1/(1 + E/K) and of s (1 - s) up to each panel's end, a row a flux.
 
-    `area` and `conductivity` are (panels, points); the first column of the results is 0.
+    `area` and `conductivity` are (points, panels); the first column of the results is 0.
     """
+    points, panels = area.shape
+    own, left = np.empty(panels), np.empty(panels)
     for k in range(flux.size):
-        risen, left = 0.0, 0.0
-        for i in range(area.shape[0]):
-            own, own_left = 0.0, 0.0
-            for j in range(area.shape[1]):
-                share = 1.0 / (1.0 + flux[k] / conductivity[i, j])
-                own += area[i, j] * share
-                own_left += area[i, j] * share * (1.0 - share)
-            risen += own
-            left += own_left
-            height[k, i + 1] = risen
-            rest[k, i + 1] = left
+        own[:], left[:] = 0.0, 0.0
+        # Panels side by side, point by point: they are divided side by side.
+        for j in range(points):
+            for i in range(panels):
+                share = conductivity[j, i] / (conductivity[j, i] + flux[k])
+                part = area[j, i] * share
+                own[i] += part
+                left[i] += part * (1.0 - share)
+        height[k, 0], rest[k, 0] = 0.0, 0.0
+        for i in range(panels):
+            height[k, i + 1] = height[k, i] + own[i]
+            rest[k, i + 1] = rest[k, i] + left[i]

@@ -66,8 +66,9 @@ class QuadratureHeights:
         """Height, and flux times its slope with the sign turned, at the edges of the panels."""
         _, _, area, conductivity = nodes_in(self._soil)
         shape = (self._flux.size, self._panels + 1)
-        height, rest = np.zeros(shape), np.zeros(shape)
-        running_sums(self._flux, area, conductivity, height, rest)
+        height, rest = np.empty(shape), np.empty(shape)
+        points, laws = np.ascontiguousarray(area.T), np.ascontiguousarray(conductivity.T)
+        running_sums(self._flux, points, laws, height, rest)
         return height, rest
 
     def at(self, suction_m: Floats) -> tuple[Floats, Floats]:

@@ -89,6 +89,7 @@ def nodes_in(soil: Conductor) -> tuple[Panels, Floats, Floats, Floats]:
     return panels, head, area, soil.conductivity(head)
 
 
+@lru_cache(maxsize=256)
 def tail(soil: Conductor, end_m: float) -> tuple[float, float]:
     """Power p of K ~ h^-p at a great suction, and the integral of K dh beyond it."""
     last, before = soil.conductivity(np.array([end_m, end_m / 2]))
