@@ -32,16 +32,19 @@ R = TypeVar("R")
 
 PLAN = "plan.pickle"
 
-_MMAP_THRESHOLD, _TRIM_THRESHOLD = -3, -1
+_MMAP_THRESHOLD, _TRIM_THRESHOLD, _ARENA_MAX = -3, -1, -8
 _KEPT_BYTES = 32 << 20
 
 
 def keep_memory() -> None:
     """Ask the C library to keep freed arrays of up to 32 MB for the next block.
 
-    glibc gives each back to the system and takes it anew, zeroed, for every block: a tenth of
-    the run. Other C libraries are left as they are.
+    glibc gives each back to the system and takes it anew, zeroed, for every block, and threads
+    that share memory wait for each other while it does: a tenth of the run. Other C libraries are
+    left as they are. All threads draw on one heap: those of other threads come in pieces of 64 MB,
+    which arrays outgrow, and then pieces come and go.
     """
+    _call_libc("mallopt", _ARENA_MAX, 1)
     _call_libc("mallopt", _MMAP_THRESHOLD, _KEPT_BYTES)
     _call_libc("mallopt", _TRIM_THRESHOLD, 32 * _KEPT_BYTES)
 
@@ -65,8 +68,11 @@ def on_threads(
     Results come back in the items' order. When one task fails, or the run is asked to stop, the
     others end at their next block.
     """
+    keep_memory()
     with ThreadPoolExecutor(workers) as pool:
-        return _compute([(task, item) for item in items], "threads", pool, done)
+        found = _compute([(task, item) for item in items], "threads", pool, done)
+    release_memory()
+    return found
 
 
 def run_tiles(
@@ -97,9 +103,7 @@ def run_tiles(
     if not indices:
         return
     if scheduler == "threads":
-        keep_memory()
         on_threads(lambda index: run_tile(plan, index), indices, workers, done)
-        release_memory()
         return
     durable.write_pickle(plan.work / PLAN, plan)
     tasks = [(str(plan.work), plan.run, index) for index in indices]

@@ -43,10 +43,12 @@ def add_layer(
     numbers: Whole,
     marks: tuple[int, int, int],
     base: int,
+    lowest: bool,
     key: Whole,
     flags: Bytes,
 ) -> None:
-    """Add one layer to the keys of cells, those of layers below multiplied by `base`.
+    """Add one layer to the keys of cells, those of layers below multiplied by `base`; the lowest
+    makes them anew.
 
     `numbers` are those of codes from `first` on; `marks` the numbers of no soil, no value and
     unknown code, which are also noted in `flags` (bits 1, 2 and 4).
@@ -59,8 +61,9 @@ def add_layer(
         else:
             held = int(min(max(code, first), first + numbers.size - 1))
             number = numbers[held - first] if held == code else unknown
-        key[i] = key[i] * base + number
-        flags[i] |= (number >= no_soil) | (number == missing) << 1 | (number == unknown) << 2
+        flag = (number >= no_soil) | (number == missing) << 1 | (number == unknown) << 2
+        key[i] = number if lowest else key[i] * base + number
+        flags[i] = flag if lowest else flags[i] | flag
 
 
 @compiled

@@ -48,11 +48,12 @@ class ClassCodes:
 
         A code that is not mapped has the number `UNKNOWN`, NaN `MISSING`.
         """
-        key = np.zeros(layers[0].size, dtype=np.int64)
-        flags = np.zeros(layers[0].size, dtype=np.uint8)
-        marks = (MASK, MISSING, UNKNOWN)
-        for codes in reversed(layers):
-            add_layer(codes.ravel(), self.first, self.number, marks, BASE, key, flags)
+        # Not zeros: the system would give out every page twice, once to be read.
+        key = np.empty(layers[0].size, dtype=np.int64)
+        flags = np.empty(layers[0].size, dtype=np.uint8)
+        how = (self.first, self.number, (MASK, MISSING, UNKNOWN), BASE)
+        for k, codes in enumerate(reversed(layers)):
+            add_layer(codes.ravel(), *how, k == 0, key, flags)
         return key.reshape(layers[0].shape), flags.reshape(layers[0].shape)
 
 
