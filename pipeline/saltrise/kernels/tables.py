@@ -169,17 +169,17 @@ def _log2(x: float) -> float:
 
 
 @compiled
-def exp2(x: Floats, found: Floats) -> None:
-    """2 to the power x, for |x| < 1000."""
+def exp2(x: Floats, factor: float, found: Floats) -> None:
+    """2 to the power x times a factor, for magnitudes of that below 1000."""
     for i in range(x.size):
-        found[i] = _exp2(x[i])
+        found[i] = _exp2(x[i] * factor)
 
 
 @compiled
-def log2(x: Floats, found: Floats) -> None:
-    """Logarithm to base 2, for x > 0 that is no subnormal number."""
+def log2(x: Floats, factor: float, found: Floats) -> None:
+    """Logarithm to base 2 times a factor, for x > 0 that is no subnormal number."""
     for i in range(x.size):
-        found[i] = _log2(x[i])
+        found[i] = _log2(x[i]) * factor
 
 
 @compiled

@@ -19,33 +19,33 @@ LOG2_OF_10 = math.log2(10.0)
 LOG2_OF_E = math.log2(math.e)
 
 
-def exp2(x: Floats) -> Floats:
-    """2 to the power x, for |x| < 1000."""
+def exp2(x: Floats, factor: float = 1.0) -> Floats:
+    """2 to the power x times a factor, for magnitudes of that below 1000."""
     found = np.empty(x.size)
-    tables.exp2(x.ravel(), found)
+    tables.exp2(x.ravel(), factor, found)
     return found.reshape(x.shape)
 
 
-def log2(x: Floats) -> Floats:
-    """Logarithm to base 2, for x > 0 (subnormal numbers excepted)."""
+def log2(x: Floats, factor: float = 1.0) -> Floats:
+    """Logarithm to base 2 times a factor, for x > 0 (subnormal numbers excepted)."""
     found = np.empty(x.size)
-    tables.log2(x.ravel(), found)
+    tables.log2(x.ravel(), factor, found)
     return found.reshape(x.shape)
 
 
 def ten_to(x: Floats) -> Floats:
     """10 to the power x."""
-    return exp2(x * LOG2_OF_10)
+    return exp2(x, LOG2_OF_10)
 
 
 def exp(x: Floats) -> Floats:
     """e to the power x."""
-    return exp2(x * LOG2_OF_E)
+    return exp2(x, LOG2_OF_E)
 
 
 def log(x: Floats) -> Floats:
     """Natural logarithm, for x > 0."""
-    return log2(x) * math.log(2.0)
+    return log2(x, math.log(2.0))
 
 
 def power(x: Floats, y: Floats | float) -> Floats:
