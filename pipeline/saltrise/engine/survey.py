@@ -237,8 +237,8 @@ def _texture(
     shape = (block.height, block.width)
     if role in constants:
         return (np.full(shape, constants[role]) if inputs.stacked else None), None
-    given: dict[str, NDArray[np.float64]] = {
-        r: values[r].astype(np.float64) if r in values else np.full(shape, constants[r])
+    given: dict[str, Floats | NDArray[np.float64]] = {
+        r: values[r] if r in values else np.full(shape, constants[r])
         for r in (f"{name}{end}" for name in FRACTIONS)
         if r in values or r in constants
     }
