@@ -98,15 +98,14 @@ class _Sums:
         edges = (DEPTH_EDGES_M, SALT_EDGES_G_PER_L)
         hazard, margin = values.hazard_class, values.depth_margin
         sums.codes(hazard, values.depth_m, margin, values.tds_g_per_l, edges, code)
-        runs: Runs = (starts, slots, weight_m2, code, _DRY, _WET)
+        runs: sums.Runs = (starts, slots, weight_m2, code, _DRY, _WET)
         summed = (values.depth_m, values.evaporation_mm_per_year, values.salt_load, margin)
         extras = np.array(values.extras).reshape(len(values.extras), weight_m2.size)
-        sums.add(*runs, summed, extras, self.columns)
+        sums.add(runs, summed, extras, self.columns)
         for bins, numbers in zip(self.bins, (values.salt_load, values.critical_depth), strict=True):
             bins.add(runs, numbers, self._per_unit)
 
 
-Runs = tuple[Whole, NDArray[np.intp], Floats, NDArray[np.uint8], int, int]
 _DRY, _WET = CODES // CLASSES, CODES // CLASSES * (CLASSES - 1)
 """Codes of assessed cells begin, and those of water at the surface."""
 
@@ -118,10 +117,10 @@ class _Bins:
         self._low = 0
         self._counts = np.zeros((slots, 0))
 
-    def add(self, runs: Runs, values: Floats, per_unit: float) -> None:
+    def add(self, runs: sums.Runs, values: Floats, per_unit: float) -> None:
         """Count cells into their bins."""
         self._cover_span(*sums.span(values, BIN_SHIFT))
-        sums.count(*runs, values, BIN_SHIFT, per_unit, self._low, self._counts)
+        sums.count(runs, values, BIN_SHIFT, per_unit, self._low, self._counts)
 
     def _cover_span(self, low: int, high: int) -> None:
         slots, span = self._counts.shape

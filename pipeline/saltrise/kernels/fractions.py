@@ -15,9 +15,6 @@ Flags = NDArray[np.bool_]
 Cells = NDArray[Any]
 """float32 or float64"""
 
-_PER_UNIT = 1e9
-"""Sums are compared with their limits to nine digits, so that 0.1 + 0.2 does not miss one."""
-
 
 @compiled
 def percent(
@@ -26,10 +23,11 @@ def percent(
     silt: Cells,
     divisor: float,
     tolerance: float,
+    digits: float,
     found: tuple[Floats, Floats, Flags],
 ) -> None:
     """Sand and clay [%], scaled to a sum of 100 with `silt` where that is given (not empty), and
-    where they cannot be."""
+    where they cannot be; sums are compared in steps of 1 / `digits`."""
     sands, clays, wrong = found
     for i in range(sand.size):
         a, b = sand[i] / divisor, clay[i] / divisor
@@ -37,11 +35,11 @@ def percent(
         if silt.size:
             c = silt[i] / divisor
             total = a + b + c
-            apart = abs(np.rint((total - 100.0) * _PER_UNIT) / _PER_UNIT)
+            apart = abs(np.rint((total - 100.0) * digits) / digits)
             bad = bad or c < 0.0 or apart > tolerance
             a, b = a * 100.0 / total, b * 100.0 / total
         else:
-            bad = bad or np.rint((a + b) * _PER_UNIT) / _PER_UNIT > 100.0
+            bad = bad or np.rint((a + b) * digits) / digits > 100.0
         sands[i], clays[i], wrong[i] = a, b, bad
 
 

@@ -14,6 +14,9 @@ Whole = NDArray[np.int64]
 Bytes = NDArray[np.uint8]
 Edges = tuple[tuple[float, float, float], tuple[float, float, float]]
 """Of classes of depth and of salinity; a class holds its lower edge."""
+Runs = tuple[Whole, NDArray[Any], Floats, Bytes, int, int]
+"""Start and slot of each run of cells; area and code of each cell; the first code of assessed
+cells, and the first of cells with water at the surface."""
 
 _LANES = 64
 
@@ -38,27 +41,24 @@ def codes(
     for i in range(hazard.size):
         deep = (depth[i] >= depths[0]) + (depth[i] >= depths[1]) + (depth[i] >= depths[2])
         salty = (tds[i] >= salts[0]) + (tds[i] >= salts[1]) + (tds[i] >= salts[2])
-        code[i] = ((hazard[i] * 4 + deep) * 2 + (margin[i] < 0.0)) * 4 + salty
+        above = (hazard[i] * (len(depths) + 1) + deep) * 2 + (margin[i] < 0.0)
+        code[i] = above * (len(salts) + 1) + salty
 
 
 @compiled
 def add(
-    starts: Whole,
-    slots: NDArray[Any],
-    area: Floats,
-    code: Bytes,
-    first_dry: int,
-    first_wet: int,
+    runs: Runs,
     summed: tuple[Floats, Floats, Floats, Floats],
     extras: Floats,
     sums: Floats,
 ) -> None:
-    """Add runs of cells, run k from `starts[k]` on, to row `slots[k]` of `sums`.
+    """Add runs of cells to the rows of `sums` that are their slots.
 
-    Its columns are areas by code, then the sums of `summed` over assessed cells (codes from
-    `first_dry` to before `first_wet`), the third of them over cells with water at the surface,
-    and the sums of `extras` (quantities, cells) over assessed cells.
+    Its columns are areas by code, then the sums of `summed` over assessed cells, the third of them
+    over cells with water at the surface, and the sums of `extras` (quantities, cells) over
+    assessed cells.
     """
+    starts, slots, area, code, first_dry, first_wet = runs
     a, b, c, d = summed
     extra = extras.shape[0]
     column = sums.shape[1] - 5 - extra
@@ -110,12 +110,7 @@ def span(values: Floats, shift: int) -> tuple[int, int]:
 
 @compiled
 def count(
-    starts: Whole,
-    slots: NDArray[Any],
-    area: Floats,
-    code: Bytes,
-    first_dry: int,
-    first_wet: int,
+    runs: Runs,
     values: Floats,
     shift: int,
     per_unit: float,
@@ -126,6 +121,7 @@ def count(
 
     Column 0 of `counts` (slots, bins) is for zero; bin `low` is in column 1.
     """
+    starts, slots, area, code, first_dry, first_wet = runs
     for k in range(starts.size):
         row = counts[slots[k]]
         after = starts[k + 1] if k + 1 < starts.size else area.size

@@ -75,7 +75,13 @@ class FractionCurves:
     suction_m: float
 
     def max_evaporation(self, cells: FractionCells, depth_m: Floats) -> Floats:
-        """Maximum steady evaporation [mm/day] over a rise [m]; NaN where it is."""
+        """Maximum steady evaporation [mm/day] over a rise [m]; NaN where it is.
+
+        Raises
+        ------
+        ArithmeticError
+            No flux was found for some cell.
+        """
         rise = np.maximum(depth_m, SURFACE_DEPTH_M)
         cells = self._within(cells)
         rate = self._guess(cells, rise)
@@ -88,7 +94,8 @@ class FractionCurves:
                 _LEAST_LOG,
                 rate.reshape(-1),
             )
-            assert steps < MOST_STEPS
+            if steps == MOST_STEPS:
+                raise ArithmeticError(f"fractions: no flux found after {steps} steps")
         flux = rate * cells.ks_mm_per_day
         flux[np.isnan(depth_m)] = np.nan
         return flux

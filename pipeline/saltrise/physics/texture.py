@@ -117,7 +117,7 @@ def fractions_in_percent(
     """
     found = (np.empty(sand.size), np.empty(sand.size), np.empty(sand.size, dtype=bool))
     third = np.empty(0) if silt is None else silt.ravel()
-    percent(sand.ravel(), clay.ravel(), third, divisor, _SUM_TOLERANCE, found)
+    percent(sand.ravel(), clay.ravel(), third, divisor, _SUM_TOLERANCE, 10.0**_DIGITS, found)
     shape = sand.shape
     return found[0].reshape(shape), found[1].reshape(shape), found[2].reshape(shape)
 
